@@ -1,8 +1,9 @@
 """Check that imports inside mixbridge run in one direction: ``python tests/layering.py [package directory]``.
 
 A file may import files of an earlier layer of `LAYERS` and files of its own layer, never a later layer; no
-chain of imports leads back to where it began; only ``mixbridge/__init__.py`` sees everything and nobody imports
-it. Imports inside functions and under ``TYPE_CHECKING`` count. The exit status is 1 when something is wrong.
+chain of imports leads back to where it began; only ``mixbridge/__init__.py`` sees everything and nobody
+imports it. Imports inside functions and under ``TYPE_CHECKING`` count. The exit status is 1 when something is
+wrong.
 """
 
 from __future__ import annotations
