@@ -1,0 +1,7 @@
+"""Formula and rows in; validated columns, units, periods and an account of every row out."""
+
+from mixbridge.panel.accounting import Accounting
+from mixbridge.panel.build import build_panel
+from mixbridge.panel.record import Panel
+
+__all__ = ["Accounting", "Panel", "build_panel"]
