@@ -28,14 +28,14 @@ from mixbridge.panel.factors import (
     used_data,
 )
 
-__all__ = ["Attempt", "Reading", "attempt"]
+__all__ = ["Attempt", "Reading", "attempt", "refuse_infinite"]
 
 _CHUNK = 65536
 _CARRIED = 8 * np.finfo(np.float64).eps
 """A spread below this share of the largest value is carried in two or three binary digits at most."""
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Reading:
     """How one factor is to be read.
 
@@ -60,7 +60,7 @@ class Reading:
     by_row: bool
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Attempt:
     """What was learned, and the rows on which a factor is not a number (positions among the rows used)."""
 
@@ -68,7 +68,7 @@ class Attempt:
     bad: tuple[tuple[str, npt.NDArray[np.intp]], ...]
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class _Survey:
     """What one look at the values of a factor shows."""
 
@@ -102,7 +102,7 @@ def attempt(
             if isinstance(value, Coded):
                 unusable = np.flatnonzero(value.codes < 0)
             else:
-                survey = _survey_plain(value, n) if isinstance(value, Plain) else _survey(value, n)
+                survey = _survey_plain(value) if isinstance(value, Plain) else _survey(value, n)
                 unusable = survey.bad
                 complaint = _complaint(reading, survey, labels, is_outcome=reading.factor == outcome)
                 complaints += [] if complaint is None else [complaint]
@@ -134,24 +134,10 @@ def _inner(
 
 
 def _learn(reading: Reading, rows: Rows, n: int, environment: EvalEnvironment) -> Numeric | Coded:
+    """Learn one factor from the rows used: take its column, code it, or evaluate it."""
     factor, columns = reading.factor, reading.columns
     if reading.single is not None:
-        column = columns[reading.single]
-        if reading.coded:
-            first = np.zeros(1, dtype=np.intp) if rows is None else rows[:1]
-            data = {reading.single: column.series.iloc[first]}
-            return code_column(
-                factor.code, column, rows, evaluate(factor, learn(factor, environment, data), data)
-            )
-        if column.kind == "number":
-            return Plain(column, rows)
-        if column.kind == "moment":
-            raise FormulaError(
-                f"{column.name} holds dates or times. Write C({column.name}) for one indicator per date, "
-                f"or make a "
-                "number of it, for example the year."
-            )
-        return code_column(factor.code, column, rows)
+        return _learn_single(reading, columns[reading.single], rows, environment)
     if not reading.by_row:
         data = given_data(columns, rows)
         value = evaluate(factor, learn(factor, environment, data), data)
@@ -167,6 +153,27 @@ def _learn(reading: Reading, rows: Rows, n: int, environment: EvalEnvironment) -
     return Evaluated(factor, state, columns, rows, width)
 
 
+def _learn_single(
+    reading: Reading, column: Column, rows: Rows, environment: EvalEnvironment
+) -> Plain | Coded:
+    """Learn a factor that is a column, or ``C`` of a column."""
+    factor = reading.factor
+    if reading.coded:
+        first = np.zeros(1, dtype=np.intp) if rows is None else rows[:1]
+        data = {column.name: column.series.iloc[first]}
+        return code_column(
+            factor.code, column, rows, evaluate(factor, learn(factor, environment, data), data)
+        )
+    if column.kind == "number":
+        return Plain(column, rows)
+    if column.kind == "moment":
+        raise FormulaError(
+            f"{column.name} holds dates or times. Write C({column.name}) for one indicator per date, or "
+            "make a number of it, for example the year."
+        )
+    return code_column(factor.code, column, rows)
+
+
 def _checked(coded: Coded, factor: EvalFactor, n: int) -> Coded:
     if len(coded.codes) != n:
         raise FormulaError(
@@ -175,22 +182,14 @@ def _checked(coded: Coded, factor: EvalFactor, n: int) -> Coded:
     return coded
 
 
-def _survey_plain(value: Plain, n: int) -> _Survey:
-    """Look at a raw column; missing values are gone already."""
+def _survey_plain(value: Plain) -> _Survey:
+    """Look at a raw column; missing and infinite values are gone already."""
     least, greatest = extremes(value.column, value.rows)
-    nothing = np.empty(0, dtype=np.intp)
-    if math.isfinite(least) and math.isfinite(greatest):
-        return _Survey(nothing, None, float(least), float(greatest), _is_narrow(least, greatest))
-    position = 0
-    for start in range(0, n, _CHUNK):
-        where = np.flatnonzero(np.isinf(value.block(start, min(start + _CHUNK, n))))
-        if len(where):
-            position = start + int(where[0])
-            break
-    return _Survey(nothing, position, float(least), float(greatest), False)
+    narrow = _is_narrow(least, greatest)
+    return _Survey(np.empty(0, dtype=np.intp), None, float(least), float(greatest), narrow)
 
 
-def _survey(value: Evaluated | Stored | Plain, n: int) -> _Survey:
+def _survey(value: Numeric, n: int) -> _Survey:
     """Look at every value of an evaluated factor once."""
     bad: list[npt.NDArray[np.intp]] = []
     infinite: int | None = None
@@ -221,23 +220,30 @@ def _complaint(reading: Reading, survey: _Survey, labels: pd.Index, *, is_outcom
         return _infinite(name, labels[survey.infinite])
     if is_outcome and survey.least == survey.greatest:
         return DataError(
-            f"The outcome {name} has the one value {survey.least:g} in all rows used: there is nothing "
-            f"to explain."
+            f"The outcome {name} has the one value {survey.least:g} in all rows used: there is nothing to "
+            "explain."
         )
     if survey.narrow:
         return DataError(
             f"The values of {name} lie between {survey.least!r} and {survey.greatest!r}: their spread is "
-            f"below what "
-            "double precision carries at that size, so digits are lost already. Subtract an offset "
-            "before the column "
-            "is stored as floating-point numbers."
+            "below what double precision carries at that size, so digits are lost already. Subtract an "
+            "offset before the column is stored as floating-point numbers."
         )
     return None
 
 
+def refuse_infinite(column: Column, rows: Rows, labels: pd.Index) -> None:
+    """Refuse a raw column with an infinite value in a row that has nothing missing."""
+    if column.numbers is None or column.numbers.dtype.kind != "f":
+        return
+    if all(map(math.isfinite, extremes(column, rows))):
+        return
+    values = column.numbers if rows is None else column.numbers[rows]
+    raise _infinite(f"Column {column.name!r}", labels[int(np.flatnonzero(np.isinf(values))[0])])
+
+
 def _infinite(name: str, label: Any) -> DataError:
     return DataError(
-        f"{name} is infinite in the row labelled {label!r}. Correct the value, or set it to missing to "
-        f"have the row "
-        "dropped and counted."
+        f"{name} is infinite in the row labelled {label!r}. Correct the value, or set it to missing to have "
+        "the row dropped and counted."
     )

@@ -13,7 +13,7 @@ from patsy import EvalEnvironment, EvalFactor
 
 from mixbridge.errors import DataError, FormulaError, OptionError
 from mixbridge.panel.accounting import Accounting
-from mixbridge.panel.attempt import Attempt, Reading, attempt
+from mixbridge.panel.attempt import Attempt, Reading, attempt, refuse_infinite
 from mixbridge.panel.categories import Coded
 from mixbridge.panel.columns import Column, Rows, read_column
 from mixbridge.panel.design import lay_out
@@ -111,8 +111,16 @@ def build_panel(
     rows, account = _complete_rows(frame, keys, readings, columns)
     _check_left(account, incomplete_rows)
     labels = frame.index if rows is None else frame.index[rows]
+    for column in columns.values():
+        refuse_infinite(column, rows, labels)
     rows, labels, found, account = _usable_rows(
-        readings, rows, labels, environment, parsed.outcome, account, incomplete_rows
+        readings=readings,
+        rows=rows,
+        labels=labels,
+        environment=environment,
+        outcome=parsed.outcome,
+        account=account,
+        incomplete_rows=incomplete_rows,
     )
     response = found.learned[parsed.outcome]
     if isinstance(response, Coded) or response.width != 1:
@@ -231,6 +239,7 @@ def _check_left(account: Accounting, incomplete_rows: str) -> None:
 
 
 def _usable_rows(
+    *,
     readings: list[Reading],
     rows: Rows,
     labels: pd.Index,
@@ -259,8 +268,7 @@ def _usable_rows(
         _check_left(account, incomplete_rows)
     raise DataError(
         f"After {_MOST_ROUNDS} rounds a term still yields values that are not numbers each time it is "
-        f"learned on the "
-        "rows left: "
+        "learned on the rows left: "
         + ", ".join(name for name, _ in found.bad)
         + ". Compute it as a column of the data first."
     )

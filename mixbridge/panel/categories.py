@@ -17,7 +17,7 @@ __all__ = ["Coded", "code_column", "code_values", "is_categorical"]
 _MOST_LEVELS = 2000
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Coded:
     """A categorical factor.
 
@@ -112,13 +112,27 @@ def _code(name: str, series: pd.Series[Any], explicit: Any, contrast: Any) -> Co
         notes.append(
             f"{name}: all rows used have the one level {present[0]}, so it cannot be told from the constant"
         )
+    if len(present) > 2 and all(isinstance(level, str) and _is_number(level) for level in present):
+        notes.append(
+            f"{name}: its levels are numbers stored as text and were read as categories; if they are "
+            "amounts, convert the column to numbers"
+        )
     if len(present) > _MOST_LEVELS:
         raise DataError(
-            f"{name} has {len(present)} levels, each of them a column. Categories with so many levels "
-            f"are units: name "
-            "them by unit=, or group them. If the values are amounts, convert the column to numbers."
+            f"{name} has {len(present)} levels, each of them a column. Categories with so many levels are "
+            "units: name them by unit=, or group them. If the values are amounts, convert the column to "
+            "numbers."
         )
     return Coded(codes.astype(np.min_scalar_type(-len(present) - 1)), tuple(present), contrast, tuple(notes))
+
+
+def _is_number(text: str) -> bool:
+    """Whether a text can be read as a number."""
+    try:
+        float(text)
+    except ValueError:
+        return False
+    return True
 
 
 def _sorted(levels: list[Any]) -> tuple[npt.NDArray[np.intp], list[Any]]:
@@ -141,8 +155,7 @@ def _to_explicit(
     if strange:
         raise DataError(
             f"{name} lists levels {explicit}, but the rows used also hold "
-            f"{', '.join(map(repr, strange[:5]))}. "
-            "Add them to the list, or drop these rows."
+            f"{', '.join(map(repr, strange[:5]))}. Add them to the list, or drop these rows."
         )
     moves = np.array([place.get(level, -1) for level in present] + [-1], dtype=np.intp)
     return moves[codes], explicit

@@ -44,7 +44,7 @@ def pick(values: npt.NDArray[Any], rows: Rows, start: int, stop: int) -> npt.NDA
     return taken
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Column:
     """One raw column.
 
@@ -141,8 +141,8 @@ def _kind(name: str, series: pd.Series[Any]) -> Kind:  # noqa: PLR0911  (one ret
         if inferred in _OBJECT_KINDS:
             return _OBJECT_KINDS[inferred]
         raise DataError(
-            f"Column {name!r} mixes kinds of values ({inferred}; for example {_examples(series)}). "
-            "Make it all numbers or all text first."
+            f"Column {name!r} mixes kinds of values ({inferred}; for example {_examples(series)}). Make it "
+            "all numbers or all text first."
         )
     if pd.api.types.is_string_dtype(dtype):
         return "text"
@@ -162,7 +162,7 @@ def _examples(series: pd.Series[Any]) -> str:
 
 
 def extremes(column: Column, rows: Rows) -> tuple[float | int, float | int]:
-    """Return least and greatest value over the used rows, exact for integers; NaN or infinity passes through."""
+    """Return least and greatest of the used rows, exact for integers; NaN or infinity passes through."""
     values = column.numbers
     assert values is not None, "only numbers have extremes"
     if rows is None:

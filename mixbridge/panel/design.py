@@ -5,6 +5,7 @@ from __future__ import annotations
 import itertools
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from types import MappingProxyType
 from typing import Any
 
 import numpy as np
@@ -41,7 +42,7 @@ class _Known:
         return np.zeros((1, self.learned.width))
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class _Piece:
     """A factor's part in a column: one of its columns, or a value for each of its levels."""
 
@@ -50,7 +51,7 @@ class _Piece:
     values: npt.NDArray[np.float64] | None
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Design:
     """The right side, ready to be built.
 
@@ -126,7 +127,7 @@ def lay_out(terms: Sequence[Term], learned: Mapping[EvalFactor, Learned], text: 
         )
     return Design(
         tuple(info.column_names),
-        dict(info.term_name_slices),
+        MappingProxyType(dict(info.term_name_slices)),
         constant,
         tuple(learned.values()),
         tuple(recipe),

@@ -28,7 +28,7 @@ __all__ = [
 ]
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Plain:
     """A column that enters as it is."""
 
@@ -41,7 +41,7 @@ class Plain:
         return self.column.floats(self.rows, start, stop)[:, None]
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Evaluated:
     """An expression that works row by row, evaluated for each block anew."""
 
@@ -57,7 +57,7 @@ class Evaluated:
         return as_columns(self.factor, value, stop - start)
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Stored:
     """An expression that may look at other rows: evaluated once on all rows used, and kept."""
 
@@ -147,9 +147,9 @@ def as_columns(factor: EvalFactor, value: Any, rows: int) -> npt.NDArray[np.floa
     if values.ndim != 2 or values.shape[0] != rows:
         found = "one number" if values.ndim == 0 else f"shape {np.asarray(value).shape}"
         raise FormulaError(
-            f"{factor.code} yields {found}; needed is one value for each of the {rows} rows used. A "
-            f"vector from "
-            "outside the data must be a column of the data, so that dropped rows are dropped from it too."
+            f"{factor.code} yields {found}; needed is one value for each of the {rows} rows used. A vector "
+            "from outside the data must be a column of the data, so that dropped rows are dropped from it "
+            "too."
         )
     return values
 

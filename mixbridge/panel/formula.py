@@ -65,9 +65,8 @@ def parse_formula(text: str) -> Formula:
     if len(desc.lhs_termlist) > 1 or len(outcome.factors) != 1:
         written = " and ".join(term.name() for term in desc.lhs_termlist)
         raise FormulaError(
-            f"The formula {text!r} needs one outcome on its left side, not {written}. Fit each outcome "
-            f"in a call "
-            "of its own; for a sum or product write I(a + b)."
+            f"The formula {text!r} needs one outcome on its left side, not {written}. Fit each outcome in a "
+            "call of its own; for a sum or product write I(a + b)."
         )
     if not desc.rhs_termlist:
         raise FormulaError(
@@ -92,9 +91,8 @@ def _refuse_bar(text: str) -> None:
             elif token.string == "|" and not any(inside):
                 raise FormulaError(
                     f"The formula {text!r} has a vertical bar at character {token.start[1] + 1}. The "
-                    f"formula holds "
-                    "the fixed part only; the grouping factor is the named argument unit, for example "
-                    "crosscheck('y ~ x', data, unit='group')."
+                    "formula holds the fixed part only; the grouping factor is the named argument unit, "
+                    "for example crosscheck('y ~ x', data, unit='group')."
                 )
             before = token.string
     except (tokenize.TokenError, SyntaxError):
@@ -108,9 +106,8 @@ def _check_python(factor: EvalFactor, text: str) -> None:
     except (SyntaxError, RecursionError) as error:
         place = factor.origin.caretize(indent=4) if factor.origin is not None else f"    {text}"
         raise FormulaError(
-            f"This part of the formula is not an expression: {factor.code}\n{place}\n"
-            "An operator may be missing; a column whose name is not a plain Python name is written "
-            "Q('its name')."
+            f"This part of the formula is not an expression: {factor.code}\n{place}\nAn operator may be "
+            "missing; a column whose name is not a plain Python name is written Q('its name')."
         ) from error
 
 
@@ -197,7 +194,7 @@ def columns_of(
             if name in available and times > called.count(name):
                 raise FormulaError(
                     f"In {factor.code!r} the name {name!r} is both a function and a column. Rename the "
-                    f"column."
+                    "column."
                 )
         elif name in available:
             found.append(name)

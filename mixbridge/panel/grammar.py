@@ -1,4 +1,4 @@
-"""Which expressions work row by row: the ones a formula from an untrusted place may hold, and may be built in blocks.
+"""Which expressions work row by row, and may come from an untrusted place.
 
 An expression of this grammar has columns, numbers, text to compare with, ``+ - * / **``, one comparison at a
 time,
@@ -17,6 +17,7 @@ from typing import Any
 import numpy as np
 
 from mixbridge.panel.formula import quoted_name
+from mixbridge.panel.standardize import standardize
 
 __all__ = ["ALLOWED", "CODINGS", "ELEMENTWISE", "LEARNING", "NAMESPACE", "violation"]
 
@@ -38,7 +39,7 @@ LEARNING = ("center", "standardize", "scale", "bs", "cr", "cc")
 CODINGS = ("Treatment", "Sum", "Helmert", "Diff", "Poly")
 """Codings of categories, as the second argument of ``C``."""
 
-NAMESPACE: dict[str, Any] = {"np": np, **ELEMENTWISE}
+NAMESPACE: dict[str, Any] = {"np": np, **ELEMENTWISE, "standardize": standardize, "scale": standardize}
 """What a formula can name besides columns and patsy's own functions."""
 
 ALLOWED = ", ".join((*ELEMENTWISE, *LEARNING, "C", "I", "Q", *(f"np.{name}" for name in ELEMENTWISE)))

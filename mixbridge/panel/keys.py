@@ -48,40 +48,42 @@ def encode(name: str, series: pd.Series[Any]) -> tuple[npt.NDArray[np.intp], pd.
         compact = _encode_compact(series.to_numpy())
         if compact is not None:
             return compact[0], pd.Index(compact[1], name=name)
-    codes, keys = pd.factorize(series, sort=True)
-    return codes.astype(np.intp, copy=False), pd.Index(keys, name=name)
+    codes, found = pd.factorize(series, sort=True)
+    keys = pd.Index(found, name=name)
+    plain = getattr(keys.dtype, "numpy_dtype", None)
+    if isinstance(plain, np.dtype) and plain.kind in "iub":  # a nullable type without missing values
+        keys = keys.astype(plain)
+    return codes.astype(np.intp, copy=False), keys
 
 
 def _encode_compact(values: npt.NDArray[Any]) -> tuple[npt.NDArray[np.intp], npt.NDArray[Any]] | None:
     """Assign codes to integers that lie close together by a table, without hashing; None if they do not."""
-    least, greatest = values.min().item(), values.max().item()
-    width = greatest - least + 1
+    wide = values.astype(np.uint64 if values.dtype.kind == "u" else np.int64, copy=False)
+    least, greatest = wide.min(), wide.max()
+    width = greatest.item() - least.item() + 1
     if width > 2 * len(values) + 1024:
         return None
-    shifted = (values - values.dtype.type(least)).astype(np.intp)
+    shifted = (wide - least).astype(np.intp, copy=False)
     present = np.zeros(width, dtype=bool)
     present[shifted] = True
-    return (np.cumsum(present) - 1)[shifted], np.flatnonzero(present).astype(
-        values.dtype
-    ) + values.dtype.type(least)
+    keys = (np.flatnonzero(present).astype(wide.dtype) + least).astype(values.dtype)
+    return (np.cumsum(present) - 1)[shifted], keys
 
 
 def whole_numbers(name: str, values: npt.NDArray[np.float64]) -> npt.NDArray[np.int64]:
-    """Turn floats that are whole numbers into integers; refuse others and those too large to be told apart."""
+    """Turn floats that are whole numbers into integers; refuse others and those too large."""
     if not np.isfinite(values).all():
         raise DataError(f"Column {name!r} holds infinite keys.")
     odd = np.flatnonzero(values != np.rint(values))
     if len(odd):
         raise DataError(
-            f"Column {name!r} holds keys with fractions, for example {values[odd[0]].item()!r}. A "
-            f"rounding error would make "
-            "a new key; turn them into integers or text first."
+            f"Column {name!r} holds keys with fractions, for example {values[odd[0]].item()!r}. A rounding "
+            "error would make a new key; turn them into integers or text first."
         )
     if np.abs(values).max(initial=0.0) > _LARGEST_WHOLE_DOUBLE:
         raise DataError(
-            f"Column {name!r} holds keys above 2^53 as floats, which cannot tell neighbouring whole "
-            f"numbers apart. "
-            "Read the column as integers or text, so that keys are not merged."
+            f"Column {name!r} holds keys above 2^53 as floats, which cannot tell neighbouring whole numbers "
+            "apart. Read the column as integers or text, so that keys are not merged."
         )
     return values.astype(np.int64)
 
@@ -126,8 +128,7 @@ def _refuse_lookalikes(name: str, keys: list[Any]) -> None:
     if twin is not None:
         raise DataError(
             f"Column {name!r} holds both {twin!r} and {str(twin)!r}: one unit or two? Store all keys as "
-            f"text or all as "
-            "numbers."
+            "text or all as numbers."
         )
 
 

@@ -18,7 +18,9 @@ three digits leaves 1e-2 and is not equally spaced."""
 _LARGEST = 2**62  # differences of such ordinals still fit in 64 bits
 
 
-def ordinals(name: str, keys: pd.Index, ordered: bool = False) -> Read:
+def ordinals(  # noqa: PLR0911  (one return per kind reads best)
+    name: str, keys: pd.Index, ordered: bool = False
+) -> Read:
     """Place distinct periods on an equally spaced scale.
 
     Parameters
@@ -57,8 +59,8 @@ def ordinals(name: str, keys: pd.Index, ordered: bool = False) -> Read:
         return _fractions(name, keys.to_numpy().astype("timedelta64[ns]").astype(np.float64))
     return None, (
         f"{name}: no order, because its values are "
-        f"{'categories without an order' if ordered is None else 'text'} or mixed; "
-        "what needs consecutive periods is left out. Use integers, dates or an ordered categorical"
+        f"{'categories without an order' if ordered is None else 'text'} or mixed; what needs consecutive "
+        "periods is left out. Use integers, dates or an ordered categorical"
     )
 
 

@@ -65,10 +65,8 @@ def _refuse(reason: str | None, factor: EvalFactor) -> None:
     if reason is not None:
         raise FormulaError(
             f"{factor.code} is not accepted here: {reason}. A formula from the command line or another "
-            f"untrusted "
-            "place may use columns, numbers, text to compare with, + - * / ** and one comparison at a "
-            "time, and "
-            f"these transforms: {ALLOWED}."
+            "untrusted place may use columns, numbers, text to compare with, + - * / ** and one comparison "
+            f"at a time, and these transforms: {ALLOWED}."
         )
 
 

@@ -17,9 +17,12 @@ from mixbridge.panel.factors import Numeric
 __all__ = ["Panel"]
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, eq=False)
 class Panel:
     """The rows used, their units and periods, and the recipe of their design columns.
+
+    Blocks are read from the data when they are asked for; data changed in place in between would be
+    read as changed (pandas prevents that for frames from version 3 on).
 
     Parameters
     ----------

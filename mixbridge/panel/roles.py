@@ -44,8 +44,7 @@ def units_of(name: str, series: pd.Series[Any]) -> tuple[npt.NDArray[np.intp], p
     if len(keys) == 1:
         raise DataError(
             f"All {len(codes)} rows used belong to one unit ({name} = {keys[0]!r}): a variance between "
-            f"units is not "
-            "defined. Check that unit= names the grouping column."
+            "units is not defined. Check that unit= names the grouping column."
         )
     return codes, keys
 
@@ -90,16 +89,14 @@ def periods_of(
         pairs = list(dict.fromkeys((unit_keys[units[row]], keys[codes[row]]) for row in repeats[:50]))
         shown = ", ".join(f"({unit_name} {unit}, {name} {period})" for unit, period in pairs[:3])
         raise DataError(
-            f"{len(repeats)} rows repeat a pair of unit and period, for example {shown}. Aggregate them "
-            f"to one row per "
-            "pair, correct the keys, or leave period out if rows within a unit have no order."
+            f"{len(repeats)} rows repeat a pair of unit and period, for example {shown}. Aggregate them to "
+            "one row per pair, correct the keys, or leave period out if rows within a unit have no order."
         )
     if isinstance(series.dtype, pd.CategoricalDtype):
         if not ordered:
             return None, (
-                f"{name}: no order, because its categories are not ordered; what needs consecutive "
-                f"periods is left out. "
-                "Use an ordered categorical, integers or dates"
+                f"{name}: no order, because its categories are not ordered; what needs consecutive periods "
+                "is left out. Use an ordered categorical, integers or dates"
             )
         positions, note = ordinals(name, keys, ordered=True)
     else:

@@ -1,7 +1,8 @@
-"""Anything that hands over an Arrow stream as a source; pyarrow is imported only here and for Parquet files."""
+"""Anything that hands over an Arrow stream as a source; pyarrow is imported here and nowhere else."""
 
 from __future__ import annotations
 
+import importlib
 from collections.abc import Sequence
 from typing import Any
 
@@ -12,21 +13,22 @@ from mixbridge.errors import DataError
 __all__ = ["ArrowSource", "import_pyarrow", "to_pandas"]
 
 
-def import_pyarrow(what: str) -> Any:
+def import_pyarrow(what: str, module: str = "pyarrow") -> Any:
     """Import pyarrow, or say which extra brings it.
 
     Parameters
     ----------
     what : str
         What needs it, for the message.
+    module : str
+        The module of the package.
     """
     try:
-        import pyarrow
+        return importlib.import_module(module)
     except ImportError as error:
         raise DataError(
             f"{what} needs the package pyarrow, which is not installed: pip install 'mixbridge[sources]'."
         ) from error
-    return pyarrow
 
 
 def to_pandas(table: Any) -> pd.DataFrame:
@@ -98,8 +100,7 @@ class ArrowSource:
         except pa.ArrowException as error:
             raise DataError(
                 f"The Arrow stream broke off or was read before: {error}. A one-shot stream can be read "
-                f"once; "
-                "hand over a table, or make the stream again."
+                "once; hand over a table, or make the stream again."
             ) from error
         fields = [self._reader.schema.field(name) for name in wanted]
         return to_pandas(pa.Table.from_batches(batches, schema=pa.schema(fields)))

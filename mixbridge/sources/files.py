@@ -4,10 +4,12 @@ from __future__ import annotations
 
 import csv
 import os
+import warnings
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
+import numpy as np
 import pandas as pd
 
 from mixbridge.errors import DataError
@@ -17,11 +19,12 @@ __all__ = ["CsvSource", "ParquetSource", "read_table"]
 
 _INTEGER = r"-?(?:0|[1-9]\d*)"
 _INTEGER_OR_WHOLE = r"-?(?:0|[1-9]\d*)(?:\.0*)?"
+_DECIMAL = r"-?(?:0|[1-9]\d*)(?:\.\d+)?"
 _ISO_DATE = r"\d{4}-\d{2}(?:-\d{2}(?:[T ].*)?)?"
 _LARGEST = 18  # every integer of so many digits fits in 64 bits
 
 
-def read_key(text: pd.Series) -> pd.Series:
+def read_key(text: pd.Series, *, fractions: bool) -> pd.Series:
     """Turn a key read as text into integers or dates where that changes no key, else leave it text.
 
     ``007`` and ``7`` are two keys, so a column with either stays text; whole numbers of any length never pass
@@ -31,6 +34,8 @@ def read_key(text: pd.Series) -> pd.Series:
     ----------
     text : pandas.Series
         Text with missing values.
+    fractions : bool
+        Whether decimal fractions become floats: they do as periods, where they have an order, but not as units.
     """
     present = text.dropna()
     if present.empty:
@@ -41,6 +46,9 @@ def read_key(text: pd.Series) -> pd.Series:
             if present.str.len().max() <= _LARGEST and not (digits == "-0").any():
                 return digits.astype("Int64")
             return text
+    if fractions and present.str.fullmatch(_DECIMAL).all():
+        numbers = text.astype(np.float64)
+        return numbers if numbers.nunique() == present.nunique() else text
     if present.str.fullmatch(_ISO_DATE).all():
         dates = pd.to_datetime(text, format="ISO8601", errors="coerce")
         if dates.isna().sum() == text.isna().sum() and dates.nunique() == present.nunique():
@@ -77,18 +85,27 @@ class CsvSource:
         return ()
 
     def frame(self, columns: Sequence[str], keys: Sequence[str] = ()) -> pd.DataFrame:
-        """Read the columns; keys are read as text first, see `read_key`."""
+        """Read the columns; keys are read as text first, see `read_key`.
+
+        All columns are parsed, since only then are lines with too many fields noticed.
+        """
         try:
-            data = pd.read_csv(
-                self.path,
-                sep=self.separator,
-                usecols=list(columns),
-                dtype={key: "str" for key in keys},
-                encoding="utf-8-sig",
-            )
-        except (pd.errors.ParserError, UnicodeDecodeError, ValueError) as error:
+            with warnings.catch_warnings():
+                warnings.simplefilter(
+                    "error", pd.errors.ParserWarning
+                )  # fields beyond the header are not cut off
+                data = pd.read_csv(
+                    self.path,
+                    sep=self.separator,
+                    index_col=False,
+                    dtype=dict.fromkeys(keys, "str"),
+                    encoding="utf-8-sig",
+                    low_memory=False,
+                )
+        except (pd.errors.ParserError, pd.errors.ParserWarning, UnicodeDecodeError, ValueError) as error:
             raise DataError(f"{self.path} cannot be read as a table: {error}") from error
-        return data.assign(**{key: read_key(data[key]) for key in keys})[list(columns)]
+        read = {key: read_key(data[key], fractions=place > 0) for place, key in enumerate(keys)}
+        return data[list(columns)].assign(**read)
 
 
 @dataclass(frozen=True, slots=True)
@@ -119,10 +136,10 @@ class ParquetSource:
     def frame(self, columns: Sequence[str], keys: Sequence[str] = ()) -> pd.DataFrame:
         """Read the columns."""
         pa = import_pyarrow("A Parquet file")
-        import pyarrow.parquet
+        parquet = import_pyarrow("A Parquet file", "pyarrow.parquet")
 
         try:
-            with pyarrow.parquet.ParquetFile(self.path) as file:
+            with parquet.ParquetFile(self.path) as file:
                 return to_pandas(file.read(columns=list(columns)).select(list(columns)))
         except (pa.ArrowException, OSError) as error:
             raise DataError(f"{self.path} cannot be read as a Parquet file: {error}") from error
@@ -147,10 +164,10 @@ def read_table(path: str | os.PathLike[str]) -> CsvSource | ParquetSource:
         raise DataError(f"There is no file {place}." + (" It is a folder." if place.is_dir() else ""))
     if place.suffix.lower() in (".parquet", ".pq"):
         pa = import_pyarrow("A Parquet file")
-        import pyarrow.parquet
+        parquet = import_pyarrow("A Parquet file", "pyarrow.parquet")
 
         try:
-            with pyarrow.parquet.ParquetFile(place) as file:
+            with parquet.ParquetFile(place) as file:
                 return ParquetSource(place, tuple(file.schema_arrow.names))
         except (pa.ArrowException, OSError) as error:
             raise DataError(f"{place} cannot be read as a Parquet file: {error}") from error

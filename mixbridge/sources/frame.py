@@ -25,11 +25,11 @@ class FrameSource:
     data: pd.DataFrame
 
     def __post_init__(self) -> None:
+        """Refuse names of several levels."""
         if self.data.columns.nlevels > 1:
             raise DataError(
-                f"The frame has column names of {self.data.columns.nlevels} levels; a formula needs "
-                f"plain names. "
-                "Flatten them first, for example data.columns = ['_'.join(map(str, c)) for c in "
+                f"The frame has column names of {self.data.columns.nlevels} levels; a formula needs plain "
+                "names. Flatten them first, for example data.columns = ['_'.join(map(str, c)) for c in "
                 "data.columns]."
             )
 

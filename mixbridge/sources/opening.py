@@ -32,7 +32,6 @@ def open_source(data: object) -> Source:
     if hasattr(data, "__arrow_c_stream__"):
         return ArrowSource(data)
     raise DataError(
-        f"data is a {type(data).__name__}; needed is a pandas DataFrame, an object with an Arrow stream, "
-        f"or the "
-        "path of a CSV or Parquet file. A dict of columns becomes a frame by pandas.DataFrame(data)."
+        f"data is a {type(data).__name__}; needed is a pandas DataFrame, an object with an Arrow stream, or "
+        "the path of a CSV or Parquet file. A dict of columns becomes a frame by pandas.DataFrame(data)."
     )

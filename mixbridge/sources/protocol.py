@@ -35,6 +35,7 @@ class Source(Protocol):
         columns : sequence of str
             Names among `names`, each once.
         keys : sequence of str
-            Those of `columns` that identify units or periods: read so that no two different keys become one.
+            Those of `columns` that identify the unit and then the period: read so that no two different keys
+            become one.
         """
         ...
