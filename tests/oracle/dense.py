@@ -60,7 +60,7 @@ class Dense:
     def constant_in_units(self) -> np.ndarray:
         """Mark columns equal to one stored number in every unit (exact comparison)."""
         first = self.X[[np.flatnonzero(self.Z[:, i])[0] for i in range(self.N)]]
-        return np.all(self.X == self.Z @ first, axis=0)
+        return np.all(self.Z @ first == self.X, axis=0)
 
     @cached_property
     def QX(self) -> np.ndarray:
@@ -98,9 +98,9 @@ class Dense:
 
     @cached_property
     def unit_constant_part(self) -> np.ndarray:
-        """n x (p - K_w): X g for a basis of the g with QXg = 0. Spans all unit-constant vectors in the columns of X.
+        """X g for a basis of the g with QXg = 0: spans all unit-constant vectors in the column space of X.
 
-        These are not always *columns* of X: with columns x and x + c, c constant within units, c is one of them.
+        These are not always *columns* of X: with x and x + c, c constant within units, c is one of them.
         """
         return self.P @ self.X @ self.within.null
 
@@ -116,7 +116,7 @@ class Dense:
     @cached_property
     def remainder(self) -> np.ndarray:
         """I - X (X'QX)^- X'Q: y to y - X b_w, for one choice of the g-inverse."""
-        return self.identity - self.X @ self.within.inverse @ self.QX.T
+        return self.identity - self.X @ self.within.left
 
     @property
     def K(self) -> int:
@@ -139,7 +139,7 @@ class Dense:
         return idiosyncratic * self.identity + unit * self.ZZ
 
     def inverse_root(self, psi: np.floating) -> np.ndarray:
-        """Return (I + psi ZZ')^(-1/2) = Q + P diag((1 + T psi)^(-1/2)): quasi-demeaning, one weight per unit."""
+        """Return (I + psi ZZ')^(-1/2) = Q + P diag((1 + T psi)^(-1/2)): quasi-demeaning, by unit."""
         size = self.Z @ self.sizes
         return self.Q + self.P / np.sqrt(1 + size * psi)[:, None]
 

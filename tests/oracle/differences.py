@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from dataclasses import dataclass
 
 import numpy as np
@@ -38,7 +39,7 @@ def oracle_first_difference(
     for unit in np.unique(units):
         rows = np.flatnonzero(units == unit)
         rows = rows[np.argsort(periods[rows])]
-        pairs += list(zip(rows[:-1], rows[1:], strict=True))
+        pairs += itertools.pairwise(rows)
     if not pairs:
         raise ValueError("no unit has two periods")
     gaps = np.array([periods[b] - periods[a] for a, b in pairs])

@@ -39,9 +39,10 @@ class OracleFit:
     Orders: `q` and the rows of `expectation` by form; columns of `expectation` (idiosyncratic, unit);
     `component_cov` rows and columns (unit, idiosyncratic); `to_components` maps q to (unit, idiosyncratic).
     `expectation` is always the literal (tr A, tr AZZ'), also where the route divides by something else.
-    `pooled` has psi 0 and unit variance 0 by definition, `within` psi inf and unit variance nan; `between` has
-    neither. There `scale` is what the covariance is multiplied with; its sampling variance stands at [1, 1] of
-    `component_cov` for `pooled` and `within`.
+    `pooled` has psi 0 and unit variance 0 by definition, `within` psi inf and unit variance nan; `between`
+    has neither. There `scale` multiplies the covariance; its sampling variance stands at [1, 1]
+    of `component_cov` for `pooled` and `within`. `within` without a column that varies has no coefficient
+    (not estimable) and still its variance.
     """
 
     beta: np.ndarray
@@ -107,12 +108,13 @@ def _one_form(
     **known: object,
 ) -> OracleFit:
     """Least squares with its residual form over df as the scale."""
-    if columns.rank == 0:
-        return _blank(panel, status=NOT_ESTIMABLE, reason="no column varies")
     q = ((factor @ panel.y) ** 2).sum()
     scale = q / df if df >= 1 else panel.X.dtype.type("nan")
     beta, cov = _reported(moved, coefficients(F, f, columns), columns.inverse, scale, columns)
     reason = "" if df >= 1 else f"degrees of freedom {df}"
+    if columns.rank == 0:
+        known = {**known, "status": NOT_ESTIMABLE}
+        reason = "no column varies"
     return _blank(
         panel,
         beta=beta,
@@ -165,11 +167,9 @@ def _off_curve(panel: Dense, moved: Shifted, route: str, k: Degrees, between: st
 def component_covariance(
     panel: Dense, first: FirstStage, idiosyncratic: np.floating, unit: np.floating
 ) -> np.ndarray:
-    """Return L (2 tr(A_i V A_j V)) L' at the given components."""
+    """Return L (2 tr(A_i V A_j V)) L'; the trace is the sum of squares of F_i V F_j'."""
     V = panel.V(idiosyncratic, unit)
-    forms = [F.T @ F for F in first.factors]
-    half = [A @ V for A in forms]
-    cov_q = np.array([[2 * (a * b.T).sum() for b in half] for a in half], dtype=panel.X.dtype)
+    cov_q = np.array([[2 * ((a @ V @ b.T) ** 2).sum() for b in first.factors] for a in first.factors])
     return first.to_components @ cov_q @ first.to_components.T
 
 

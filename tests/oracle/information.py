@@ -1,4 +1,4 @@
-"""Expected information of (unit variance, idiosyncratic variance) by literal traces, and the REML equations."""
+"""Expected information of the variance components by literal traces, and the REML equations."""
 
 from __future__ import annotations
 
@@ -31,7 +31,8 @@ def information_covariance(
     """Return the inverse expected information, order (unit, idiosyncratic).
 
     ML: I_ij = tr(V^-1 V_i V^-1 V_j) / 2; the block with beta is zero, so profiling beta out changes nothing.
-    REML: the same with R = V^-1 - V^-1 X (X'V^-1 X)^+ X'V^-1 in place of V^-1. V_unit = ZZ', V_idiosyncratic = I.
+    REML: the same with R = V^-1 - V^-1 X (X'V^-1 X)^+ X'V^-1 in place of V^-1.
+    V_unit = ZZ', V_idiosyncratic = I.
     """
     panel, _ = dense_panel(X, y, units, exact=exact)
     R = _sensitivities(panel, unit_variance, idiosyncratic_variance, kind)

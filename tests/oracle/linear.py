@@ -1,9 +1,9 @@
 """Rank-revealing least squares by orthogonalisation, in whatever float type the arrays have.
 
-NumPy's factorisations stop at double precision. The oracle must carry more digits than what it checks, so the one
-factorisation it needs is written out here: Gram-Schmidt with column pivoting, every step orthogonalised twice
-("twice is enough": Giraud, Langou & Rozloznik 2005), which keeps the basis orthogonal to working precision for any
-condition of the columns. Columns are scaled to unit length first, so a tolerance is relative to a column's length.
+NumPy's factorisations stop at double precision. The oracle must carry more digits than what it checks, so
+the one factorisation it needs is written out here: Gram-Schmidt with column pivoting, every step done twice
+("twice is enough": Giraud, Langou & Rozloznik 2005), which keeps the basis orthogonal to working precision
+for any condition of the columns. Columns are scaled to unit length first: tolerances are relative.
 """
 
 from __future__ import annotations
@@ -12,8 +12,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-#: A column whose remainder is shorter than this share of its length is taken to be dependent. The test panels hold
-#: near dependencies down to 1e-5; rounding of stored doubles makes exact ones come out below 1e-12.
+#: A column whose remainder is shorter than this share of its length is taken to be dependent. The test panels
+#: hold near dependencies down to 1e-5; rounding of stored doubles makes exact ones come out below 1e-12.
 DEPENDENT = 1e-10
 
 #: A column shorter than this share of the column it came from (by a projection) is taken to be zero.
@@ -25,6 +25,7 @@ class Columns:
     """Columns factorised: an orthonormal basis, a basic inverse of the cross-product, the null space."""
 
     basis: np.ndarray  # n x r, orthonormal
+    left: np.ndarray  # p x n, F @ left @ F = F: takes f to coefficients, zero outside the pivots
     inverse: np.ndarray  # p x p, symmetric g-inverse of F'F, zero outside the pivots
     null: np.ndarray  # p x (p - r), F @ null = 0
     pivots: tuple[int, ...]
@@ -40,7 +41,7 @@ class Columns:
 
     @property
     def estimable(self) -> np.ndarray:
-        """Coefficients fixed by the columns: e_j in the row space, that is, row j of the null space is zero."""
+        """Coefficients fixed by the columns: e_j in the row space, so row j of the null space is zero."""
         return not_in_null(self.null, self.scale)
 
 
@@ -87,6 +88,8 @@ def factorise(F: np.ndarray, reference: np.ndarray | None = None) -> Columns:
     R = basis.T @ G
     r = len(pivots)
     root = upper_inverse(R[:, pivots])
+    left = np.zeros((p, n), dtype=F.dtype)
+    left[pivots] = (root @ basis.T) / scale[pivots][:, None]  # not inverse @ F', which squares the condition
     inverse = np.zeros((p, p), dtype=F.dtype)
     inverse[np.ix_(pivots, pivots)] = root @ root.T / np.outer(scale[pivots], scale[pivots])
     others = [j for j in range(p) if j not in pivots]
@@ -94,7 +97,7 @@ def factorise(F: np.ndarray, reference: np.ndarray | None = None) -> Columns:
     for k, j in enumerate(others):
         null[pivots, k] = -(root @ R[:, j])
         null[j, k] = 1
-    return Columns(basis, inverse, null / scale[:, None], tuple(pivots), scale)
+    return Columns(basis, left, inverse, null / scale[:, None], tuple(pivots), scale)
 
 
 def upper_inverse(R: np.ndarray) -> np.ndarray:
@@ -112,9 +115,7 @@ def coefficients(F: np.ndarray, f: np.ndarray, columns: Columns) -> np.ndarray:
     """Return least-squares coefficients with zeros outside the pivots, one step of refinement included."""
     solution = np.zeros(F.shape[1], dtype=F.dtype)
     for _ in range(2):
-        residual = f - F @ solution
-        residual = columns.basis @ (columns.basis.T @ residual)
-        solution = solution + columns.inverse @ (F.T @ residual)
+        solution = solution + columns.left @ (f - F @ solution)
     return solution
 
 

@@ -1,7 +1,7 @@
 """First stage of each route: the quadratic forms and the linear map from them to the variance components.
 
-Every form is y'Ay with A = F'F and F written out; q is |Fy|^2. `used` are the expectations the route solves with,
-rows by form, columns (idiosyncratic, unit); a route that divides by something else states its map itself. Maps are
+Every form is y'Ay with A = F'F and F written out; q is |Fy|^2. `used` are the expectations the route solves
+with, rows by form, columns (idiosyncratic, unit); a route with other divisors states its map itself. Maps are
 2 x 2 with rows (unit variance, idiosyncratic variance).
 """
 
@@ -49,9 +49,8 @@ def degrees(panel: Dense, count: str) -> Degrees:
 
 
 def literal_expectation(panel: Dense, factor: np.ndarray) -> tuple[np.floating, np.floating]:
-    """Return (tr A, tr AZZ') for A = F'F."""
-    A = factor.T @ factor
-    return np.trace(A), np.trace(A @ panel.ZZ)
+    """Return (tr A, tr AZZ') for A = F'F, as the sums of squares of F and of FZ: nothing cancels."""
+    return (factor**2).sum(), ((factor @ panel.Z) ** 2).sum()
 
 
 def from_expectations(used: np.ndarray) -> np.ndarray | None:
@@ -103,7 +102,7 @@ def swamy_arora(panel: Dense, k: Degrees, between: str) -> FirstStage:
 
 
 def remainder_form(panel: Dense) -> np.ndarray:
-    """(P - P_S) (I - X (X'QX)^+ X'Q): unit remainders, unit-constant part of X regressed out, size-weighted."""
+    """(P - P_S)(I - X (X'QX)^+ X'Q): unit remainders, unit-constant part of X regressed out by size."""
     return (panel.P - panel.unit_constant.projector) @ panel.remainder
 
 
@@ -146,7 +145,7 @@ def wallace_hussain(panel: Dense, k: Degrees, expectation: str) -> FirstStage:
 
 
 def nerlove(panel: Dense, k: Degrees, divisor: str) -> FirstStage:
-    """Within RSS over n; sample variance of unit intercepts, unit-constant part of X regressed out unweighted."""
+    """Within RSS over n; sample variance of unit intercepts, unit-constant part of X out, unweighted."""
     if reason := needs_within(panel, Degrees(panel.K, panel.K_w, panel.K_p)):
         return none(reason)
     one = panel.X.dtype.type(1)

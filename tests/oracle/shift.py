@@ -1,8 +1,8 @@
 """Move columns near zero before the dense algebra, and map the coefficients back.
 
-With a constant column in X, adding constants to y and to other columns moves the intercept and nothing else. The
-shift of a column is a multiple of a power of two no larger than its range, so subtracting it is exact or rounds in
-the last place of the difference, and the range, not the offset, sets the rounding error of everything after.
+With a constant column in X, adding constants to y and to other columns moves the intercept and nothing else.
+The shift of a column is a multiple of a power of two no larger than its range, so subtracting it is exact or
+rounds in the last place of the difference, and the range, not the offset, sets the rounding error after it.
 """
 
 from __future__ import annotations
@@ -53,7 +53,7 @@ def shift_of(column: np.ndarray) -> float:
 
 def shifted(X: np.ndarray, y: np.ndarray, exact: bool) -> Shifted:
     """Return the panel in long double and near zero (`exact`), or as it is in double."""
-    n, p = X.shape
+    p = X.shape[1]
     kind = np.longdouble if exact else np.float64
     X, y = np.asarray(X, dtype=np.float64).astype(kind), np.asarray(y, dtype=np.float64).astype(kind)
     back, offset = np.eye(p, dtype=kind), np.zeros(p, dtype=kind)
