@@ -1,0 +1,23 @@
+"""Moments of a panel: what is left of the rows once they have been read."""
+
+from mixbridge.moments.closed import Moments, close, collect
+from mixbridge.moments.factors import factor_from_rows, stack_factors
+from mixbridge.moments.columns import Span, column_table, dependency_text, noise, span_of
+from mixbridge.moments.opened import Block, OpenMoments, gather, within_factor
+
+__all__ = [
+    "Block",
+    "Moments",
+    "OpenMoments",
+    "Span",
+    "close",
+    "column_table",
+    "collect",
+    "dependency_text",
+    "factor_from_rows",
+    "gather",
+    "noise",
+    "span_of",
+    "stack_factors",
+    "within_factor",
+]

@@ -1,0 +1,292 @@
+"""`Moments`: one within factor and one between factor per distinct unit size; all that the routes need."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pandas as pd
+from numpy.typing import ArrayLike, NDArray
+
+from mixbridge.errors import DataError
+from mixbridge.moments.factors import eigen_factor, factor_from_products, factor_from_rows, stack_factors
+from mixbridge.moments.opened import Block, OpenMoments, gather, within_factor
+
+__all__ = ["Moments", "close", "collect"]
+
+FloatArray = NDArray[np.float64]
+BLOCK_ROWS = 8192
+LOSS_LIMIT = 1e4
+"""Amplified rounding above which the within products are taken again from unit-centred rows."""
+
+
+@dataclass(frozen=True, slots=True)
+class Moments:
+    """Closed moments: what every route but ``first_difference`` is computed from.
+
+    ``z`` holds the design columns without an explicit constant, then the outcome; scaled, ``(z - shift) / scale``.
+
+    Attributes
+    ----------
+    design : tuple of str
+        Names of the design columns in the order of the formula, an explicit constant included.
+    constant : str or None
+        Name of the explicit constant column, if there is one.
+    outcome : str
+        Name of the outcome.
+    shift, scale : ndarray of shape (k,)
+        Origin and unit of each entry of z (scale: a power of two near its standard deviation).
+    magnitude : ndarray of shape (k,)
+        Largest absolute unit mean, in the units of z; bounds the rounding of the stored data.
+    sizes : ndarray of int, shape (G,)
+        Distinct unit sizes T, increasing.
+    counts : ndarray of int, shape (G,)
+        Number of units m_T of each size.
+    within : ndarray of shape (k, k)
+        F with ``F'F = W`` of the scaled z.
+    between : ndarray of shape (G, k + 1, k + 1)
+        Per size F_T with ``F_T'F_T = B_T = sum zbar zbar'`` of ``(1, scaled z)``.
+    note : str
+        How the within factor was obtained.
+    """
+
+    design: tuple[str, ...]
+    constant: str | None
+    outcome: str
+    shift: FloatArray
+    scale: FloatArray
+    magnitude: FloatArray
+    sizes: NDArray[np.int64]
+    counts: NDArray[np.int64]
+    within: FloatArray
+    between: FloatArray
+    note: str
+
+    @property
+    def rows(self) -> int:
+        """Number of rows n."""
+        return int((self.sizes * self.counts).sum())
+
+    @property
+    def units(self) -> int:
+        """Number of units N."""
+        return int(self.counts.sum())
+
+    @property
+    def columns(self) -> tuple[str, ...]:
+        """Names of the entries of z."""
+        return (*(name for name in self.design if name != self.constant), self.outcome)
+
+    @classmethod
+    def from_arrays(
+        cls, x: ArrayLike, y: ArrayLike, codes: ArrayLike, names: Sequence[str] | None = None, outcome: str = "y"
+    ) -> Moments:
+        """Take closed moments from arrays in memory.
+
+        Parameters
+        ----------
+        x : array_like of shape (n, p)
+            Design columns; a column of equal values is the constant.
+        y : array_like of shape (n,)
+            Outcome.
+        codes : array_like of int, shape (n,)
+            Unit codes, small non-negative integers, in any order.
+        names : sequence of str, optional
+            Names of the design columns, ``x0, x1, ...`` unless given.
+        outcome : str
+            Name of the outcome.
+
+        Returns
+        -------
+        Moments
+        """
+        rows, response = np.asarray(x, dtype=float), np.asarray(y, dtype=float)
+        unit = np.asarray(codes)
+        if rows.ndim != 2 or response.shape != (rows.shape[0],) or unit.shape != response.shape:
+            raise DataError(f"x {rows.shape}, y {response.shape} and codes {unit.shape} do not describe the same rows.")
+        if unit.size == 0 or not np.issubdtype(unit.dtype, np.integer) or unit.min() < 0:
+            raise DataError("codes must be non-negative integers, one per row, at least one row.")
+        unit = unit.astype(np.intp, copy=False)
+        labels = tuple(names) if names is not None else tuple(f"x{j}" for j in range(rows.shape[1]))
+
+        def blocks() -> Any:
+            for start in range(0, unit.size, BLOCK_ROWS):
+                stop = start + BLOCK_ROWS
+                yield unit[start:stop], rows[start:stop], response[start:stop]
+
+        keys = pd.RangeIndex(int(unit.max()) + 1)
+        return collect(blocks, (*labels, outcome), keys)[1]
+
+    def without_sizes(self, *sizes: int) -> Moments:
+        """Leave out every unit of the given sizes (one-row units: ``without_sizes(1)``)."""
+        keep = ~np.isin(self.sizes, sizes)
+        if not keep.any():
+            raise DataError(f"no unit is left without the sizes {sorted(sizes)}.")
+        return _replace(self, sizes=self.sizes[keep], counts=self.counts[keep], between=self.between[keep])
+
+    def __add__(self, other: Moments) -> Moments:
+        """Pool with moments of other units (a unit must not be in both: closed moments hold no keys to check it)."""
+        if (self.design, self.constant, self.outcome) != (other.design, other.constant, other.outcome):
+            raise DataError(
+                "moments of different designs cannot be pooled: "
+                f"{list(self.design)} -> {self.outcome!r} against {list(other.design)} -> {other.outcome!r}."
+            )
+        ratio = other.scale / self.scale
+        move = np.diag(np.concatenate([[1.0], ratio]))
+        move[0, 1:] = (other.shift - self.shift) / self.scale
+        parts: dict[int, list[tuple[int, FloatArray]]] = {}
+        for size, count, factor in zip(self.sizes, self.counts, self.between, strict=True):
+            parts.setdefault(int(size), []).append((int(count), factor))
+        for size, count, factor in zip(other.sizes, other.counts, other.between @ move, strict=True):
+            parts.setdefault(int(size), []).append((int(count), factor))
+        sizes = sorted(parts)
+        return _replace(
+            self,
+            magnitude=np.maximum(self.magnitude, other.magnitude),
+            sizes=np.array(sizes),
+            counts=np.array([sum(count for count, _ in parts[size]) for size in sizes]),
+            within=stack_factors(self.within, other.within * ratio),
+            between=np.array([stack_factors(*(factor for _, factor in parts[size])) for size in sizes]),
+            note="pooled from parts",
+        )
+
+    def to_record(self) -> dict[str, Any]:
+        """Return the moments as plain lists and numbers, with a checksum over all of them."""
+        body: dict[str, Any] = {"format": "mixbridge-moments", "version": 1}
+        for name in self.__slots__:
+            value = getattr(self, name)
+            body[name] = value.tolist() if isinstance(value, np.ndarray) else value
+        body["design"] = list(self.design)
+        return {**body, "checksum": _checksum(body)}
+
+    @classmethod
+    def from_record(cls, record: dict[str, Any]) -> Moments:
+        """Rebuild moments from `to_record`; refuses a record whose checksum does not fit."""
+        body = {key: value for key, value in record.items() if key != "checksum"}
+        if body.get("format") != "mixbridge-moments" or body.get("version") != 1:
+            raise DataError("this is not a record of moments of version 1.")
+        if _checksum(body) != record.get("checksum"):
+            raise DataError("the checksum of the moments does not fit their content: the record was changed or damaged.")
+        arrays = {name: np.array(body[name], dtype=float) for name in ("shift", "scale", "magnitude", "within", "between")}
+        whole = {name: np.array(body[name], dtype=np.int64) for name in ("sizes", "counts")}
+        return _frozen(
+            cls(tuple(body["design"]), body["constant"], body["outcome"], note=body["note"], **arrays, **whole)
+        )
+
+    def save(self, path: str | Path) -> None:
+        """Write the moments as one JSON file (numbers in shortest exact form)."""
+        Path(path).write_text(json.dumps(self.to_record()), encoding="utf-8")
+
+    @classmethod
+    def load(cls, path: str | Path) -> Moments:
+        """Read moments written by `save`."""
+        return cls.from_record(json.loads(Path(path).read_text(encoding="utf-8")))
+
+
+def collect(blocks: Any, columns: tuple[str, ...], keys: pd.Index) -> tuple[OpenMoments, Moments]:
+    """Take open and closed moments of rows in blocks: one pass, and a second one where the products lose digits.
+
+    Parameters
+    ----------
+    blocks : callable
+        Returns a fresh iterator of ``(codes, x, y)`` each time it is called.
+    columns : tuple of str
+        Design columns, then the outcome.
+    keys : pandas.Index
+        Unit keys by code.
+
+    Returns
+    -------
+    OpenMoments, Moments
+    """
+    opened = gather(blocks(), columns, keys)
+    if len(opened.keys) != len(keys):
+        place = keys.get_indexer(opened.keys)
+        recode = np.zeros(len(keys), dtype=np.intp)
+        recode[place] = np.arange(place.size)
+        source = lambda: ((recode[codes], x, y) for codes, x, y in blocks())  # noqa: E731
+    else:
+        source = blocks
+    if opened.loss.max() > LOSS_LIMIT or factor_from_products(opened.within) is None:
+        opened = opened.with_factor(within_factor(source(), opened))
+    return opened, close(opened)
+
+
+def close(opened: OpenMoments) -> Moments:
+    """Close open moments: no rows can be added after it.
+
+    The shift becomes the grand mean, the scale a power of two near the total standard deviation, the explicit constant
+    leaves z, and the unit means are gathered by size.
+    """
+    flat = np.diag(opened.within) == 0.0
+    level = (opened.means.max(axis=0) == opened.means.min(axis=0)) & flat
+    candidates = np.flatnonzero(level[:-1] & (opened.means[0, :-1] + opened.shift[:-1] != 0.0))
+    constant = int(candidates[0]) if candidates.size else None
+    if level[-1]:
+        raise DataError(f"the outcome {opened.columns[-1]!r} has the same value in every row: nothing can be fitted.")
+    keep = np.array([j for j in range(len(opened.columns)) if j != constant])
+    grand = (opened.counts @ opened.means[:, keep]) / opened.rows
+    shift = opened.shift[keep] + grand
+    means = opened.means[:, keep] - (shift - opened.shift[keep])
+    within_squares = np.diag(opened.within)[keep]
+    spread = np.sqrt((within_squares + opened.counts @ means**2) / opened.rows)
+    scale = np.exp2(np.round(np.log2(np.where(spread > 0.0, spread, 1.0))))
+    factor = opened.factor
+    note = "within products by QR of unit-centred rows"
+    if factor is None:
+        factor, note = factor_from_products(opened.within), "within products of rows measured from their unit's first"
+    if factor is None:
+        factor, note = eigen_factor(opened.within), "ill-conditioned within products without a second pass over the rows"
+    sizes, class_of, counts = np.unique(opened.counts, return_inverse=True, return_counts=True)
+    order = np.argsort(class_of, kind="stable")
+    rows = np.ones((order.size, keep.size + 1))
+    np.divide(np.take(means, order, axis=0), scale, out=rows[:, 1:])
+    ends = np.cumsum(counts)
+    between = np.array([_means_factor(rows[end - m : end]) for m, end in zip(counts, ends, strict=True)])
+    columns = [opened.columns[j] for j in keep]
+    return _frozen(
+        Moments(
+            design=opened.columns[:-1],
+            constant=None if constant is None else opened.columns[constant],
+            outcome=columns[-1],
+            shift=shift,
+            scale=scale,
+            magnitude=opened.magnitude[keep],
+            sizes=sizes,
+            counts=counts,
+            within=factor[:, keep] / scale,
+            between=between,
+            note=note,
+        )
+    )
+
+
+def _means_factor(rows: FloatArray) -> FloatArray:
+    """Return the factor of the unit means of one size class, from their products where those carry the digits."""
+    if rows.shape[0] > 8 * rows.shape[1]:
+        factor = factor_from_products(rows.T @ rows)
+        if factor is not None:
+            return factor
+    return factor_from_rows(rows)
+
+
+def _frozen(moments: Moments) -> Moments:
+    for name in moments.__slots__:
+        value = getattr(moments, name)
+        if isinstance(value, np.ndarray):
+            value.setflags(write=False)
+    return moments
+
+
+def _replace(moments: Moments, **changes: Any) -> Moments:
+    values = {name: getattr(moments, name) for name in moments.__slots__}
+    return _frozen(Moments(**{**values, **changes}))
+
+
+def _checksum(body: dict[str, Any]) -> str:
+    return hashlib.sha256(json.dumps(body, sort_keys=True).encode()).hexdigest()

@@ -1,0 +1,232 @@
+"""`OpenMoments`: per unit a count and a mean, and one within product; parts of a data set can be merged."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+
+try:  # scipy's compiled scatter-add; a public call would allocate all sums anew for each block
+    from scipy.sparse._sparsetools import csc_matvecs as _csc_matvecs
+except ImportError:  # pragma: no cover
+    _csc_matvecs = None
+
+from mixbridge.errors import DataError
+from mixbridge.moments.factors import stack_factors
+
+__all__ = ["Block", "OpenMoments", "gather", "within_factor"]
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.intp]
+Block = tuple[IntArray, FloatArray, FloatArray]
+"""Unit codes of some rows, their design columns (b, p) and their outcome (b,)."""
+
+
+@dataclass(frozen=True, slots=True)
+class OpenMoments:
+    """Moments that can still take rows: per unit a count and a mean, one within product over all units.
+
+    ``z`` is a row ``(x', y)'``: design columns, an explicit constant included, then the outcome.
+
+    Attributes
+    ----------
+    columns : tuple of str
+        Names of the k entries of z; the outcome is the last.
+    keys : pandas.Index
+        One key per unit, without repetition.
+    counts : ndarray of shape (N,)
+        Rows per unit.
+    shift : ndarray of shape (k,)
+        What the means are measured from, in the units of z.
+    means : ndarray of shape (N, k)
+        Unit means of z minus `shift`.
+    within : ndarray of shape (k, k)
+        ``W = sum_i sum_t (z_it - mean_i)(z_it - mean_i)'``.
+    loss : ndarray of shape (k,)
+        Factor by which rounding in the diagonal of W may be amplified by the cancellation
+        ``sum dd' - sum T dbar dbar'`` (d is a row minus the first row of its unit); at most the largest size.
+    factor : ndarray of shape (k, k) or None
+        ``F'F = W`` taken from the rows, where a second pass was made.
+    magnitude : ndarray of shape (k,)
+        Largest absolute unit mean of each column, a bound for the rounding of the stored data.
+    """
+
+    columns: tuple[str, ...]
+    keys: pd.Index
+    counts: NDArray[np.int64]
+    shift: FloatArray
+    means: FloatArray
+    within: FloatArray
+    loss: FloatArray
+    factor: FloatArray | None = field(default=None)
+
+    @property
+    def magnitude(self) -> FloatArray:
+        """Largest absolute unit mean per column."""
+        return np.asarray(np.abs(self.means + self.shift).max(axis=0))
+
+    @property
+    def rows(self) -> int:
+        """Number of rows n."""
+        return int(self.counts.sum())
+
+    def __add__(self, other: OpenMoments) -> OpenMoments:
+        """Merge with another part; units in both are joined by key (Chan, Golub & LeVeque 1983, eq. for two samples; number from memory).
+
+        The within product of a split unit grows by ``T1 T2 / (T1 + T2) d d'``, d the difference of its two means.
+        """
+        if self.columns != other.columns:
+            raise DataError(
+                "moments with different columns cannot be merged: "
+                f"{list(self.columns)} against {list(other.columns)}. Build both from the same formula and levels."
+            )
+        moved = other.means + (other.shift - self.shift)
+        place = self.keys.get_indexer(other.keys)
+        shared = np.flatnonzero(place >= 0)
+        fresh = np.flatnonzero(place < 0)
+        counts = self.counts.copy()
+        means = self.means.copy()
+        at = place[shared]
+        first, second = self.counts[at], other.counts[shared]
+        total = first + second
+        gap = moved[shared] - self.means[at]
+        extra = gap * np.sqrt(first * (second / total))[:, None]
+        counts[at] = total
+        means[at] += gap * (second / total)[:, None]
+        factor = None
+        if self.factor is not None and other.factor is not None:
+            factor = stack_factors(self.factor, other.factor, extra)
+        return OpenMoments(
+            columns=self.columns,
+            keys=self.keys.append(other.keys[fresh]),
+            counts=np.concatenate([counts, other.counts[fresh]]),
+            shift=self.shift,
+            means=np.vstack([means, moved[fresh]]),
+            within=self.within + other.within + extra.T @ extra,
+            loss=np.maximum(self.loss, other.loss),
+            factor=factor,
+        )
+
+    def with_factor(self, factor: FloatArray) -> OpenMoments:
+        """Return the same moments with a within factor taken from the rows."""
+        return replace(self, factor=factor)
+
+
+def gather(blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index) -> OpenMoments:
+    """Take the moments of rows that come in blocks, in one pass.
+
+    Parameters
+    ----------
+    blocks : iterable of (codes, x, y)
+        Codes run over ``0 .. len(keys) - 1``; rows of a unit may lie anywhere.
+    columns : tuple of str
+        Names of the design columns and, last, of the outcome.
+    keys : pandas.Index
+        Unit keys by code. Units without a row are left out.
+
+    Returns
+    -------
+    OpenMoments
+
+    Notes
+    -----
+    Each row is measured from the first row seen of its unit, ``d = z - z_first``. A column constant within units so
+    gives exact zeros, offsets vanish before any product, and with ``dbar`` the unit mean of d
+
+        W = sum dd' - sum_i T_i dbar_i dbar_i',   mean_i = z_first,i + dbar_i.
+
+    Since ``(dbar_i)^2 <= W_i (T_i - 1) / T_i`` for each unit and column, the subtraction amplifies rounding by at most T_i.
+    """
+    n_units, k = len(keys), len(columns)
+    anchors = np.zeros((n_units, k))
+    seen = np.zeros(n_units, dtype=bool)
+    all_seen = False
+    sums = np.zeros((n_units, k))
+    counts = np.zeros(n_units, dtype=np.int64)
+    total = np.zeros((k, k))
+    buffer = np.empty((0, k))
+    for codes, x, y in blocks:
+        if buffer.shape[0] < codes.size:
+            buffer = np.empty((codes.size, k))
+        if not all_seen:
+            new = np.flatnonzero(~seen[codes])[::-1]  # backwards, so that the first row of a unit is written last
+            if new.size:
+                anchors[codes[new], :-1] = x[new]
+                anchors[codes[new], -1] = y[new]
+                seen[codes[new]] = True
+                all_seen = bool(seen.all())
+        d = buffer[: codes.size]
+        np.take(anchors, codes, axis=0, out=d, mode="clip")
+        np.subtract(x, d[:, :-1], out=d[:, :-1])
+        np.subtract(y, d[:, -1], out=d[:, -1])
+        total += d.T @ d
+        add_by_unit(sums, codes, d)
+        counts += np.bincount(codes, minlength=n_units)
+    if not all_seen:
+        keys, anchors, sums, counts = keys[seen], anchors[seen], sums[seen], counts[seen]
+    if counts.size == 0:
+        raise DataError("there are no rows to take moments of.")
+    _refuse_non_finite(total, anchors, columns)
+    shift = anchors[0].copy()
+    dbar = sums / counts[:, None]
+    within = total - sums.T @ dbar
+    within = (within + within.T) / 2.0
+    spread, kept = np.diag(total), np.diag(within)
+    loss = np.divide(spread, kept, out=np.ones(k), where=kept > 0.0)
+    loss[(spread > 0.0) & (kept <= 0.0)] = np.inf
+    anchors -= shift
+    anchors += dbar
+    return OpenMoments(columns, keys, counts, shift, anchors, within, loss)
+
+
+def within_factor(blocks: Iterable[Block], opened: OpenMoments) -> FloatArray:
+    """Take the factor of W from the rows: QR of unit-centred rows, block by block (TSQR).
+
+    Parameters
+    ----------
+    blocks : iterable of (codes, x, y)
+        The same rows as before, the codes being positions in ``opened.keys``.
+    opened : OpenMoments
+        Gives the unit means.
+
+    Returns
+    -------
+    ndarray of shape (k, k)
+        Upper triangular F with ``F'F = W``. Columns constant within every unit stay exactly zero.
+    """
+    k = len(opened.columns)
+    factor = np.zeros((k, k))
+    constant = np.diag(opened.within) == 0.0
+    near = opened.shift + opened.means  # a representable number near each mean: rows minus it are exact
+    rest = opened.means - (near - opened.shift)
+    for codes, x, y in blocks:
+        d = np.column_stack([x, y]) - near[codes] - rest[codes]
+        d[:, constant] = 0.0
+        factor = stack_factors(factor, d)
+    return factor
+
+
+def add_by_unit(sums: FloatArray, codes: IntArray, rows: FloatArray) -> None:
+    """Add each row to the line of its unit, in place, one row after the other: ``sums[codes[i]] += rows[i]``."""
+    n_units, k = sums.shape
+    size = codes.size
+    if _csc_matvecs is not None:
+        _csc_matvecs(
+            n_units, size, k, np.arange(size + 1, dtype=codes.dtype), codes, np.ones(size), rows.ravel(), sums.ravel()
+        )
+        return
+    for j in range(k):
+        sums[:, j] += np.bincount(codes, weights=rows[:, j], minlength=n_units)
+
+
+def _refuse_non_finite(total: FloatArray, anchors: FloatArray, columns: tuple[str, ...]) -> None:
+    bad = ~(np.isfinite(np.diag(total)) & np.isfinite(anchors).all(axis=0))
+    if bad.any():
+        names = ", ".join(repr(columns[j]) for j in np.flatnonzero(bad))
+        raise DataError(
+            f"column {names} holds infinite or undefined values, or differences too large to square. "
+            "Remove these rows, or divide the column by a power of ten."
+        )

@@ -1,0 +1,189 @@
+"""The `Fit` record: one route on one panel, frozen."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from types import MappingProxyType
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+
+from mixbridge.routes.certificate import Certificate
+
+__all__ = ["FITTED", "NOT_POSITIVE", "NO_DF", "TRUNCATED", "Fit"]
+
+FloatArray = NDArray[np.float64]
+
+FITTED = "fitted"
+NO_DF = "fitted without degrees of freedom"
+TRUNCATED = "unit variance truncated"
+NOT_POSITIVE = "idiosyncratic variance not positive"
+COMPONENTS = ["unit_variance", "idiosyncratic_variance"]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Fit:
+    """One route, with its conventions.
+
+    Tables are made anew on each access, so changing one does not change the fit.
+
+    Attributes
+    ----------
+    route : str
+        Key of the route.
+    conventions : mapping
+        Every convention of the route with the value used.
+    status : str
+        ``fitted``; ``fitted without degrees of freedom`` (no standard errors); ``unit variance truncated``; ``idiosyncratic variance not positive``; ``likelihood flat``;
+        ``likelihood unbounded``; ``not estimable: <reason>``.
+    notes : tuple of str
+        What a reader of the figures should know.
+    terms : tuple of str
+        Names of the coefficients.
+    beta : ndarray of shape (p,)
+        Coefficients; NaN where not estimable.
+    root : ndarray of shape (p, r)
+        J with ``JJ'`` times `scale` the covariance of the coefficients.
+    not_estimable : mapping of str to str
+        Coefficient -> reason.
+    unit_variance_raw : float
+        Unit variance before truncation at zero (a variance).
+    unit_variance : float
+        Unit variance used, ``sigma_a^2``; NaN where the route has none.
+    idiosyncratic_variance : float
+        ``sigma_u^2``, a variance.
+    ratio : float
+        ``psi = sigma_a^2 / sigma_u^2``; infinite for `within`; NaN for routes off the curve.
+    components_covariance : ndarray of shape (2, 2)
+        Sampling covariance of (raw unit variance, idiosyncratic variance) under normality.
+    components_method : str
+        How that covariance was obtained.
+    scale : float
+        Variance that multiplies ``(X'V_0^-1 X)^-1``.
+    residual_df : float
+        ``n - K``, ``n - N - K_w`` or ``N - K_p``, whichever belongs to the scale of the route.
+    rank : int
+        Number of estimable directions.
+    forms_table : tuple of (str, float, float, float)
+        First-stage forms: name, value, and the coefficients of ``sigma_u^2`` and ``sigma_a^2`` that were solved.
+    sizes : ndarray of int
+        Distinct unit sizes.
+    log_likelihood : float
+        With the constant named in the conventions; NaN where the route is not a likelihood.
+    certificate : Certificate or None
+        For `ml` and `reml`.
+    rows, units : int
+        Rows and units used.
+    """
+
+    route: str
+    conventions: Mapping[str, object]
+    status: str
+    notes: tuple[str, ...]
+    terms: tuple[str, ...]
+    beta: FloatArray
+    root: FloatArray
+    not_estimable: Mapping[str, str]
+    sizes: NDArray[np.int64]
+    rows: int
+    units: int
+    unit_variance_raw: float = np.nan
+    unit_variance: float = np.nan
+    idiosyncratic_variance: float = np.nan
+    ratio: float = np.nan
+    components_covariance: FloatArray = field(default_factory=lambda: np.full((2, 2), np.nan))
+    components_method: str = "none"
+    scale: float = np.nan
+    residual_df: float = np.nan
+    rank: int = 0
+    forms_table: tuple[tuple[str, float, float, float], ...] = ()
+    log_likelihood: float = np.nan
+    certificate: Certificate | None = None
+
+    def __post_init__(self) -> None:
+        """Make arrays and mappings read-only."""
+        for array in (self.beta, self.root, self.components_covariance):
+            array.setflags(write=False)
+        object.__setattr__(self, "conventions", MappingProxyType(dict(self.conventions)))
+        object.__setattr__(self, "not_estimable", MappingProxyType(dict(self.not_estimable)))
+
+    @property
+    def estimated(self) -> bool:
+        """Whether the route gave coefficients."""
+        return bool(np.isfinite(self.beta).any())
+
+    @property
+    def icc(self) -> float:
+        """``psi / (1 + psi)``, the share of variance due to units, given the covariates."""
+        return 1.0 if np.isinf(self.ratio) else self.ratio / (1.0 + self.ratio)
+
+    @property
+    def coefficients(self) -> pd.Series:
+        """Coefficients by term, in the units of the data."""
+        return pd.Series(self.beta.copy(), index=list(self.terms), name=self.route)
+
+    @property
+    def covariance_array(self) -> FloatArray:
+        """``scale (X'V_0^-1 X)^-1`` as an array; NaN in the rows of coefficients that are not estimable."""
+        covariance = self.scale * (self.root @ self.root.T)
+        lost = ~np.isfinite(self.beta)
+        covariance[lost] = np.nan
+        covariance[:, lost] = np.nan
+        return covariance
+
+    @property
+    def covariance(self) -> pd.DataFrame:
+        """Covariance of the coefficients, model-based, with the scale named in the conventions."""
+        return pd.DataFrame(self.covariance_array, index=list(self.terms), columns=list(self.terms))
+
+    @property
+    def standard_errors(self) -> pd.Series:
+        """Square roots of the diagonal of `covariance`."""
+        values = np.sqrt(np.diag(self.covariance_array))
+        return pd.Series(values, index=list(self.terms), name=self.route)
+
+    @property
+    def component_covariance(self) -> pd.DataFrame:
+        """Sampling covariance of the raw components, under normality."""
+        return pd.DataFrame(self.components_covariance.copy(), index=COMPONENTS, columns=COMPONENTS)
+
+    @property
+    def component_standard_errors(self) -> pd.Series:
+        """Standard errors of the components, and by the delta method of ratio and ICC."""
+        c = self.components_covariance
+        unit, idiosyncratic = np.sqrt(np.diag(c))
+        gradient = np.array([1.0, -self.ratio]) / self.idiosyncratic_variance
+        ratio = float(np.sqrt(max(gradient @ c @ gradient, 0.0))) if np.isfinite(c).all() else np.nan
+        return pd.Series(
+            [unit, idiosyncratic, ratio, ratio / (1.0 + self.ratio) ** 2], index=[*COMPONENTS, "ratio", "icc"]
+        )
+
+    @property
+    def quasi_demeaning(self) -> pd.Series:
+        """``lambda = 1 - (1 + T psi)^(-1/2)`` by unit size: the share of the unit mean that is subtracted."""
+        return self._by_size(1.0 - 1.0 / np.sqrt(1.0 + self.sizes * self.ratio), "quasi_demeaning")
+
+    @property
+    def shrinkage(self) -> pd.Series:
+        """``s = T psi / (1 + T psi)`` by unit size: the weight of a unit's own data in its predicted effect."""
+        if np.isinf(self.ratio):
+            return self._by_size(np.ones(len(self.sizes)), "shrinkage")
+        return self._by_size(self.sizes * self.ratio / (1.0 + self.sizes * self.ratio), "shrinkage")
+
+    @property
+    def forms(self) -> pd.DataFrame:
+        """First-stage forms: value, and the coefficients of both variances in the equations that were solved."""
+        columns = ["form", "value", "on_idiosyncratic_variance", "on_unit_variance"]
+        return pd.DataFrame(list(self.forms_table), columns=columns).set_index("form")
+
+    def _by_size(self, values: FloatArray, name: str) -> pd.Series:
+        return pd.Series(values, index=pd.Index(self.sizes, name="size"), name=name)
+
+    def __repr__(self) -> str:
+        """Return a short form: route, status, components."""
+        return (
+            f"<Fit {self.route}: {self.status}; unit variance {self.unit_variance:.6g}, "
+            f"idiosyncratic variance {self.idiosyncratic_variance:.6g}, ratio {self.ratio:.6g}>"
+        )
