@@ -10,19 +10,13 @@ from fractions import Fraction
 import numpy as np
 import pytest
 import statsmodels.api as sm
-from mp_likelihood import mp_optimum, mp_profile, mp_slopes
 from oracle import (
     GLS_ROUTES,
-    ROUTES,
-    information_covariance,
-    oracle_first_difference,
     oracle_fit,
-    reml_first_order,
 )
 from oracle.fit import _FIRST_STAGE, dense_panel
 from oracle.routes import degrees
 from panels import BY_NAME, PANELS, Panel, tagged
-from two_minima import search_two_minima
 
 TIGHT = 1e-12
 UNBIASED = (
@@ -199,7 +193,7 @@ def test_forms_do_not_see_the_coefficients(panel):
         )
         if len(result.q):
             # the signal is rounded to double, and E q of an error with variance v is tr A v: here v is four
-            # roundings of the signal, squared; with near collinearity 1e-5 long double itself is left with 1e-14
+            # roundings of the signal, squared; near collinearity 1e-5 leaves long double itself with 1e-14
             error = 1e-14 if "ill" in panel.tags else 4 * 2.0**-53
             assert np.all(result.q <= error**2 * float(signal @ signal) * result.expectation[:, 0])
 
@@ -373,213 +367,3 @@ def test_exact_mode_has_twelve_digits(panel):
     result = fit(panel, "fitting_constants")
     np.testing.assert_allclose(result.q, [float(rss_w), float(rss - rss_w)], rtol=TIGHT)
     np.testing.assert_allclose(fit(panel, "swamy_arora").q, [float(rss_w), float(rss_b)], rtol=TIGHT)
-
-
-# Theory: what must agree, and when.
-
-
-def _share(result) -> float:
-    """Size of a raw unit variance against what it is a difference of: the digits that are left."""
-    return abs(result.unit_variance_raw) + result.idiosyncratic_variance
-
-
-@pytest.mark.parametrize("panel", **named(tagged("balanced", "closed")))
-def test_balanced_closed_unbiased_routes_and_reml_agree(panel):
-    first = fit(panel, "swamy_arora")
-    for route, conventions in [
-        *UNBIASED,
-        ("minque", {"prior": 7.0}),
-        ("swamy_arora", {"between": "unweighted"}),
-    ]:
-        other = fit(panel, route, **conventions)
-        np.testing.assert_allclose(components(other), components(first), rtol=0, atol=TIGHT * _share(first))
-        np.testing.assert_allclose(other.component_cov, first.component_cov, rtol=1e-11)
-    reml = mp_optimum(panel.X, panel.y, panel.units, "reml")
-    if first.unit_variance_raw > 0:
-        np.testing.assert_allclose(
-            [reml.unit_variance, reml.idiosyncratic_variance],
-            components(first),
-            rtol=0,
-            atol=TIGHT * _share(first),
-        )
-    else:
-        assert reml.psi == 0.0
-
-
-@pytest.mark.parametrize("panel", **named(tagged("balanced", "closed")))
-def test_balanced_closed_ml_is_amemiya_is_short_wallace_hussain(panel):
-    """Maximum likelihood in closed form: the two sums of squares over n - N and N."""
-    one, two = fit(panel, "amemiya"), fit(panel, "wallace_hussain", expectation="short")
-    np.testing.assert_allclose(components(one), components(two), rtol=0, atol=TIGHT * _share(one))
-    ml = mp_optimum(panel.X, panel.y, panel.units, "ml")
-    if one.unit_variance_raw > 0:
-        np.testing.assert_allclose(
-            [ml.unit_variance, ml.idiosyncratic_variance], components(one), rtol=0, atol=TIGHT * _share(one)
-        )
-    else:
-        assert ml.psi == 0.0
-
-
-@pytest.mark.parametrize("panel", **named(tagged("closed")))
-def test_closed_four_routes_agree(panel):
-    first = fit(panel, "swamy_arora")
-    for route in ("wallace_hussain", "wansbeek_kapteyn", "fitting_constants"):
-        other = fit(panel, route)
-        np.testing.assert_allclose(components(other), components(first), rtol=0, atol=TIGHT * _share(first))
-    if not panel.tags & {
-        "balanced",
-        "few",
-    }:  # two units: no weights to choose
-        assert fit(panel, "minque").unit_variance_raw != pytest.approx(first.unit_variance_raw, rel=1e-6)
-
-
-def test_not_closed_routes_differ():
-    values = [fit(BY_NAME["mild_both"], route).unit_variance_raw for route, _ in UNBIASED[:4]]
-    assert len({round(v, 6) for v in values}) == 4
-
-
-@pytest.mark.parametrize("panel", **named(tagged("balanced")))
-def test_balanced_wallace_hussain_is_minque_at_zero_and_harmonic_is_size_weighted(panel):
-    one, two = fit(panel, "wallace_hussain"), fit(panel, "minque", prior=0.0)
-    np.testing.assert_allclose(components(one), components(two), rtol=0, atol=TIGHT * _share(one))
-    one, two = fit(panel, "swamy_arora"), fit(panel, "swamy_arora", between="harmonic")
-    np.testing.assert_allclose(components(one), components(two), rtol=0, atol=TIGHT * _share(one))
-
-
-@pytest.mark.parametrize("panel", **named(tagged("singletons")))
-def test_one_row_units_leave_the_within_slopes_unchanged(panel):
-    kept, dropped = fit(panel, "within"), fit(panel, "within", one_row_units="dropped")
-    np.testing.assert_allclose(dropped.beta, kept.beta, rtol=TIGHT)
-    assert kept.df == dropped.df
-    np.testing.assert_allclose(dropped.scale, kept.scale, rtol=TIGHT)
-    assert fit(panel, "pooled").df > fit(panel, "pooled", one_row_units="dropped").df
-
-
-@pytest.mark.parametrize("panel", **named([p for p in tagged("two_periods") if "periods" not in p.tags]))
-def test_two_periods_first_differences_are_within(panel):
-    difference = oracle_first_difference(panel.X, panel.y, panel.units, panel.periods, exact=True)
-    within = fit(panel, "within")
-    np.testing.assert_allclose(difference.beta, within.beta, rtol=TIGHT)
-    np.testing.assert_allclose(difference.cov, within.cov, rtol=TIGHT)
-
-
-def test_gaps_are_not_differenced_over():
-    panel = BY_NAME["mild_gaps"]
-    difference = oracle_first_difference(panel.X, panel.y, panel.units, panel.periods)
-    at = {(u, t): k for k, (u, t) in enumerate(zip(panel.units, panel.periods, strict=True))}
-    pairs = [(at[u, t - 1], k) for (u, t), k in at.items() if (u, t - 1) in at]
-    assert difference.rows == len(pairs) < len(panel.y) - len(np.unique(panel.units))
-    D = np.array([panel.X[b] - panel.X[a] for a, b in pairs])
-    d = np.array([panel.y[b] - panel.y[a] for a, b in pairs])
-    ols = sm.OLS(d, D[:, 1]).fit()
-    assert difference.beta[1] == pytest.approx(ols.params[0], rel=TIGHT)
-    assert difference.cov[1, 1] == pytest.approx(ols.cov_params()[0, 0], rel=1e-11)
-    assert np.isnan(difference.beta[[0, 2]]).all()
-
-
-@pytest.mark.parametrize("panel", **named(NOT_EXTREME[::5]))
-def test_counting_columns_changes_degrees_of_freedom_only(panel):
-    dense, _ = dense_panel(panel.X, panel.y, panel.units)
-    same_w = dense.K_w == panel.X.shape[1] - dense.constant_in_units.sum()
-    for route in ROUTES:
-        ranks, columns = fit(panel, route), fit(panel, route, count="columns")
-        np.testing.assert_array_equal(ranks.q, columns.q)
-        if same_w and dense.K_p == panel.X.shape[1]:
-            np.testing.assert_array_equal(ranks.beta, columns.beta)
-
-
-def test_counting_columns_loses_the_period_indicators():
-    panel = BY_NAME["balanced_periods"]
-    assert (
-        fit(panel, "between").df - fit(panel, "between", count="columns").df == 4
-    )  # three indicators, one purely within
-    ranks, columns = fit(panel, "swamy_arora"), fit(panel, "swamy_arora", count="columns")
-    assert columns.unit_variance_raw > ranks.unit_variance_raw
-
-
-# The 50-digit likelihood.
-
-
-@pytest.mark.parametrize("kind", ["reml", "ml"])
-@pytest.mark.parametrize("panel", **named(NOT_EXTREME[::6]))
-def test_profile_slope_and_dense_likelihood(panel, kind):
-    formula, numeric = mp_slopes(panel.X, panel.y, panel.units, 0.7, kind)
-    assert abs(formula - numeric) <= 1e-20 * (1 + abs(formula))  # central difference, step 1e-15, 50 digits
-    best = mp_optimum(panel.X, panel.y, panel.units, kind)
-    V = best.idiosyncratic_variance * np.eye(len(panel.y))
-    V += best.unit_variance * (panel.units[:, None] == panel.units[None, :])
-    W = np.linalg.inv(V)
-    A = panel.X.T @ W @ panel.X
-    e = panel.y - panel.X @ best.beta
-    n, p = panel.X.shape
-    value = np.linalg.slogdet(V)[1] + e @ W @ e
-    xx = np.linalg.slogdet(panel.X.T @ panel.X)[1]
-    value += (
-        (n - p) * np.log(2 * np.pi) + np.linalg.slogdet(A)[1] if kind == "reml" else n * np.log(2 * np.pi)
-    )
-    # double precision; log-likelihoods are tens, conditions below 1e3
-    assert best.log_likelihood_omitted == pytest.approx(-value / 2, rel=1e-10)
-    assert best.log_likelihood == pytest.approx((-value + (xx if kind == "reml" else 0)) / 2, rel=1e-10)
-    np.testing.assert_allclose(best.cov, np.linalg.inv(A), rtol=1e-8, atol=1e-12)
-    for psi in (0.0, *np.logspace(-3, 3, 13)):
-        assert mp_profile(panel.X, panel.y, panel.units, psi, kind) >= best.deviance - 1e-13 * abs(
-            best.deviance
-        )
-
-
-@pytest.mark.parametrize("panel", **named(NOT_EXTREME[::6]))
-def test_reml_equations_and_minque_at_the_optimum(panel):
-    best = mp_optimum(panel.X, panel.y, panel.units, "reml")
-    pair = (best.unit_variance, best.idiosyncratic_variance)
-    za, zt, ra, rt = reml_first_order(panel.X, panel.y, panel.units, *pair, exact=True)
-    if best.psi > 0:
-        assert za == pytest.approx(zt, rel=TIGHT)
-        assert ra == pytest.approx(rt, rel=TIGHT)
-        again = fit(panel, "minque", prior=best.psi)
-        np.testing.assert_allclose(components(again), pair, rtol=1e-11)
-        # at its own prior the covariance of MINQUE is the inverse expected information of REML
-        information = information_covariance(panel.X, panel.y, panel.units, *pair, "reml", exact=True)
-        np.testing.assert_allclose(again.component_cov, information, rtol=1e-10)
-    else:
-        assert za <= zt
-
-
-@pytest.mark.parametrize("panel", **named([p for p in tagged("balanced", "closed") if p.X.shape[1] == 1]))
-def test_ml_information_in_closed_form(panel):
-    """Balanced one-way: ML information is that of two mean squares with N and N(T - 1) degrees of freedom."""
-    N, T = len(np.unique(panel.units)), np.bincount(panel.units)[0]
-    s, a = 1.7, 0.6
-    both, total = 2 * s**2 / (N * (T - 1)), 2 * (s + T * a) ** 2 / N
-    expected = [[(total + both) / T**2, -both / T], [-both / T, both]]
-    got = information_covariance(panel.X, panel.y, panel.units, a, s, "ml", exact=True)
-    np.testing.assert_allclose(got, expected, rtol=TIGHT)
-
-
-# Two minima.
-
-
-@pytest.mark.parametrize("panel", **named(tagged("two_minima")))
-def test_two_minima_are_two_and_the_lower_is_where_it_should_be(panel):
-    for kind in ("reml", "ml"):
-        best = mp_optimum(panel.X, panel.y, panel.units, kind)
-        assert len(best.minima) == (2 if f"{kind}_two" in panel.tags else 1)
-        if f"{kind}_two" in panel.tags:
-            (low, d_low), (high, d_high) = best.minima
-            assert d_low + 0.05 < d_high  # deviances: far apart against any rounding
-            assert min(low, high) == 0.0 < max(low, high)
-            assert (low == 0.0) == (f"lowest_zero_{kind}" in panel.tags)
-            assert (low > 0.0) == (f"lowest_interior_{kind}" in panel.tags)
-            assert len(best.stationary) == 2
-            assert best.slope_at_zero > 0
-
-
-def test_the_search_finds_them():
-    found = search_two_minima(seed=1, tries=300)
-    assert [f.attempt for f in found if "reml" in f.kinds] == [182]
-    assert (299, ("ml",), (True,)) in {(f.attempt, f.kinds, f.lowest_at_zero) for f in found}
-
-
-def test_kinds_of_two_minima_are_all_there():
-    tags = {tag for panel in tagged("two_minima") for tag in panel.tags}
-    assert {"lowest_zero_reml", "lowest_interior_reml", "lowest_zero_ml", "lowest_interior_ml"} <= tags
-    assert len(tagged("two_minima")) >= 6
