@@ -162,13 +162,18 @@ def sums_of_decimals(data: Set) -> Exact:
 @pytest.mark.parametrize("name", CERTIFIED)
 def test_mean_squares(name):
     sums, row = exact(name), CERTIFIED[name]
-    for part, degrees in (("between", sums.groups - 1), ("within", sums.groups * (sums.rows_per_group - 1))):
-        fit = study(name).fit(part)
-        assert fit.scale_df == degrees
-        assert relative(fit.scale, getattr(sums, f"mean_square_{part}")) <= OWN_ROUNDING
-        floor = floor_of_a_sum_of_squares(name, row[f"sum_of_squares_{part}"]) / degrees
-        certified = float(row[f"mean_square_{part}"])
-        assert abs(fit.scale - certified) <= floor + OWN_ROUNDING * certified
+    between = study(name).fit("between")
+    within = study(name).fit("fitting_constants").forms.loc["within residual sum of squares"]
+    for part, degrees, sum_of_squares in (
+        ("between", between.residual_df, between.scale * between.residual_df),
+        ("within", within["on_idiosyncratic_variance"], within["value"]),
+    ):
+        reference = getattr(sums, f"mean_square_{part}")
+        assert degrees == getattr(sums, part) / reference
+        assert relative(sum_of_squares / degrees, reference) <= OWN_ROUNDING
+        certified = row[f"sum_of_squares_{part}"]
+        floor = floor_of_a_sum_of_squares(name, certified)
+        assert abs(sum_of_squares - float(certified)) <= floor + OWN_ROUNDING * float(certified)
 
 
 @pytest.mark.parametrize(
@@ -276,7 +281,7 @@ def test_longley_to_ten_digits(longley_frame):
     """Pooled takes no notice of the units; pairs of years stand in for them."""
     formula = "TOTEMP ~ " + " + ".join(term for term in LONGLEY if term != "Intercept")
     fit = mixbridge.crosscheck(formula, longley_frame, unit="pair", period="YEAR").fit("pooled")
-    assert fit.scale_df == 9
+    assert fit.residual_df == 9
     # Ten digits are what a double-precision program can be asked for on this ill-conditioned problem;
     # cross-products of unshifted columns lose more than half of them.
     for term, (estimate, error) in LONGLEY.items():
