@@ -218,16 +218,16 @@ def _complaint(reading: Reading, survey: _Survey, labels: pd.Index, *, is_outcom
     name = reading.factor.code
     if survey.infinite is not None:
         return _infinite(name, labels[survey.infinite])
-    if is_outcome and survey.least == survey.greatest:
-        return DataError(
-            f"The outcome {name} has the one value {survey.least:g} in all rows used: there is nothing to "
-            "explain."
-        )
     if survey.narrow:
         return DataError(
             f"The values of {name} lie between {survey.least!r} and {survey.greatest!r}: their spread is "
             "below what double precision carries at that size, so digits are lost already. Subtract an "
             "offset before the column is stored as floating-point numbers."
+        )
+    if is_outcome and survey.least == survey.greatest:
+        return DataError(
+            f"The outcome {name} has the one value {survey.least:g} in all rows used: there is nothing to "
+            "explain."
         )
     return None
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import Any
 
@@ -9,7 +10,7 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
-from mixbridge.errors import DataError
+from mixbridge.errors import DataError, FormulaError
 from mixbridge.panel.columns import Column, Rows
 
 __all__ = ["Coded", "code_column", "code_values", "is_categorical"]
@@ -71,7 +72,8 @@ def code_column(name: str, column: Column, rows: Rows, box: Any = None) -> Coded
     """
     series = column.taken(rows)
     if series.dtype == object and column.numbers is not None:
-        series = pd.Series(column.numbers if rows is None else column.numbers[rows])
+        values = column.numbers if rows is None else column.numbers[rows]
+        series = pd.Series(values.astype(bool) if column.kind == "truth" else values)
     return _code(name, series, getattr(box, "levels", None), getattr(box, "contrast", None))
 
 
@@ -97,6 +99,8 @@ def _code(name: str, series: pd.Series[Any], explicit: Any, contrast: Any) -> Co
         order, present = _sorted(uniques.tolist())
         codes = np.where(codes < 0, -1, order[codes]) if (codes < 0).any() else order[codes]
     if explicit is not None:
+        if isinstance(explicit, str) or not isinstance(explicit, Iterable):
+            raise FormulaError(f"{name} gives levels={explicit!r}; needed is a list of levels.")
         codes, present = _to_explicit(name, codes, present, list(explicit))
     counts = np.bincount(codes[codes >= 0] if codes.min(initial=0) < 0 else codes, minlength=len(present))
     used = np.flatnonzero(counts)

@@ -97,10 +97,11 @@ def given_data(columns: Mapping[str, Column], rows: Rows) -> dict[str, Any]:
     data: dict[str, Any] = {}
     for name, column in columns.items():
         series = column.taken(rows)
-        if isinstance(series.dtype, np.dtype) or column.numbers is None:
+        plain = isinstance(series.dtype, np.dtype) and series.dtype.kind in "iufb"
+        if plain or column.numbers is None:
             data[name] = series
         else:
-            data[name] = series.astype(_plain_type(series))
+            data[name] = series.astype("bool" if column.kind == "truth" else _plain_type(series))
     return data
 
 

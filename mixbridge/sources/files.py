@@ -25,7 +25,7 @@ _LARGEST = 18  # every integer of so many digits fits in 64 bits
 
 
 def read_key(text: pd.Series, *, fractions: bool) -> pd.Series:
-    """Turn a key read as text into integers or dates where that changes no key, else leave it text.
+    """Turn a key read as text into integers or dates where no key changes, else leave it text.
 
     ``007`` and ``7`` are two keys, so a column with either stays text; whole numbers of any length never pass
     through a float.
@@ -35,7 +35,7 @@ def read_key(text: pd.Series, *, fractions: bool) -> pd.Series:
     text : pandas.Series
         Text with missing values.
     fractions : bool
-        Whether decimal fractions become floats: they do as periods, where they have an order, but not as units.
+        Whether decimal fractions become floats: as periods they do, because they have an order; as units not.
     """
     present = text.dropna()
     if present.empty:
