@@ -13,6 +13,7 @@ from mixbridge.errors import DataError, FormulaError
 from mixbridge.panel import build_panel
 from mixbridge.panel.categories import Coded
 from mixbridge.panel.factors import Evaluated, Plain, Stored
+from mixbridge.panel.standardize import standardize
 
 
 @pytest.fixture(scope="module")
@@ -306,3 +307,91 @@ def test_memory_beyond_the_data_stays_below_the_design_matrix():
     peak = tracemalloc.get_traced_memory()[1]
     tracemalloc.stop()
     assert peak < 0.5 * n * (p + 1) * 8
+
+
+def test_standardize_learns_the_same_from_chunks():
+    values = np.random.default_rng(6).normal(5, 2, size=100)
+    whole, chunks = (standardize.__patsy_stateful_transform__() for _ in range(2))
+    whole.memorize_chunk(values)
+    for part in np.split(values, [7, 40]):
+        chunks.memorize_chunk(part)
+    for transform in (whole, chunks):
+        transform.memorize_finish()
+    # means and sums of squares of 100 numbers of order 5, added in another order
+    np.testing.assert_allclose(chunks.transform(values), whole.transform(values), rtol=0, atol=1e-13)
+
+
+def test_standardize_alone_without_rescaling_centres(frame):
+    X, _ = build_panel("y ~ standardize(x, rescale=False)", frame, unit="firm").matrix()
+    np.testing.assert_array_equal(X[:, 1], frame["x"] - frame["x"].to_numpy().mean())
+
+
+def test_more_rows_than_one_look_takes():
+    n = 70_000
+    data = pd.DataFrame({"g": np.arange(n) // 7, "y": np.arange(n) % 11.0, "x": np.arange(n, dtype=float)})
+    data.loc[5, "x"] = np.nan
+    panel = build_panel("y ~ x + I(x**2) + C(x > 69_999 - 3)", data, unit="g")
+    used = data["x"].dropna()
+    expected = [np.ones(n - 1), used > 69_996, used, used**2]
+    np.testing.assert_array_equal(panel.matrix()[0], np.column_stack(expected))
+    data.loc[69_990, "x"] = np.inf
+    with pytest.raises(DataError, match="labelled 69990"):
+        build_panel("y ~ x", data, unit="g")
+    data.loc[69_990, "x"] = -1.0
+    panel = build_panel("y ~ np.sqrt(x)", data, unit="g")
+    assert panel.accounting.dropped[-1] == ("not a number in np.sqrt(x)", "np.sqrt(x)", 1)
+
+
+def test_the_callers_own_coding_function_is_used(frame):
+    def C(values):
+        return values * 2.0
+
+    np.testing.assert_array_equal(
+        build_panel("y ~ C(x)", frame, unit="firm").matrix()[0][:, 1], frame["x"] * 2
+    )
+
+
+@pytest.mark.parametrize("coding", ["3", "np.eye(7)", "'Sum'"])
+def test_a_coding_that_does_not_fit_is_a_formula_error(frame, coding):
+    with pytest.raises(FormulaError, match="cannot be laid out"):
+        build_panel(f"y ~ C(k, {coding})", frame, unit="firm")
+
+
+def test_a_coding_without_columns_leaves_no_design(frame):
+    nothing = np.empty((3, 0))
+    with pytest.raises(FormulaError, match="leaves no column"):
+        build_panel("y ~ 0 + C(region, nothing)", frame, unit="firm")
+    assert nothing.size == 0
+
+
+def test_values_of_unlike_kinds_are_ordered_by_kind(frame):
+    def mixed(values):
+        return pd.Series(np.where(values > 0, "high", None), dtype=object).where(values.to_numpy() > 0, 3)
+
+    panel = build_panel("y ~ mixed(x)", frame, unit="firm")
+    assert panel.names == ("Intercept", "mixed(x)[T.high]")
+
+
+def test_categories_in_two_dimensions_are_refused(frame):
+    def squares(values):
+        return np.full((len(values), 2), "a")
+
+    with pytest.raises(DataError, match="2 dimensions"):
+        build_panel("y ~ squares(x)", frame, unit="firm")
+    with pytest.raises(FormulaError, match="complex"):
+        build_panel("y ~ I(x * 1j)", frame, unit="firm")
+
+
+def test_own_functions_get_plain_numbers_from_nullable_columns(frame):
+    kinds = []
+
+    def look(values):
+        kinds.append(values.dtype)
+        return values * 1.0
+
+    data = frame.assign(
+        a=frame["k"].astype("Int64"), b=frame["k"].astype(object), c=frame["k"].astype("double[pyarrow]")
+    )
+    build_panel("y ~ look(a)", data, unit="firm")
+    build_panel("y ~ look(b) + look(c)", data, unit="firm")
+    assert set(kinds) == {np.dtype("int64"), np.dtype("float64")}

@@ -54,6 +54,7 @@ def frame() -> pd.DataFrame:
         ("honey ~ unknown_function(forage)", "unknown_function"),
         ("honey ~ C(forage, levels=3)", "list of levels"),
         ("honey ~ C(region, levels='abc')", "list of levels"),
+        ("honey ~ standardize(C(season))", "cannot be evaluated"),
         ("honey ~ (touch := forage)", "not an expression"),
         ("honey ~ np.log(region)", r"np.log\(region\) cannot be evaluated"),
         ("honey ~ bs(forage, df=1)", "cannot be evaluated"),
@@ -160,6 +161,8 @@ REFUSED = [
     "I(forage % 2)",
     "I(~forage)",
     "log()",
+    "bs(forage, df=-1000000 * 2)",
+    "C(region, Treatment(reference=forage))",
 ]
 
 
@@ -189,3 +192,10 @@ def test_deep_nesting_is_refused_not_crashed(frame):
     deep = "I(" + "(" * 150 + "forage" + ")" * 150 + ")"
     assert violation("-" * 5000 + "x", ["x"], ["x"]) is not None
     assert build_panel(f"honey ~ {deep}", frame, unit="hive", trusted=False).n == 24
+    for deeper in (
+        "forage + (" * 2000 + "forage" + ")" * 2000,
+        "I(" + "-" * 5000 + "forage)",
+        "I(" * 500 + "forage" + ")" * 500,
+    ):
+        with pytest.raises(FormulaError):
+            build_panel(f"honey ~ {deeper}", frame, unit="hive", trusted=False)

@@ -139,6 +139,14 @@ def test_truth_values_single_periods_and_spans():
     )
 
 
+def test_calendar_periods_and_floats_kept_as_objects():
+    periods = pd.Series(
+        [pd.Period("2001-11", "M"), pd.Period("2002-01", "M"), pd.Period("2001-12", "M")], dtype=object
+    )
+    assert (np.array(ordinals(periods)[0]) - ordinals(periods)[0].min()).tolist() == [0, 2, 1]
+    assert ordinals(pd.Series([1.0, 3.0, 2], dtype=object))[0].tolist() == [1, 3, 2]
+
+
 def test_infinite_periods():
     with pytest.raises(DataError, match="infinite"):
         ordinals([0.5, np.inf, 1.0])

@@ -1,5 +1,7 @@
 """What becomes of rows: dropped, counted, refused."""
 
+from decimal import Decimal
+
 import numpy as np
 import pandas as pd
 import pytest
@@ -155,6 +157,11 @@ def test_an_infinite_value_in_a_row_dropped_anyway_does_no_harm():
         ({"y": [1, "a", 2, "b", 3, "c"]}, "mixes"),
         ({"x": np.arange(6) * 1j}, "complex"),
         ({"x": [[1], [2], [3], [4], [5], [6]]}, "mixes"),
+        (
+            {"x": pd.Series([10**400, 1, 2, 3, 4, 5], list("abcdef"), dtype=object)},
+            "cannot be read as numbers",
+        ),
+        ({"x": pd.interval_range(0, 6)}, "type interval"),
     ],
 )
 def test_unusable_columns(change, match):
@@ -239,3 +246,23 @@ def test_the_panel_cannot_be_changed():
         panel.terms["x"] = slice(0, 1)
     with pytest.raises(OptionError, match="at least one row"):
         next(panel.blocks(rows=0))
+
+
+def test_decimals_and_sparse_numbers_are_numbers():
+    decimals = [Decimal("0.5"), None, Decimal(2), Decimal("2.5"), Decimal(4), Decimal(5)]
+    panel = build_panel("y ~ x", small(x=decimals), unit="g")
+    np.testing.assert_array_equal(panel.matrix()[0][:, 1], [0.5, 2.0, 2.5, 4.0, 5.0])
+    assert panel.accounting.notes == ("x is stored as objects; its numbers were read as numbers",)
+    assert panel.accounting.lines()[-1].startswith("  note: x is stored")
+    sparse = build_panel("y ~ x", small(x=pd.arrays.SparseArray([0.0, 0, 1, 0, 2, 0])), unit="g")
+    np.testing.assert_array_equal(sparse.matrix()[0][:, 1], [0, 0, 1, 0, 2, 0])
+
+
+def test_a_column_without_any_value():
+    with pytest.raises(DataError, match=r"No row is left\. 6 rows given, 0 used, 6 dropped: .*\(x\): 6\.$"):
+        build_panel("y ~ x", small(x=pd.Series([None] * 6, list("abcdef"), dtype=object)), unit="g")
+
+
+def test_a_transform_that_loses_every_row():
+    with pytest.raises(DataError, match=r"No row is left.*not a number in standardize\(x\): 6"):
+        build_panel("y ~ standardize(x)", small(x=[1.0] * 6), unit="g")

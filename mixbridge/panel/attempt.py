@@ -243,6 +243,7 @@ def refuse_infinite(column: Column, rows: Rows, labels: pd.Index) -> None:
 
 
 def _infinite(name: str, label: Any) -> DataError:
+    label = label.item() if isinstance(label, np.generic) else label
     return DataError(
         f"{name} is infinite in the row labelled {label!r}. Correct the value, or set it to missing to have "
         "the row dropped and counted."

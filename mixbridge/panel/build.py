@@ -230,12 +230,15 @@ def _complete_rows(
 def _check_left(account: Accounting, incomplete_rows: str) -> None:
     """Refuse to go on without rows or, if so asked, with rows dropped."""
     if account.rows_dropped and incomplete_rows == "refuse":
-        raise DataError(
-            "Incomplete rows are refused (incomplete_rows='refuse'). "
-            + " ".join(account.lines()).replace("   ", " ")
-        )
+        raise DataError(f"Incomplete rows are refused (incomplete_rows='refuse'). {_in_a_sentence(account)}")
     if not account.rows_used:
-        raise DataError("No row is left. " + "; ".join(line.strip() for line in account.lines()))
+        raise DataError(f"No row is left. {_in_a_sentence(account)}")
+
+
+def _in_a_sentence(account: Accounting) -> str:
+    """Return the account on one line."""
+    first, *causes = account.lines()
+    return f"{first} {'; '.join(cause.strip() for cause in causes)}."
 
 
 def _usable_rows(

@@ -79,10 +79,8 @@ def code_column(name: str, column: Column, rows: Rows, box: Any = None) -> Coded
 
 def code_values(name: str, value: Any) -> Coded:
     """Code the value of an evaluated factor."""
-    levels, contrast = (
-        getattr(value, "levels", None) if _is_box(value) else None,
-        getattr(value, "contrast", None),
-    )
+    levels = value.levels if _is_box(value) else None
+    contrast = getattr(value, "contrast", None)
     while _is_box(value):
         value = value.data
     if getattr(value, "ndim", 1) != 1:

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import functools
-import math
 from dataclasses import dataclass
 from typing import Any, Literal
 
@@ -162,7 +160,10 @@ def _examples(series: pd.Series[Any]) -> str:
 
 
 def extremes(column: Column, rows: Rows) -> tuple[float | int, float | int]:
-    """Return least and greatest of the used rows, exact for integers; NaN or infinity passes through."""
+    """Return least and greatest of the used rows, exact for integers; infinity passes through.
+
+    The rows used have no missing value in the column.
+    """
     values = column.numbers
     assert values is not None, "only numbers have extremes"
     if rows is None:
@@ -172,7 +173,4 @@ def extremes(column: Column, rows: Rows) -> tuple[float | int, float | int]:
         part = values[rows[start : start + _CHUNK]]
         least.append(part.min().item())
         greatest.append(part.max().item())
-    # numpy's reductions carry a NaN on, Python's would lose it.
-    if any(math.isnan(value) for value in least):
-        return float("nan"), float("nan")
-    return functools.reduce(min, least), functools.reduce(max, greatest)
+    return min(least), max(greatest)

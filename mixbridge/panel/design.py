@@ -109,7 +109,13 @@ def lay_out(terms: Sequence[Term], learned: Mapping[EvalFactor, Learned], text: 
     termlist = [Term([known[factor] for factor in term.factors]) for term in terms]
     try:
         info: DesignInfo = design_matrix_builders([termlist], lambda: iter([{}]), EvalEnvironment([{}]))[0]
-    except PatsyError as error:
+    except (
+        PatsyError,
+        ValueError,
+        TypeError,
+        LookupError,
+        AttributeError,
+    ) as error:  # a coding can be any object
         raise FormulaError(f"The design of {text!r} cannot be laid out: {error}") from error
     places = {factor: i for i, factor in enumerate(known.values())}
     recipe: list[tuple[_Piece, ...]] = []

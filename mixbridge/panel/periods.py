@@ -71,8 +71,6 @@ def _infer(keys: pd.Index) -> pd.Index:
         return pd.Index(np.array(list(keys), dtype=np.int64))
     if kind in ("date", "datetime", "datetime64"):
         return pd.DatetimeIndex(pd.to_datetime(list(keys)))
-    if kind in ("floating", "mixed-integer-float"):
-        return pd.Index(np.array(list(keys), dtype=np.float64))
     if kind == "period":
         return pd.PeriodIndex(list(keys))
     return keys

@@ -43,7 +43,7 @@ def units_of(name: str, series: pd.Series[Any]) -> tuple[npt.NDArray[np.intp], p
     codes, keys = encode(name, series)
     if len(keys) == 1:
         raise DataError(
-            f"All {len(codes)} rows used belong to one unit ({name} = {keys[0]!r}): a variance between "
+            f"All {len(codes)} rows used belong to one unit ({name} {keys[0]}): a variance between "
             "units is not defined. Check that unit= names the grouping column."
         )
     return codes, keys
