@@ -1,4 +1,5 @@
-"""Everything that follows from moments and one variance ratio ψ: the curve on which every random-effects route is a point.
+"""Everything that follows from moments and one variance ratio ψ: the curve on which every random-effects
+route is a point.
 
 With ``Q`` the projection on deviations from unit means, ``P = I - Q``, and ``V / sigma_u^2 = I + psi ZZ'``,
 
@@ -6,9 +7,9 @@ With ``Q`` the projection on deviations from unit means, ``P = I - Q``, and ``V 
     A(psi)         = W + sum_T T / (1 + T psi) B_T
     beta(psi)      = A_xx^-1 A_xy,      r(psi) = A_yy - A_yx beta(psi)
 
-(Fuller & Battese 1974; Harville 1977). All algebra is done in *whitened* coordinates: columns are combined so that ``A(0) = I``,
-the outcome having become the pooled residual of length one. This costs one triangular solve and leaves every later
-matrix with the condition that comes from the weighting alone.
+(Fuller & Battese 1974; Harville 1977). All algebra is done in *whitened* coordinates: columns are combined so
+that ``A(0) = I``, the outcome having become the pooled residual of length one. This costs one triangular
+solve and leaves every later matrix with the condition that comes from the weighting alone.
 """
 
 from __future__ import annotations
@@ -42,7 +43,8 @@ class Point:
     root : ndarray of shape (p, p)
         J with ``JJ' = (X'(I + psi ZZ')^-1 X)^-1``.
     residual : float
-        ``r(psi)``, the residual sum of squares of the quasi-demeaned regression, in squared units of the outcome.
+        ``r(psi)``, the residual sum of squares of the quasi-demeaned regression, in squared units of the
+        outcome.
     white : ndarray of shape (p + 1,)
         ``(-beta, 1)`` in whitened coordinates.
     """
@@ -82,7 +84,8 @@ class Curve:
     log_det : float
         ``log |X'X|`` in the units of the data.
     within_span, between_span : Span
-        Ranks, dependencies and null directions of QX and PX, in model coordinates (order `names`, scaled, centred).
+        Ranks, dependencies and null directions of QX and PX, in model coordinates (order `names`, scaled,
+        centred).
     free_within, free_between : ndarray of bool, shape (p,)
         Whether each coefficient is estimable from within, or from between, variation alone.
     constant_white : ndarray of shape (p, K_c)
@@ -187,7 +190,8 @@ class Curve:
         return root_of(np.vstack([self.within, between])[:, :p])
 
     def loadings(self, white: FloatArray) -> tuple[float, FloatArray]:
-        """Return the within and, per size, the between sum of squares of the residual ``z'white``, in whitened units.
+        """Return the within and, per size, the between sum of squares of the residual ``z'white``, in
+        whitened units.
 
         Returns
         -------
@@ -205,12 +209,15 @@ def curve_of(moments: Moments) -> Curve:
     Raises
     ------
     IdentificationError
-        If the columns of X are exactly collinear, if there are no more rows than columns, or if X reproduces the outcome.
+        If the columns of X are exactly collinear, if there are no more rows than columns, or if X reproduces
+        the outcome.
     """
     names = moments.design
     p = len(names)
     if p == 0:
-        raise IdentificationError("the formula has no column on its right side; write '1' for an intercept alone.")
+        raise IdentificationError(
+            "the formula has no column on its right side; write '1' for an intercept alone."
+        )
     z, to_model, offset, floor = _model_coordinates(moments)
     within, between = moments.within @ z[1:], moments.between @ z
     weights = np.sqrt(moments.sizes.astype(float))
@@ -255,14 +262,22 @@ def curve_of(moments: Moments) -> Curve:
     unit = float((scale_y * residual) ** 2)
     length = np.sqrt((upper_x**2).sum(axis=0))
     condition = float(np.linalg.cond(upper_x / length))
-    log_det = 2.0 * float(np.log(np.abs(np.diag(upper_x))).sum()) - 2.0 * float(np.linalg.slogdet(to_plain)[1])
+    log_det = 2.0 * float(np.log(np.abs(np.diag(upper_x))).sum()) - 2.0 * float(
+        np.linalg.slogdet(to_plain)[1]
+    )
     within_root = upper_x[:, constants:] @ root_of(within[:, constants:p])
     inverse_basis = np.linalg.inv(basis)
-    between_root = upper_x @ (inverse_basis[:, between_span.kept] @ root_of(between_stack[:, between_span.kept]))
+    between_root = upper_x @ (
+        inverse_basis[:, between_span.kept] @ root_of(between_stack[:, between_span.kept])
+    )
     plain_stack = _small(between_plain.reshape(-1, p + 1)[:, :p])
-    unweighted_root = upper_x @ (inverse_basis[:, between_span.kept] @ root_of(plain_stack[:, between_span.kept]))
+    unweighted_root = upper_x @ (
+        inverse_basis[:, between_span.kept] @ root_of(plain_stack[:, between_span.kept])
+    )
     touched_within, touched_between = _touched(within_span, plain), _touched(between_span, plain)
-    inner = white_within @ np.append(-within_root @ (within_root.T @ (white_within[:, :p].T @ white_within[:, p])), 1.0)
+    inner = white_within @ np.append(
+        -within_root @ (within_root.T @ (white_within[:, :p].T @ white_within[:, p])), 1.0
+    )
     left = float(np.sqrt(inner @ inner))
     nothing = 1e-13 * float(np.sqrt((within[:, p] ** 2).sum())) / abs(residual) + floor[p] / abs(residual)
     return Curve(
@@ -289,8 +304,12 @@ def curve_of(moments: Moments) -> Curve:
         condition=condition,
         within_residual=left**2 if left > nothing else 0.0,
         reasons={
-            "within": _reasons(within_span, plain, names, touched_within, "within units", sizes, moments.constant),
-            "between": _reasons(between_span, plain, names, touched_between, "between unit means", sizes, moments.constant),
+            "within": _reasons(
+                within_span, plain, names, touched_within, "within units", sizes, moments.constant
+            ),
+            "between": _reasons(
+                between_span, plain, names, touched_between, "between unit means", sizes, moments.constant
+            ),
         },
     )
 
@@ -298,9 +317,9 @@ def curve_of(moments: Moments) -> Curve:
 def _model_coordinates(moments: Moments) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
     """Return the map from ``(1, scaled z)`` to model columns and outcome, and back to coefficients.
 
-    With an explicit constant, model columns are centred and scaled; without one they are only scaled, since moving the
-    origin would change the model. Returned: map ``(k + 1, p + 1)``; L and o with ``beta = scale_y L beta* + o``; and the
-    rounding floor of each model column.
+    With an explicit constant, model columns are centred and scaled; without one they are only scaled, since
+    moving the origin would change the model. Returned: map ``(k + 1, p + 1)``; L and o with ``beta = scale_y
+    L beta* + o``; and the rounding floor of each model column.
     """
     names, columns = moments.design, moments.columns
     p, k = len(names), len(columns)
@@ -367,7 +386,10 @@ def _reasons(
     reasons: dict[str, str] = {}
     null = to_model @ span.null
     for j in np.flatnonzero(touched.any(axis=1)):
-        at = next((k for k in np.flatnonzero(touched[j]) if span.dependencies[k].column == j), int(touched[j].argmax()))
+        at = next(
+            (k for k in np.flatnonzero(touched[j]) if span.dependencies[k].column == j),
+            int(touched[j].argmax()),
+        )
         dependency = span.dependencies[at]
         if dependency.column == j and not dependency.others:
             reasons[names[j]] = f"does not vary {where}"
@@ -385,7 +407,8 @@ def _refuse_collinear(span: Span, to_model: FloatArray, names: tuple[str, ...], 
         return
     null = to_model @ span.null
     lines = [
-        dependency_text(dependency.column, null[:, at], names, sizes) for at, dependency in enumerate(span.dependencies)
+        dependency_text(dependency.column, null[:, at], names, sizes)
+        for at, dependency in enumerate(span.dependencies)
     ]
     raise IdentificationError(
         f"the columns of the design are exactly collinear: {'; '.join(lines)}. "

@@ -1,8 +1,8 @@
 """Moments of a panel: what is left of the rows once they have been read."""
 
 from mixbridge.moments.closed import Moments, close, collect
-from mixbridge.moments.factors import factor_from_rows, stack_factors
 from mixbridge.moments.columns import Span, column_table, dependency_text, noise, span_of
+from mixbridge.moments.factors import factor_from_rows, stack_factors
 from mixbridge.moments.opened import Block, OpenMoments, gather, within_factor
 
 __all__ = [
@@ -11,8 +11,8 @@ __all__ = [
     "OpenMoments",
     "Span",
     "close",
-    "column_table",
     "collect",
+    "column_table",
     "dependency_text",
     "factor_from_rows",
     "gather",

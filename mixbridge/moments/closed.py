@@ -15,7 +15,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from mixbridge.errors import DataError
 from mixbridge.moments.factors import eigen_factor, factor_from_products, factor_from_rows, stack_factors
-from mixbridge.moments.opened import Block, OpenMoments, gather, within_factor
+from mixbridge.moments.opened import OpenMoments, gather, within_factor
 
 __all__ = ["Moments", "close", "collect"]
 
@@ -29,7 +29,8 @@ LOSS_LIMIT = 1e4
 class Moments:
     """Closed moments: what every route but ``first_difference`` is computed from.
 
-    ``z`` holds the design columns without an explicit constant, then the outcome; scaled, ``(z - shift) / scale``.
+    ``z`` holds the design columns without an explicit constant, then the outcome; scaled, ``(z - shift) /
+    scale``.
 
     Attributes
     ----------
@@ -84,7 +85,12 @@ class Moments:
 
     @classmethod
     def from_arrays(
-        cls, x: ArrayLike, y: ArrayLike, codes: ArrayLike, names: Sequence[str] | None = None, outcome: str = "y"
+        cls,
+        x: ArrayLike,
+        y: ArrayLike,
+        codes: ArrayLike,
+        names: Sequence[str] | None = None,
+        outcome: str = "y",
     ) -> Moments:
         """Take closed moments from arrays in memory.
 
@@ -108,7 +114,9 @@ class Moments:
         rows, response = np.asarray(x, dtype=float), np.asarray(y, dtype=float)
         unit = np.asarray(codes)
         if rows.ndim != 2 or response.shape != (rows.shape[0],) or unit.shape != response.shape:
-            raise DataError(f"x {rows.shape}, y {response.shape} and codes {unit.shape} do not describe the same rows.")
+            raise DataError(
+                f"x {rows.shape}, y {response.shape} and codes {unit.shape} do not describe the same rows."
+            )
         if unit.size == 0 or not np.issubdtype(unit.dtype, np.integer) or unit.min() < 0:
             raise DataError("codes must be non-negative integers, one per row, at least one row.")
         unit = unit.astype(np.intp, copy=False)
@@ -171,11 +179,18 @@ class Moments:
         if body.get("format") != "mixbridge-moments" or body.get("version") != 1:
             raise DataError("this is not a record of moments of version 1.")
         if _checksum(body) != record.get("checksum"):
-            raise DataError("the checksum of the moments does not fit their content: the record was changed or damaged.")
-        arrays = {name: np.array(body[name], dtype=float) for name in ("shift", "scale", "magnitude", "within", "between")}
+            raise DataError(
+                "the checksum of the moments does not fit their content: the record was changed or damaged."
+            )
+        arrays = {
+            name: np.array(body[name], dtype=float)
+            for name in ("shift", "scale", "magnitude", "within", "between")
+        }
         whole = {name: np.array(body[name], dtype=np.int64) for name in ("sizes", "counts")}
         return _frozen(
-            cls(tuple(body["design"]), body["constant"], body["outcome"], note=body["note"], **arrays, **whole)
+            cls(
+                tuple(body["design"]), body["constant"], body["outcome"], note=body["note"], **arrays, **whole
+            )
         )
 
     def save(self, path: str | Path) -> None:
@@ -189,7 +204,8 @@ class Moments:
 
 
 def collect(blocks: Any, columns: tuple[str, ...], keys: pd.Index) -> tuple[OpenMoments, Moments]:
-    """Take open and closed moments of rows in blocks: one pass, and a second one where the products lose digits.
+    """Take open and closed moments of rows in blocks: one pass, and a second one where the products lose
+    digits.
 
     Parameters
     ----------
@@ -220,15 +236,17 @@ def collect(blocks: Any, columns: tuple[str, ...], keys: pd.Index) -> tuple[Open
 def close(opened: OpenMoments) -> Moments:
     """Close open moments: no rows can be added after it.
 
-    The shift becomes the grand mean, the scale a power of two near the total standard deviation, the explicit constant
-    leaves z, and the unit means are gathered by size.
+    The shift becomes the grand mean, the scale a power of two near the total standard deviation, the explicit
+    constant leaves z, and the unit means are gathered by size.
     """
     flat = np.diag(opened.within) == 0.0
     level = (opened.means.max(axis=0) == opened.means.min(axis=0)) & flat
     candidates = np.flatnonzero(level[:-1] & (opened.means[0, :-1] + opened.shift[:-1] != 0.0))
     constant = int(candidates[0]) if candidates.size else None
     if level[-1]:
-        raise DataError(f"the outcome {opened.columns[-1]!r} has the same value in every row: nothing can be fitted.")
+        raise DataError(
+            f"the outcome {opened.columns[-1]!r} has the same value in every row: nothing can be fitted."
+        )
     keep = np.array([j for j in range(len(opened.columns)) if j != constant])
     grand = (opened.counts @ opened.means[:, keep]) / opened.rows
     shift = opened.shift[keep] + grand
@@ -239,9 +257,15 @@ def close(opened: OpenMoments) -> Moments:
     factor = opened.factor
     note = "within products by QR of unit-centred rows"
     if factor is None:
-        factor, note = factor_from_products(opened.within), "within products of rows measured from their unit's first"
+        factor, note = (
+            factor_from_products(opened.within),
+            "within products of rows measured from their unit's first",
+        )
     if factor is None:
-        factor, note = eigen_factor(opened.within), "ill-conditioned within products without a second pass over the rows"
+        factor, note = (
+            eigen_factor(opened.within),
+            "ill-conditioned within products without a second pass over the rows",
+        )
     sizes, class_of, counts = np.unique(opened.counts, return_inverse=True, return_counts=True)
     order = np.argsort(class_of, kind="stable")
     rows = np.ones((order.size, keep.size + 1))

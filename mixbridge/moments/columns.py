@@ -51,7 +51,9 @@ class Span:
         return int(self.kept.size)
 
 
-def dependency_text(column: int, null: FloatArray, names: Sequence[str], small: FloatArray | None = None) -> str:
+def dependency_text(
+    column: int, null: FloatArray, names: Sequence[str], small: FloatArray | None = None
+) -> str:
     """Say in words that a combination of columns vanishes, solved for one of them: ``x3 = 2·x1 - x2``.
 
     Parameters
@@ -62,7 +64,8 @@ def dependency_text(column: int, null: FloatArray, names: Sequence[str], small: 
         Coefficients of the vanishing combination.
     names : sequence of str
     small : ndarray of shape (p,), optional
-        Typical size of each column; terms that contribute less than 1e-8 of the largest are left out as rounding.
+        Typical size of each column; terms that contribute less than 1e-8 of the largest are left out as
+        rounding.
     """
     values = -null / null[column]
     reach = np.abs(values) * (1.0 if small is None else small)
@@ -112,12 +115,18 @@ def span_of(factor: FloatArray, floor: FloatArray, relative: float = 1e-12) -> S
             column = column - basis @ (basis.T @ column)
         rest = float(np.sqrt(column @ column))
         if rest < 1e-5 and kept:
-            coefficients = np.linalg.lstsq(factor[:, kept] / length[kept], factor[:, j] / length[j], rcond=None)[0]
-            rounding = (floor[j] + np.abs(coefficients) @ (floor[kept] / length[kept]) * length[j]) / length[j]
+            coefficients = np.linalg.lstsq(
+                factor[:, kept] / length[kept], factor[:, j] / length[j], rcond=None
+            )[0]
+            rounding = (floor[j] + np.abs(coefficients) @ (floor[kept] / length[kept]) * length[j]) / length[
+                j
+            ]
             if rest <= relative + rounding:
                 values = coefficients * length[j] / length[kept]
                 used = np.abs(coefficients) > 1e-8
-                found.append(Dependency(j, tuple(np.array(kept)[used].tolist()), tuple(values[used].tolist())))
+                found.append(
+                    Dependency(j, tuple(np.array(kept)[used].tolist()), tuple(values[used].tolist()))
+                )
                 continue
         kept.append(j)
         basis = np.column_stack([basis, column / rest])
@@ -134,8 +143,9 @@ def column_table(moments: Moments) -> pd.DataFrame:
     Returns
     -------
     DataFrame
-        ``column``; ``level`` (``within``, ``between``, ``both``, ``constant``); ``within_share`` of the sum of squares
-        about the grand mean; ``mean``; ``sd_within`` with divisor n - N and ``sd_between`` (row-weighted) with divisor N - 1.
+        ``column``; ``level`` (``within``, ``between``, ``both``, ``constant``); ``within_share`` of the sum
+        of squares about the grand mean; ``mean``; ``sd_within`` with divisor n - N and ``sd_between``
+        (row-weighted) with divisor N - 1.
     """
     n, units = moments.rows, moments.units
     weights = moments.sizes.astype(float)
@@ -147,7 +157,9 @@ def column_table(moments: Moments) -> pd.DataFrame:
     rows: list[dict[str, object]] = []
     for j, name in enumerate(moments.columns):
         varies = within[j] > bound[j], between[j] > bound[j]
-        kind = {(True, True): "both", (True, False): "within", (False, True): "between"}.get(varies, "constant")
+        kind = {(True, True): "both", (True, False): "within", (False, True): "between"}.get(
+            varies, "constant"
+        )
         total = within[j] * varies[0] + between[j] * varies[1]
         rows.append(
             {

@@ -2,8 +2,8 @@
 
 Every cross-product ``P = Z'Z`` is kept as a factor ``F`` with ``F'F = P``. A factor taken from the products
 loses about ``log10(condition**2)`` digits, one taken from the rows by QR only ``log10(condition)``
-(Golub & Van Loan, *Matrix Computations*, ch. 5; section from memory). So products are used only where the squared condition
-of the columns, scaled to unit length, is below ``1 / PRODUCT_FLOOR``.
+(Golub & Van Loan, *Matrix Computations*, ch. 5; section from memory). So products are used only where the
+squared condition of the columns, scaled to unit length, is below ``1 / PRODUCT_FLOOR``.
 """
 
 from __future__ import annotations
@@ -20,7 +20,8 @@ PRODUCT_FLOOR = 1e-5
 
 
 def factor_from_products(products: FloatArray) -> FloatArray | None:
-    """Return an upper triangular ``F`` with ``F'F = products``, or None where the products are too ill-conditioned.
+    """Return an upper triangular ``F`` with ``F'F = products``, or None where the products are too
+    ill-conditioned.
 
     Parameters
     ----------
@@ -30,7 +31,8 @@ def factor_from_products(products: FloatArray) -> FloatArray | None:
     Returns
     -------
     ndarray of shape (k, k) or None
-        None if the smallest eigenvalue of the products, columns scaled to unit length, is below `PRODUCT_FLOOR`.
+        None if the smallest eigenvalue of the products, columns scaled to unit length, is below
+        `PRODUCT_FLOOR`.
     """
     k = products.shape[0]
     length = np.sqrt(np.maximum(np.diag(products), 0.0))

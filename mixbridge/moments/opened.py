@@ -74,9 +74,11 @@ class OpenMoments:
         return int(self.counts.sum())
 
     def __add__(self, other: OpenMoments) -> OpenMoments:
-        """Merge with another part; units in both are joined by key (Chan, Golub & LeVeque 1983, eq. for two samples; number from memory).
+        """Merge with another part; units in both are joined by key (Chan, Golub & LeVeque 1983, eq. for two
+        samples; number from memory).
 
-        The within product of a split unit grows by ``T1 T2 / (T1 + T2) d d'``, d the difference of its two means.
+        The within product of a split unit grows by ``T1 T2 / (T1 + T2) d d'``, d the difference of its two
+        means.
         """
         if self.columns != other.columns:
             raise DataError(
@@ -133,12 +135,13 @@ def gather(blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index) ->
 
     Notes
     -----
-    Each row is measured from the first row seen of its unit, ``d = z - z_first``. A column constant within units so
-    gives exact zeros, offsets vanish before any product, and with ``dbar`` the unit mean of d
+    Each row is measured from the first row seen of its unit, ``d = z - z_first``. A column constant within
+    units so gives exact zeros, offsets vanish before any product, and with ``dbar`` the unit mean of d
 
         W = sum dd' - sum_i T_i dbar_i dbar_i',   mean_i = z_first,i + dbar_i.
 
-    Since ``(dbar_i)^2 <= W_i (T_i - 1) / T_i`` for each unit and column, the subtraction amplifies rounding by at most T_i.
+    Since ``(dbar_i)^2 <= W_i (T_i - 1) / T_i`` for each unit and column, the subtraction amplifies rounding
+    by at most T_i.
     """
     n_units, k = len(keys), len(columns)
     anchors = np.zeros((n_units, k))
@@ -152,7 +155,9 @@ def gather(blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index) ->
         if buffer.shape[0] < codes.size:
             buffer = np.empty((codes.size, k))
         if not all_seen:
-            new = np.flatnonzero(~seen[codes])[::-1]  # backwards, so that the first row of a unit is written last
+            new = np.flatnonzero(~seen[codes])[
+                ::-1
+            ]  # backwards, so that the first row of a unit is written last
             if new.size:
                 anchors[codes[new], :-1] = x[new]
                 anchors[codes[new], -1] = y[new]
@@ -215,7 +220,14 @@ def add_by_unit(sums: FloatArray, codes: IntArray, rows: FloatArray) -> None:
     size = codes.size
     if _csc_matvecs is not None:
         _csc_matvecs(
-            n_units, size, k, np.arange(size + 1, dtype=codes.dtype), codes, np.ones(size), rows.ravel(), sums.ravel()
+            n_units,
+            size,
+            k,
+            np.arange(size + 1, dtype=codes.dtype),
+            codes,
+            np.ones(size),
+            rows.ravel(),
+            sums.ravel(),
         )
         return
     for j in range(k):

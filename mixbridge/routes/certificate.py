@@ -5,8 +5,9 @@ On an interval ``[a, b]`` (see `likelihood`: r and g' are completely monotone)
     m r'(a)/r(b) + g'(b)                       <= D'  <= m r'(b)/r(a) + g'(a)
     m (r''(b)/r(a) - r'(a)^2/r(b)^2) + g''(a)  <= D'' <= m (r''(a)/r(b) - r'(b)^2/r(a)^2) + g''(b)
 
-so an interval is *settled* once D' has one sign on it, or D'' has one sign and D' changes sign between the ends (one
-stationary point inside). Intervals are halved until all are settled. Beyond the last b, with ``L = lim psi^2 |r'|``,
+so an interval is *settled* once D' has one sign on it, or D'' has one sign and D' changes sign between the
+ends (one stationary point inside). Intervals are halved until all are settled. Beyond the last b, with ``L =
+lim psi^2 |r'|``,
 
     D >= m log RSS_w + g(b),      psi D' >= b g'(b) - m L / (b RSS_w).
 
@@ -96,7 +97,9 @@ class Certificate:
         where = f"{minima} minimum" if minima == 1 else f"{minima} minima"
         lines = [f"value: {value}", f"location: {where} on ratio >= 0, at {_places(self.stationary)}"]
         if self.psi == 0.0:
-            lines.append(f"zero: the derivative at 0 is {self.slope_at_zero:.3g}, so the deviance does not fall there")
+            lines.append(
+                f"zero: the derivative at 0 is {self.slope_at_zero:.3g}, so the deviance does not fall there"
+            )
         if self.unresolved:
             spans = ", ".join(f"[{a:.6g}, {b:.6g}]" for a, b in self.unresolved)
             lines.append(f"the derivative could not be told from zero on {spans}")
@@ -112,8 +115,8 @@ def certify(profile: Profile, within_residual: float, limit: float) -> Certifica
     within_residual : float
         ``RSS_w > 0`` in whitened units.
     limit : float
-        ``lim psi^2 |r'(psi)|``: the sum of squares of the unit remainders about their unweighted regression on the
-        unit-constant columns, whitened units.
+        ``lim psi^2 |r'(psi)|``: the sum of squares of the unit remainders about their unweighted regression
+        on the unit-constant columns, whitened units.
 
     Returns
     -------
@@ -147,14 +150,18 @@ def certify(profile: Profile, within_residual: float, limit: float) -> Certifica
     if slope[0] >= 0.0:
         roots.append((0.0, float(seen.deviance[0]), "boundary minimum"))
     for i in np.flatnonzero(np.sign(slope[:-1]) * np.sign(slope[1:]) < 0):
-        psi, deviance, used = _polish(profile, float(seen.psi[i]), float(seen.psi[i + 1]), rising=bool(slope[i + 1] > 0))
+        psi, deviance, used = _polish(
+            profile, float(seen.psi[i]), float(seen.psi[i + 1]), rising=bool(slope[i + 1] > 0)
+        )
         evaluations += used
         roots.append((psi, deviance, "minimum" if slope[i + 1] > 0 else "maximum"))
     best = min((root for root in roots if "minimum" in root[2]), key=lambda root: root[1])
     amplified = float(seen.amplified.max())
     epsilon = max(1e-9, ROUNDING * profile.m * EPS * amplified)
     tail = profile.m * np.log(within_residual) + float(seen.g[-1])
-    excluded = not unresolved and bool(tail >= best[1] - epsilon) and _tail_settled(seen, within_residual, limit)
+    excluded = (
+        not unresolved and bool(tail >= best[1] - epsilon) and _tail_settled(seen, within_residual, limit)
+    )
     return Certificate(
         kind=profile.kind,
         psi=best[0],

@@ -1,6 +1,7 @@
 """Conventions as data: one table of axes, allowed values and defaults.
 
-``study.fit(key, **conventions)``, the search of printed figures, the documentation and the tests are generated from it.
+``study.fit(key, **conventions)``, the search of printed figures, the documentation and the tests are
+generated from it.
 """
 
 from __future__ import annotations
@@ -64,7 +65,12 @@ class Axis:
 
 
 def _prior(value: object) -> bool:
-    return isinstance(value, (int, float)) and not isinstance(value, bool) and math.isfinite(value) and value >= 0
+    return (
+        isinstance(value, (int, float))
+        and not isinstance(value, bool)
+        and math.isfinite(value)
+        and value >= 0
+    )
 
 
 def _step(value: object) -> bool:
@@ -169,7 +175,8 @@ def resolve(route: str, given: Mapping[str, object]) -> Mapping[str, Value]:
     for name in given:
         if name not in axes:
             raise OptionError(
-                f"route {route!r} has no convention {name!r}; it has: {', '.join(axes) or 'none'}." + nearest(name, axes)
+                f"route {route!r} has no convention {name!r}; it has: {', '.join(axes) or 'none'}."
+                + nearest(name, axes)
             )
     chosen: dict[str, Value] = {}
     for name, axis in axes.items():

@@ -13,7 +13,14 @@ from mixbridge.ratio import Curve
 from mixbridge.routes.certificate import certify
 from mixbridge.routes.conventions import Value, resolve
 from mixbridge.routes.forms import value
-from mixbridge.routes.least_squares import Differences, LeastSquares, between, first_difference, pooled, within
+from mixbridge.routes.least_squares import (
+    Differences,
+    LeastSquares,
+    between,
+    first_difference,
+    pooled,
+    within,
+)
 from mixbridge.routes.likelihood import Kind, Profile, log_likelihood
 from mixbridge.routes.quadratic import (
     QUADRATIC,
@@ -131,7 +138,9 @@ def _least_squares(
             raise NotEstimableError(differences)
         products = differences(conventions["step"])  # type: ignore[arg-type]
         fit = first_difference(curve, products)
-        notes = (f"{products.count} differences over {products.step} period step(s), {products.gaps} gaps left out",)
+        notes = (
+            f"{products.count} differences over {products.step} period step(s), {products.gaps} gaps left out",
+        )
     scale, status = fit.residual / fit.df if fit.df > 0 else np.nan, FITTED
     if fit.df < 1:
         status = NO_DF
@@ -182,7 +191,9 @@ def _quadratic(curve: Curve, route: str, conventions: Conventions, blank: Fit) -
     status = FITTED
     if unit < 0.0:
         status = TRUNCATED
-        notes = (f"unit variance {unit:.6g} is negative: kept as unit_variance_raw, ratio 0 used in the coefficients",)
+        notes = (
+            f"unit variance {unit:.6g} is negative: kept as unit_variance_raw, ratio 0 used in the coefficients",
+        )
     if not pair.unbiased:
         notes = (*notes, "solved with the divisors of this convention, not with exact expectations")
     covariance = components.sampling_covariance(curve)
@@ -204,7 +215,9 @@ def _likelihood(curve: Curve, route: Kind, conventions: Conventions, blank: Fit)
     information = _information(curve, route, psi, idiosyncratic)
     notes: tuple[str, ...] = ()
     if psi == 0.0:
-        notes = ("the estimate lies on the boundary, unit variance 0: standard errors of components are not the usual ones there",)
+        notes = (
+            "the estimate lies on the boundary, unit variance 0: standard errors of components are not the usual ones there",
+        )
     if not certificate.excluded:
         notes = (*notes, "the certificate is incomplete: see certificate.lines()")
     fit = replace(
@@ -224,7 +237,10 @@ def _likelihood(curve: Curve, route: Kind, conventions: Conventions, blank: Fit)
 def _flat(curve: Curve, route: Kind) -> tuple[str, str] | None:
     """Tell why a likelihood has no maximum, if it has none."""
     if curve.n == curve.units:
-        return "likelihood flat", "every unit has one row: the likelihood depends on the sum of the two variances only"
+        return (
+            "likelihood flat",
+            "every unit has one row: the likelihood depends on the sum of the two variances only",
+        )
     if route == "reml" and curve.units <= curve.rank_constant:
         return (
             "likelihood flat",
@@ -236,14 +252,18 @@ def _flat(curve: Curve, route: Kind) -> tuple[str, str] | None:
             f"n - N - K_w = {curve.df_within}: the within regression leaves no error, the likelihood has no maximum at a finite ratio"
         )
     if not curve.within_residual > 0.0:
-        return "likelihood unbounded", "the within regression fits exactly: the likelihood grows without bound as the ratio grows"
+        return (
+            "likelihood unbounded",
+            "the within regression fits exactly: the likelihood grows without bound as the ratio grows",
+        )
     return None
 
 
 def _information(curve: Curve, route: Kind, psi: float, idiosyncratic: float) -> FloatArray:
     """Return the inverse expected information of (unit, idiosyncratic), ``2 sigma_u^4 M^-1``.
 
-    REML: M is ``[tr P_0P_0, tr P_0P_0 ZZ'; ., tr P_0ZZ'P_0ZZ']``; ML: the same with ``V_0^-1`` in place of P_0.
+    REML: M is ``[tr P_0P_0, tr P_0P_0 ZZ'; ., tr P_0ZZ'P_0ZZ']``; ML: the same with ``V_0^-1`` in place of
+    P_0.
     """
     if route == "reml":
         matrix = minque_pair(curve, psi).system

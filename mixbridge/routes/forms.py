@@ -1,13 +1,15 @@
 """Quadratic forms in residuals, from the moments: their values, expectations and sampling covariances.
 
-Every form here is ``q = e'De``: ``e = y - X beta_hat`` with a linear ``beta_hat = H y``, and D constant on deviations from unit
-means (``d_w``) and on the unit means of each size (``d_T``). With ``L = I - XH`` and ``V = sigma_u^2 I + sigma_a^2 ZZ'``,
+Every form here is ``q = e'De``: ``e = y - X beta_hat`` with a linear ``beta_hat = H y``, and D constant on
+deviations from unit means (``d_w``) and on the unit means of each size (``d_T``). With ``L = I - XH`` and ``V
+= sigma_u^2 I + sigma_a^2 ZZ'``,
 
     E q            = tr(D L V L')
     Cov(q_a, q_b)  = 2 tr(A V B V) = 2 tr(D_a O D_b O'),    O = L_a V L_b'
 
-the second under normality (Searle, Casella & McCulloch 1992, *Variance Components*, app. S; place from memory).
-The n-by-n matrices are never formed: all of them are ``QX a_w + sum_T P_T X a_T`` plus multiples of Q and of the P_T.
+the second under normality (Searle, Casella & McCulloch 1992, *Variance Components*, app. S; place from
+memory). The n-by-n matrices are never formed: all of them are ``QX a_w + sum_T P_T X a_T`` plus multiples of
+Q and of the P_T.
 """
 
 from __future__ import annotations
@@ -29,8 +31,9 @@ FloatArray = NDArray[np.float64]
 class Form:
     """One quadratic form ``e'De`` in the residuals of a linear estimator, in whitened coordinates.
 
-    The estimator is ``beta_hat = J h`` with ``h = H_w X'Qy + H_b sum_T h_T X'P_T y``; J spreads the column space so that each of its
-    parts is near orthonormal, which keeps the traces accurate where X is ill-conditioned within or between.
+    The estimator is ``beta_hat = J h`` with ``h = H_w X'Qy + H_b sum_T h_T X'P_T y``; J spreads the column
+    space so that each of its parts is near orthonormal, which keeps the traces accurate where X is
+    ill-conditioned within or between.
 
     Attributes
     ----------
@@ -74,7 +77,9 @@ def value(curve: Curve, form: Form) -> float:
     weights = form.on_between * curve.sizes
     left_w, left_b = curve.within[:, p], curve.between[:, :, p]
     for _ in range(2):  # the second turn refines: H X H = H
-        step = gains.within.T @ left_w + ((weights[:, None] * left_b)[:, :, None] * gains.means).sum(axis=(0, 1))
+        step = gains.within.T @ left_w + ((weights[:, None] * left_b)[:, :, None] * gains.means).sum(
+            axis=(0, 1)
+        )
         left_w, left_b = left_w - tall.within @ step, left_b - tall.means @ step
     between = (form.on_means * curve.sizes) @ (left_b**2).sum(axis=1)
     return curve.unit * float(form.on_within * (left_w @ left_w) + between)
@@ -118,7 +123,9 @@ def _cross(curve: Curve, left: _Tall, right: _Tall, on_within: float, on_means: 
     return np.asarray(on_within * (left.within.T @ right.within) + between)
 
 
-def _outer(curve: Curve, left: Form, right: Form, on_within: float, on_means: FloatArray) -> tuple[_Tall, _Tall]:
+def _outer(
+    curve: Curve, left: Form, right: Form, on_within: float, on_means: FloatArray
+) -> tuple[_Tall, _Tall]:
     """Return tall matrices l and r with ``L_a V L_b' = V + l r'``."""
     p, ones = curve.rank, np.ones(len(curve.sizes))
     rows_w, rows_b = curve.within[:, :p], curve.between[:, :, :p]
@@ -127,10 +134,15 @@ def _outer(curve: Curve, left: Form, right: Form, on_within: float, on_means: Fl
         _Tall(rows_w @ form.slope_within.T, form.on_between[:, None, None] * (rows_b @ form.slope_between.T))
         for form in (left, right)
     )
-    spread_a, spread_b = (_Tall(on_within * gain.within, on_means[:, None, None] * gain.means) for gain in (gain_a, gain_b))
+    spread_a, spread_b = (
+        _Tall(on_within * gain.within, on_means[:, None, None] * gain.means) for gain in (gain_a, gain_b)
+    )
     middle = _cross(curve, gain_a, spread_b, 1.0, ones)  # H_a V H_b'
     return (
-        _Tall(np.hstack([base_a.within, -spread_b.within]), np.concatenate([base_a.means, -spread_b.means], axis=2)),
+        _Tall(
+            np.hstack([base_a.within, -spread_b.within]),
+            np.concatenate([base_a.means, -spread_b.means], axis=2),
+        ),
         _Tall(
             np.hstack([base_b.within @ middle.T - spread_a.within, base_b.within]),
             np.concatenate([base_b.means @ middle.T - spread_a.means, base_b.means], axis=2),

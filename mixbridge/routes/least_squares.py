@@ -52,7 +52,9 @@ def pooled(curve: Curve) -> LeastSquares:
     """Ordinary least squares on all rows: ψ = 0, scale ``RSS/(n - K)``."""
     point = curve.at(0.0)
     df = curve.n - curve.rank
-    return LeastSquares(point.beta, point.root, point.residual, df, curve.rank, {}, "pooled residual sum of squares")
+    return LeastSquares(
+        point.beta, point.root, point.residual, df, curve.rank, {}, "pooled residual sum of squares"
+    )
 
 
 def within(curve: Curve, conventions: Mapping[str, object]) -> LeastSquares:
@@ -192,4 +194,6 @@ def first_difference(curve: Curve, products: Differences) -> LeastSquares:
         if not ok
     }
     residual = float(left @ left)
-    return LeastSquares(beta, root, residual, df, span.rank, reasons, "residual sum of squares of differences")
+    return LeastSquares(
+        beta, root, residual, df, span.rank, reasons, "residual sum of squares of differences"
+    )

@@ -9,11 +9,12 @@ Up to constants (Hartley & Rao 1967; Patterson & Thompson 1971; Harville 1977)
 With w_T = T / (1 + T psi), S_k = sum_T w_T^k B_T and c = (-beta(psi), 1):
 
     r'  = -c' S_2 c,   r'' = 2 c' S_3 c - 2 v' A_xx^-1 v,  v = (S_2 c)_x
-    g'  = sum m_T w_T   - tr(A_xx^-1 S_2),   g'' = -sum m_T w_T^2 + 2 tr(A_xx^-1 S_3) - tr(A_xx^-1 S_2 A_xx^-1 S_2)
+    g'  = sum m_T w_T   - tr(A_xx^-1 S_2),   g'' = -sum m_T w_T^2 + 2 tr(A_xx^-1 S_3) - tr(A_xx^-1 S_2 A_xx^-1
+    S_2)
 
-(traces for REML only). In the spectral form of ``K'VK`` with ``K'X = 0``, r is ``const + sum c_k^2 / (1 + mu_k psi)`` and the g
-of REML is ``const + sum log(1 + mu_k psi)``: r and g' are completely monotone, so r decreases, is convex, and r'' decreases;
-g increases, is concave, and g'' increases.
+(traces for REML only). In the spectral form of ``K'VK`` with ``K'X = 0``, r is ``const + sum c_k^2 / (1 +
+mu_k psi)`` and the g of REML is ``const + sum log(1 + mu_k psi)``: r and g' are completely monotone, so r
+decreases, is convex, and r'' decreases; g increases, is concave, and g'' increases.
 """
 
 from __future__ import annotations
@@ -99,9 +100,10 @@ class Profile:
         r = pivots[:, p] ** 2
         axx = a[:, :p, :p]
         joined = np.concatenate([a[:, :p, p:], s2[:, :p, :]], axis=2)
-        solved = np.linalg.solve(
-            axx / (length[:, :p, None] * length[:, None, :p]), joined / length[:, :p, None]
-        ) / length[:, :p, None]
+        solved = (
+            np.linalg.solve(axx / (length[:, :p, None] * length[:, None, :p]), joined / length[:, :p, None])
+            / length[:, :p, None]
+        )
         c = np.concatenate([-solved[:, :, 0], np.ones((len(psi), 1))], axis=1)
         s2c = np.einsum("mij,mj->mi", s2, c)
         r1 = -np.einsum("mi,mi->m", c, s2c)
@@ -112,9 +114,12 @@ class Profile:
         g2 = -(weight**2) @ curve.counts
         if self.kind == "reml":
             inner = solved[:, :, 1 : p + 1]  # A_xx^-1 S_2,xx
-            s3_solved = np.linalg.solve(
-                axx / (length[:, :p, None] * length[:, None, :p]), s3[:, :p, :p] / length[:, :p, None]
-            ) / length[:, :p, None]
+            s3_solved = (
+                np.linalg.solve(
+                    axx / (length[:, :p, None] * length[:, None, :p]), s3[:, :p, :p] / length[:, :p, None]
+                )
+                / length[:, :p, None]
+            )
             g = g + 2.0 * np.log(pivots[:, :p]).sum(axis=1)
             g1 = g1 - np.trace(inner, axis1=1, axis2=2)
             g2 = g2 + 2.0 * np.trace(s3_solved, axis1=1, axis2=2) - np.einsum("mij,mji->m", inner, inner)
@@ -130,8 +135,8 @@ def log_likelihood(curve: Curve, kind: Kind, psi: float, constant: bool = True) 
     kind : {"ml", "reml"}
     psi : float
     constant : bool
-        For REML: whether ``½ log|X'X|`` is included. With it the value does not depend on the coordinates of X; neither
-        compares different column spaces (Harville 1974).
+        For REML: whether ``½ log|X'X|`` is included. With it the value does not depend on the coordinates of
+        X; neither compares different column spaces (Harville 1974).
     """
     m = curve.n - (curve.rank if kind == "reml" else 0)
     point = curve.at(psi)

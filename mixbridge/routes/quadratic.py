@@ -1,8 +1,9 @@
 """Routes whose variance components solve two quadratic forms: each a short function of the curve.
 
-A route returns its forms and the matrix C of ``E q = C (sigma_u^2, sigma_a^2)'`` that it solves. C is exact where the route is
-unbiased; where a published form uses simpler divisors, C holds those divisors and the sampling covariance stays exact.
-`RSS_w` below is the within residual sum of squares, ``n - N - K_w`` its degrees of freedom.
+A route returns its forms and the matrix C of ``E q = C (sigma_u^2, sigma_a^2)'`` that it solves. C is exact
+where the route is unbiased; where a published form uses simpler divisors, C holds those divisors and the
+sampling covariance stays exact. `RSS_w` below is the within residual sum of squares, ``n - N - K_w`` its
+degrees of freedom.
 """
 
 from __future__ import annotations
@@ -65,9 +66,11 @@ class Components:
     pair: Pair
 
     def sampling_covariance(self, curve: Curve) -> FloatArray:
-        """Return the covariance of ``(unit, idiosyncratic)`` under normality: exact formula, estimates plugged in.
+        """Return the covariance of ``(unit, idiosyncratic)`` under normality: exact formula, estimates
+        plugged in.
 
-        A negative unit variance is plugged in as zero; with a non-positive idiosyncratic variance the result is undefined.
+        A negative unit variance is plugged in as zero; with a non-positive idiosyncratic variance the result
+        is undefined.
         """
         if not self.idiosyncratic > 0.0:
             return np.full((2, 2), np.nan)
@@ -82,7 +85,9 @@ def solve(curve: Curve, pair: Pair) -> Components:
     q = np.array([value(curve, form) for form in pair.forms])
     scale = np.abs(pair.system).max(axis=1)
     if np.linalg.cond(pair.system / scale[:, None]) > 1e12:
-        raise NotEstimableError("the two forms have proportional expectations, so the components cannot be separated")
+        raise NotEstimableError(
+            "the two forms have proportional expectations, so the components cannot be separated"
+        )
     components = np.linalg.solve(pair.system / scale[:, None], q / scale)
     return Components(float(components[0]), float(components[1]), q, pair)
 
@@ -111,7 +116,9 @@ def between_df(curve: Curve, conventions: Conventions) -> int:
     columns = curve.rank if conventions.get("count") == "columns" else curve.rank_between
     df = curve.units - columns
     if df < 1:
-        raise NotEstimableError(f"no degrees of freedom between units: N - K_p = {curve.units} - {columns} = {df}")
+        raise NotEstimableError(
+            f"no degrees of freedom between units: N - K_p = {curve.units} - {columns} = {df}"
+        )
     return df
 
 
@@ -134,10 +141,12 @@ def unit_means_form(curve: Curve, weighted: bool) -> Form:
 
 
 def remainder_form(curve: Curve, weighted: bool) -> Form:
-    """Return the form in unit remainders ``ybar - xbar'b_w`` after the unit-constant directions of X are regressed out.
+    """Return the form in unit remainders ``ybar - xbar'b_w`` after the unit-constant directions of X are
+    regressed out.
 
-    These directions are ``{Xv : QXv = 0}``: constant, unit-constant columns, and combinations that cancel within units. Their
-    number is ``K_c``, and the form does not depend on which of several equal within fits ``b_w`` is.
+    These directions are ``{Xv : QXv = 0}``: constant, unit-constant columns, and combinations that cancel
+    within units. Their number is ``K_c``, and the form does not depend on which of several equal within fits
+    ``b_w`` is.
     """
     p, c = curve.rank, curve.rank_constant
     on_means = np.ones(len(curve.sizes)) if weighted else 1.0 / curve.sizes
@@ -166,9 +175,9 @@ def exact(curve: Curve, *forms: Form) -> FloatArray:
 def swamy_arora(curve: Curve, conventions: Conventions) -> Pair:
     """Swamy & Arora 1972; size-weighted with unbalanced expectation: Baltagi & Chang 1994.
 
-    ``E q_b = (N - K_p) sigma_u^2 + (n - tr[(X'PX)^+ X'ZZ'X]) sigma_a^2``; `unweighted` uses the unweighted residual sum of
-    squares with its exact expectation; `harmonic` replaces that expectation by ``(N - K_p)(sigma_a^2 + sigma_u^2 / T_h)`` with the
-    harmonic mean size T_h.
+    ``E q_b = (N - K_p) sigma_u^2 + (n - tr[(X'PX)^+ X'ZZ'X]) sigma_a^2``; `unweighted` uses the unweighted
+    residual sum of squares with its exact expectation; `harmonic` replaces that expectation by ``(N -
+    K_p)(sigma_a^2 + sigma_u^2 / T_h)`` with the harmonic mean size T_h.
     """
     form = conventions["between"]
     df_w, df_b = within_df(curve, conventions), between_df(curve, conventions)
@@ -188,13 +197,17 @@ def wansbeek_kapteyn(curve: Curve, conventions: Conventions) -> Pair:
     df_w = within_df(curve, conventions)
     _require_remainders(curve)
     first, second = within_form(curve), remainder_form(curve, weighted=True)
-    return Pair((first, second), np.array([[df_w, 0.0], expectations(curve, second)]), conventions["count"] == "rank")
+    return Pair(
+        (first, second), np.array([[df_w, 0.0], expectations(curve, second)]), conventions["count"] == "rank"
+    )
 
 
 def wallace_hussain(curve: Curve, conventions: Conventions) -> Pair:
-    """Wallace & Hussain 1969: within and between sums of squares of pooled residuals; unbalanced: Baltagi & Chang 1994.
+    """Wallace & Hussain 1969: within and between sums of squares of pooled residuals; unbalanced: Baltagi &
+    Chang 1994.
 
-    `short` takes ``E q = ((n - N) sigma_u^2, N sigma_u^2 + n sigma_a^2)``, without the correction for the estimated coefficients.
+    `short` takes ``E q = ((n - N) sigma_u^2, N sigma_u^2 + n sigma_a^2)``, without the correction for the
+    estimated coefficients.
     """
     g = len(curve.sizes)
     if curve.n == curve.units:
@@ -208,24 +221,30 @@ def wallace_hussain(curve: Curve, conventions: Conventions) -> Pair:
 
 
 def amemiya(curve: Curve, conventions: Conventions) -> Pair:
-    """Amemiya 1971 (balanced): ``sigma_u^2 = RSS_w/(n - N)``, ``sigma_a^2 = (q_b - N sigma_u^2)/n`` in unit remainders.
+    """Amemiya 1971 (balanced): ``sigma_u^2 = RSS_w/(n - N)``, ``sigma_a^2 = (q_b - N sigma_u^2)/n`` in unit
+    remainders.
 
-    The form for unequal sizes is this project's. What is printed as Amemiya is often the unbiased form, `wansbeek_kapteyn`.
+    The form for unequal sizes is this project's. What is printed as Amemiya is often the unbiased form,
+    `wansbeek_kapteyn`.
     """
     n, units = float(curve.n), float(curve.units)
     if n == units:
         raise NotEstimableError("no unit has two rows, so nothing varies within units")
     _require_remainders(curve)
     return Pair(
-        (within_form(curve), remainder_form(curve, weighted=True)), np.array([[n - units, 0.0], [units, n]]), False
+        (within_form(curve), remainder_form(curve, weighted=True)),
+        np.array([[n - units, 0.0], [units, n]]),
+        False,
     )
 
 
 def nerlove(curve: Curve, conventions: Conventions) -> Pair:
-    """Nerlove 1971: ``sigma_u^2 = RSS_w/n``; ``sigma_a^2`` the sample variance of the estimated unit intercepts.
+    """Nerlove 1971: ``sigma_u^2 = RSS_w/n``; ``sigma_a^2`` the sample variance of the estimated unit
+    intercepts.
 
-    Unit-constant covariates, the constant among them, are first regressed out of the intercepts, unweighted; that extension is this
-    project's. Without a constant in the column space the model takes the intercepts to have mean zero, and so does the form.
+    Unit-constant covariates, the constant among them, are first regressed out of the intercepts, unweighted;
+    that extension is this project's. Without a constant in the column space the model takes the intercepts to
+    have mean zero, and so does the form.
     """
     divisor = curve.units - (1 if conventions["divisor"] == "units_minus_one" else 0)
     if curve.n == curve.units:
@@ -250,7 +269,9 @@ def fitting_constants(curve: Curve, conventions: Conventions) -> Pair:
     """
     df_w = within_df(curve, conventions)
     if curve.units <= curve.rank_constant:
-        raise NotEstimableError(f"N = {curve.units} units for K_c = {curve.rank_constant} unit-constant directions")
+        raise NotEstimableError(
+            f"N = {curve.units} units for K_c = {curve.rank_constant} unit-constant directions"
+        )
     total = pooled_form(curve, "pooled residual sum of squares", 1.0, np.ones(len(curve.sizes)))
     system = np.array([[df_w, 0.0], expectations(curve, total)])
     return Pair((within_form(curve), total), system, conventions["count"] == "rank")
@@ -264,10 +285,13 @@ def minque(curve: Curve, conventions: Conventions) -> Pair:
 def minque_pair(curve: Curve, prior: float) -> Pair:
     """Return the MINQUE forms ``y'P_0 P_0 y`` and ``y'P_0 ZZ'P_0 y`` at ``V_0 = I + prior ZZ'``.
 
-    ``P_0 = V_0^-1 - V_0^-1 X (X'V_0^-1 X)^-1 X'V_0^-1``; in residuals of GLS at the prior, D is ``V_0^-2`` and ``V_0^-1 ZZ'V_0^-1``.
+    ``P_0 = V_0^-1 - V_0^-1 X (X'V_0^-1 X)^-1 X'V_0^-1``; in residuals of GLS at the prior, D is ``V_0^-2``
+    and ``V_0^-1 ZZ'V_0^-1``.
     """
     if curve.units <= curve.rank_constant or curve.n == curve.units:
-        raise NotEstimableError("within or between variation is used up, so the two components cannot be separated")
+        raise NotEstimableError(
+            "within or between variation is used up, so the two components cannot be separated"
+        )
     shrink = 1.0 / (1.0 + curve.sizes * prior)
     root = curve.gls_root(prior)
     first = Form(f"identity form at prior {prior:g}", 1.0, shrink**2, root, root.T, root.T, shrink)
@@ -277,7 +301,9 @@ def minque_pair(curve: Curve, prior: float) -> Pair:
 
 def _require_remainders(curve: Curve) -> None:
     if curve.units <= curve.rank_constant:
-        raise NotEstimableError(f"N = {curve.units} units for K_c = {curve.rank_constant} unit-constant directions")
+        raise NotEstimableError(
+            f"N = {curve.units} units for K_c = {curve.rank_constant} unit-constant directions"
+        )
 
 
 QUADRATIC: dict[str, Callable[[Curve, Conventions], Pair]] = {

@@ -36,8 +36,9 @@ class Fit:
     conventions : mapping
         Every convention of the route with the value used.
     status : str
-        ``fitted``; ``fitted without degrees of freedom`` (no standard errors); ``unit variance truncated``; ``idiosyncratic variance not positive``; ``likelihood flat``;
-        ``likelihood unbounded``; ``not estimable: <reason>``.
+        ``fitted``; ``fitted without degrees of freedom`` (no standard errors); ``unit variance truncated``;
+        ``idiosyncratic variance not positive``; ``likelihood flat``; ``likelihood unbounded``; ``not
+        estimable: <reason>``.
     notes : tuple of str
         What a reader of the figures should know.
     terms : tuple of str
@@ -67,7 +68,8 @@ class Fit:
     rank : int
         Number of estimable directions.
     forms_table : tuple of (str, float, float, float)
-        First-stage forms: name, value, and the coefficients of ``sigma_u^2`` and ``sigma_a^2`` that were solved.
+        First-stage forms: name, value, and the coefficients of ``sigma_u^2`` and ``sigma_a^2`` that were
+        solved.
     sizes : ndarray of int
         Distinct unit sizes.
     log_likelihood : float

@@ -145,14 +145,17 @@ def wallace_hussain(panel: Dense, k: Degrees, expectation: str) -> FirstStage:
 
 
 def nerlove(panel: Dense, k: Degrees, divisor: str) -> FirstStage:
-    """Within RSS over n; sample variance of unit intercepts, unit-constant part of X out, unweighted."""
+    """Within RSS over n; sample variance of unit intercepts, unit-constant part of X out, unweighted.
+
+    With the constant in that part the residual intercepts have mean zero. Without a constant in the model its
+    intercepts have mean zero by assumption, so their mean square is about zero too.
+    """
     if reason := needs_within(panel, Degrees(panel.K, panel.K_w, panel.K_p)):
         return none(reason)
     one = panel.X.dtype.type(1)
     eye = np.eye(panel.N, dtype=panel.X.dtype)
-    centre = eye - one / panel.N
     out = eye - panel.unit_constant_unweighted.projector
-    factor = centre @ out @ panel.averaging @ panel.remainder
+    factor = out @ panel.averaging @ panel.remainder
     over = {"units_minus_one": panel.N - 1, "units": panel.N}[divisor]
     if over == 0:
         return none("N - 1 = 0")

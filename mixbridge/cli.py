@@ -1,0 +1,157 @@
+"""The command line: ``mixbridge check`` and ``mixbridge demo``."""
+
+from __future__ import annotations
+
+import argparse
+import json
+import sys
+from collections.abc import Callable, Sequence
+from pathlib import Path
+
+from mixbridge.demo import apiaries
+from mixbridge.demo import path as demo_path
+from mixbridge.errors import MixbridgeError
+from mixbridge.routes import LEDGER_ROUTES
+from mixbridge.study import Study, crosscheck
+
+__all__ = ["main"]
+
+DONE, DIFFERS, UNUSABLE = 0, 1, 2
+
+INTRODUCTION = """\
+One random-intercept model, y = x'b + unit effect + error, is fitted by feasible generalised least squares in
+one
+tradition and by ML or REML in another. mixbridge fits every route to the same rows and says where they agree."""
+
+CHECK = """\
+Reads a CSV or Parquet file with one row per unit and period, fits every route, and prints one screen:
+what was fitted on which rows, whether the routes agree with the primary one, where not and by how much,
+and the variance components of each route.
+
+Formulas hold the fixed part only; the grouping factor is named by --unit. Written here, a formula may use
+column names, numbers, + - * / ** : comparisons, and a fixed list of transforms (log, sqrt, exp, center,
+standardize, C, I, Q, bs, cr and their like; anything else is refused with the list). It cannot run other code."""
+
+CHECK_EXAMPLES = """\
+examples:
+  mixbridge check honey.csv --formula 'honey ~ forage + feeding + altitude' --unit apiary --period season
+  mixbridge check visits.parquet --formula 'log(cost) ~ age + C(clinic_type)' --unit patient --primary ml
+  mixbridge check honey.csv --formula 'honey ~ forage' --unit apiary --json > record.json
+
+exit status: 0 done; 2 the input cannot be used (the message says what, where, and what to do)."""
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run the command line.
+
+    Parameters
+    ----------
+    arguments : sequence of str, optional
+        Arguments without the program's name; those of the process unless given.
+
+    Returns
+    -------
+    int
+        Exit status: 0 done, 2 unusable input.
+    """
+    options = _parser().parse_args(arguments)
+    action: Callable[[argparse.Namespace], int] = options.action
+    try:
+        return action(options)
+    except MixbridgeError as error:
+        print(f"mixbridge: {error}", file=sys.stderr)
+        return UNUSABLE
+    except BrokenPipeError:  # the reader of the output has seen enough
+        sys.stderr.close()
+        return DONE
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = argparse.ArgumentParser(
+        prog="mixbridge", description=INTRODUCTION, formatter_class=argparse.RawDescriptionHelpFormatter
+    )
+    commands = parser.add_subparsers(title="commands", metavar="COMMAND", required=True)
+    check = commands.add_parser(
+        "check",
+        help="cross-check one model on a file",
+        description=CHECK,
+        epilog=CHECK_EXAMPLES,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    check.add_argument("file", metavar="FILE", help="CSV (.csv, .csv.gz, .tsv) or Parquet file")
+    check.add_argument(
+        "--formula", required=True, help="outcome ~ covariates, for example 'honey ~ forage + feeding'"
+    )
+    check.add_argument(
+        "--unit", required=True, help="column of the grouping factor: apiary, firm, school, patient"
+    )
+    check.add_argument("--period", help="column that orders the rows of a unit; first differences need it")
+    check.add_argument("--primary", default="reml", help="the route that you report (default: reml)")
+    check.add_argument(
+        "--routes", help=f"routes to show, separated by commas (default: all: {', '.join(LEDGER_ROUTES)})"
+    )
+    check.add_argument(
+        "--confidence", type=float, default=0.95, help="level of the intervals (default: 0.95)"
+    )
+    check.add_argument(
+        "--incomplete-rows",
+        choices=("drop", "refuse"),
+        default="drop",
+        help="rows with missing values: drop them and count them by cause, or refuse the file (default: drop)",
+    )
+    check.add_argument(
+        "--json", action="store_true", help="print the whole record, unrounded, instead of the screen"
+    )
+    check.set_defaults(action=_check)
+    demo = commands.add_parser(
+        "demo",
+        help="cross-check invented data on honey yields",
+        description="Cross-checks invented data: honey by apiary and season, with forage, feeding and altitude.",
+    )
+    demo.add_argument(
+        "--save", metavar="FILE", help="also write the data as CSV, to try 'mixbridge check' on it"
+    )
+    demo.add_argument(
+        "--json", action="store_true", help="print the whole record, unrounded, instead of the screen"
+    )
+    demo.set_defaults(action=_demo)
+    return parser
+
+
+def _check(options: argparse.Namespace) -> int:
+    study = crosscheck(
+        options.formula,
+        options.file,
+        unit=options.unit,
+        period=options.period,
+        primary=options.primary,
+        routes=None if options.routes is None else [key.strip() for key in options.routes.split(",")],
+        confidence=options.confidence,
+        incomplete_rows=options.incomplete_rows,
+        trusted=False,
+    )
+    _show(study, options.json)
+    return DONE
+
+
+def _demo(options: argparse.Namespace) -> int:
+    study = crosscheck(
+        "honey ~ forage + feeding + altitude", apiaries(), unit="apiary", period="season", trusted=False
+    )
+    if options.save is not None:
+        try:
+            Path(options.save).write_bytes(demo_path().read_bytes())
+        except OSError as error:
+            print(f"mixbridge: cannot write {options.save}: {error.strerror}", file=sys.stderr)
+            return UNUSABLE
+    _show(study, options.json)
+    if not options.json:
+        print(
+            "\nInvented data. The same on a file of your own:\n"
+            "  mixbridge check FILE --formula 'honey ~ forage + feeding + altitude' --unit apiary --period season"
+        )
+    return DONE
+
+
+def _show(study: Study, as_json: bool) -> None:
+    print(json.dumps(study.to_dict(), indent=1, ensure_ascii=False) if as_json else study)

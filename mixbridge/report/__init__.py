@@ -1,0 +1,1 @@
+"""What a reader sees: the first screen and the record."""

@@ -1,0 +1,256 @@
+"""The first screen of a study: at most 40 lines of at most 100 columns, nothing cut silently."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from typing import Any, Protocol
+
+import numpy as np
+import pandas as pd
+
+from mixbridge.moments import Moments
+from mixbridge.panel import Panel
+from mixbridge.ratio import Curve
+from mixbridge.reconcile.agreement import CLASSES, Thresholds
+from mixbridge.reconcile.identities import Identity
+from mixbridge.report.text import WIDTH, columns, interval, number, shorten, signed
+from mixbridge.routes import REFERENCE_ROUTES, Fit
+
+__all__ = ["StudyView", "study_screen"]
+
+LINES = 40
+
+
+class StudyView(Protocol):
+    """What the screen and the record need to know of a study."""
+
+    @property
+    def panel(self) -> Panel: ...  # noqa: D102
+    @property
+    def moments(self) -> Moments: ...  # noqa: D102
+    @property
+    def curve(self) -> Curve: ...  # noqa: D102
+    @property
+    def primary(self) -> str: ...  # noqa: D102
+    @property
+    def confidence(self) -> float: ...  # noqa: D102
+    @property
+    def reference(self) -> str: ...  # noqa: D102
+    @property
+    def fits(self) -> Mapping[str, Fit]: ...  # noqa: D102
+    @property
+    def ledger(self) -> pd.DataFrame: ...  # noqa: D102
+    @property
+    def components(self) -> pd.DataFrame: ...  # noqa: D102
+    @property
+    def columns_report(self) -> pd.DataFrame: ...  # noqa: D102
+    @property
+    def identity_results(self) -> tuple[Identity, ...]: ...  # noqa: D102
+    @property
+    def singletons(self) -> int: ...  # noqa: D102
+
+
+def study_screen(study: StudyView) -> str:
+    """Return the first screen of a study."""
+    head, components, foot = _rows_used(study), _components(study), _cautions(study)
+    terms = len(study.curve.names)
+    for shown in range(terms, 0, -1):
+        agreement = _agreement(study, shown)
+        if len(head) + len(agreement) + len(components) + len(foot) + 2 <= LINES:
+            break
+    return "\n".join([*head, "", *agreement, "", *components, *foot])
+
+
+def _rows_used(study: StudyView) -> list[str]:
+    panel, moments, fit = study.panel, study.moments, study.fits[study.primary]
+    account = panel.accounting
+    sizes = np.repeat(moments.sizes, moments.counts)
+    rows = f"{account.rows_used} of {account.rows_given} used"
+    if account.rows_dropped:
+        causes = [
+            f"{rows_} {cause}" if cause.endswith(column) else f"{rows_} {cause} ({column})"
+            for cause, column, rows_ in account.dropped
+        ]
+        rows += f"; dropped: {_join(causes, WIDTH - 24 - len(rows))}"
+    else:
+        rows += ", none dropped"
+    one = f", {study.singletons} with one row" if study.singletons else ""
+    each = (
+        f"{sizes[0]} rows each"
+        if sizes[0] == sizes[-1]
+        else f"{sizes[0]} to {sizes[-1]} rows each, median {np.median(sizes):g}"
+    )
+    units = f"{panel.N} ({shorten(panel.unit_name, 30)}), {each}{one}"
+    table = study.columns_report
+    kinds = {
+        level: [str(name) for name in table.loc[table["level"] == level, "column"] if name != panel.outcome]
+        for level in ("both", "within", "between")
+    }
+    words = {"both": "vary both ways", "within": "within units only", "between": "constant within units"}
+    known = [(level, names) for level, names in kinds.items() if names]
+    levels = "a constant only"
+    for width in range(90, 8, -2):
+        if known:
+            levels = "; ".join(f"{words[level]}: {_join(names, width)}" for level, names in known)
+        if len(levels) <= WIDTH - 12:
+            break
+    else:
+        levels = ", ".join(f"{len(names)} {words[level]}" for level, names in known)
+    lines = [
+        shorten(f"Cross-check of {panel.formula}, one random intercept per {panel.unit_name}", WIDTH),
+        f"  rows      {rows}",
+        f"  units     {units}",
+        f"  columns   {levels}",
+    ]
+    if fit.estimated and np.isfinite(fit.ratio):
+        weights = fit.quasi_demeaning
+        span = (
+            number(weights.iloc[0], 3)
+            if len(weights) == 1
+            else interval(weights.iloc[0], weights.iloc[-1], 3)
+        )
+        lines.append(
+            f"  primary   {study.primary} ({fit.status}): ratio ψ {number(fit.ratio)}, ICC {number(fit.icc, 3)}, "
+            f"quasi-demeaning λ {span}"
+        )
+        if fit.certificate is not None and fit.certificate.excluded:
+            more = len(fit.certificate.stationary) > 1
+            others = f"; {len(fit.certificate.stationary)} stationary points" if more else ""
+            lines.append(
+                f"  optimum   bounded: no ratio is better by {fit.certificate.epsilon:.0e} in deviance{others}"
+            )
+        elif fit.certificate is not None:
+            lines.append(
+                "  optimum   NOT bounded: a better ratio could not be excluded, see the certificate of the fit"
+            )
+    else:
+        lines.append(f"  primary   {study.primary}: {fit.status}")
+    lines += [shorten(f"  note      {note}", WIDTH) for note in account.notes[:2]]
+    if len(account.notes) > 2:
+        lines.append(f"  note      {len(account.notes) - 2} more in study.panel.accounting")
+    return lines
+
+
+def _agreement(study: StudyView, most: int) -> list[str]:
+    """Return the two tables of agreement: random-effects routes as classes, other routes as gaps; `most` terms."""
+    table, primary = study.ledger, study.primary
+    votes = [key for key in study.fits if key not in REFERENCE_ROUTES and key != primary]
+    thresholds = Thresholds()
+    lines = [
+        f"Do {len(votes)} other random-effects routes agree with {primary}? {study.confidence:.0%} intervals, "
+        f"{study.reference} reference; immaterial:",
+        f"gap below {thresholds.gap:g} standard errors (se) of {primary} and half-widths within {thresholds.width:.0%}",
+    ]
+    beside = [key for key in REFERENCE_ROUTES if key in study.fits and key != primary]
+    terms = [str(term) for term in dict.fromkeys(table["term"])]
+    grouped: dict[str, pd.DataFrame] = {str(term): part for term, part in table.groupby("term", sort=False)}
+    order = sorted(terms, key=lambda term: -_weight(grouped[term], votes))
+    shown = [term for term in terms if term in order[:most]]
+    rows = [["term", primary, "se", "other routes", "widest gap (se)"]]
+    for term in shown:
+        part = grouped[term].set_index("route")
+        base = part.loc[primary]
+        there = [key for key in votes if key in part.index]
+        gaps = part.loc[there, "gap_in_se"].dropna()
+        widest = f"{signed(gaps[gaps.abs().idxmax()])} {gaps.abs().idxmax()}" if len(gaps) else "-"
+        counts = part.loc[there, "verdict"].value_counts()
+        classes = (
+            ", ".join(f"{counts[name]} {name}" for name in CLASSES if name in counts) or "none available"
+        )
+        error = number(base["standard_error"], 3)
+        rows.append([term, number(base["estimate"]), error, classes, shorten(widest, 24)])
+    lines += _fitted(rows, right=(1, 2))
+    missing = [key for key in votes if not study.fits[key].estimated]
+    if missing:
+        lines.append(
+            f"  without coefficients: {_join([f'{key} ({study.fits[key].status})' for key in missing], 74)}"
+        )
+    if beside:
+        lines.append(f"Other questions on the same rows: estimate, and (gap in se of {primary})")
+        rows = [["term", *(key.replace("_", " ") for key in beside)]]
+        for term in shown:
+            part = grouped[term].set_index("route")
+            rows.append([term, *(_beside(part.loc[key]) for key in beside)])
+        lines += _fitted(rows, right=range(1, 1 + len(beside)))
+    if len(shown) < len(terms):
+        worst = [_worst(grouped[term], votes) for term in terms if term not in shown]
+        summary = ", ".join(
+            f"{worst.count(name)} {name}" for name in (*CLASSES, "not available") if name in worst
+        )
+        lines.append(f"  and {len(worst)} more terms, by their worst class {summary}: study.ledger shows all")
+    return lines
+
+
+def _fitted(rows: list[list[str]], right: Sequence[int]) -> list[str]:
+    """Lay out rows with as much of the first column as the width of the screen allows."""
+    widths = [max(len(row[j]) for row in rows) for j in range(1, len(rows[0]))]
+    room = max(WIDTH - 2 - sum(widths) - 2 * len(widths), 8)
+    return columns([[shorten(row[0], room), *row[1:]] for row in rows], right=right)
+
+
+def _beside(row: pd.Series) -> str:
+    if np.isnan(row["estimate"]):
+        return "-"
+    gap = "" if np.isnan(row["gap_in_se"]) else f" ({signed(row['gap_in_se'])})"
+    return f"{number(row['estimate'])}{gap}"
+
+
+def _weight(part: pd.DataFrame, votes: list[str]) -> float:
+    """Order terms by the worst class, then by the widest gap, other routes included."""
+    gaps = part["gap_in_se"].abs().max()
+    worst = _worst(part, votes)
+    place = CLASSES.index(worst) if worst in CLASSES else -1
+    return 1e6 * place + (0.0 if np.isnan(gaps) else min(float(gaps), 1e5))
+
+
+def _worst(part: pd.DataFrame, votes: list[str]) -> str:
+    verdicts = set(part.loc[part["route"].isin(votes), "verdict"])
+    return next((name for name in reversed(CLASSES) if name in verdicts), "not available")
+
+
+def _components(study: StudyView) -> list[str]:
+    """Return the components by route; routes with the same figures share a line."""
+    table = study.components
+    merged: dict[tuple[str, ...], list[str]] = {}
+    for _, row in table.iterrows():
+        if row["route"] in REFERENCE_ROUTES:
+            continue
+        cells = tuple(
+            number(row[name]) for name in ("unit_variance", "idiosyncratic_variance", "ratio", "icc")
+        )
+        errors = tuple(number(row[f"{name}_se"], 2) for name in ("unit_variance", "idiosyncratic_variance"))
+        status = str(row["status"]) + (" (zero used)" if row["unit_variance"] < 0 else "")
+        merged.setdefault((*cells, *errors, status), []).append(str(row["route"]))
+    rows = [["route", "unit variance", "(se)", "idiosyncratic", "(se)", "ratio ψ", "ICC", "status"]]
+    for (unit, idiosyncratic, ratio, icc, unit_se, idiosyncratic_se, status), names in merged.items():
+        name = _join(names, 34, " = ")
+        rows.append([name, unit, unit_se, idiosyncratic, idiosyncratic_se, ratio, icc, shorten(status, 28)])
+    return [
+        "Variance components (variances; sampling errors under normality)",
+        *columns(rows, right=range(1, 7)),
+    ]
+
+
+def _cautions(study: StudyView) -> list[str]:
+    results = study.identity_results
+    counts = {verdict: sum(item.verdict == verdict for item in results) for verdict in ("holds", "FAILS")}
+    text = f"Identities, which check the arithmetic and not the model: {counts['holds']} hold"
+    if counts["FAILS"]:
+        text += f", {counts['FAILS']} FAIL ({_join([item.key for item in results if item.verdict == 'FAILS'], 30)})"
+    return [
+        text + ".",
+        "All routes share one covariance model and agree together when it is wrong; agreement is no",
+        "evidence that unit effects are unrelated to the covariates. Compare within and between above.",
+    ]
+
+
+def _join(names: list[Any], width: int, by: str = ", ") -> str:
+    """Join names until a width is reached, then say how many more there are."""
+    text = ""
+    for at, name in enumerate(names):
+        longer = f"{text}{by if text else ''}{name}"
+        more = f" and {len(names) - at} more"
+        if len(longer) + (len(more) if at + 1 < len(names) else 0) > width and text:
+            return text + more
+        text = longer
+    return text
