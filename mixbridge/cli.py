@@ -19,23 +19,26 @@ __all__ = ["main"]
 DONE, DIFFERS, UNUSABLE = 0, 1, 2
 
 INTRODUCTION = """\
-One random-intercept model, y = x'b + unit effect + error, is fitted by feasible generalised least squares in
-one
-tradition and by ML or REML in another. mixbridge fits every route to the same rows and says where they agree."""
+One random-intercept model, y = x'b + unit effect + error, is fitted by feasible generalised least
+squares in one tradition and by ML or REML in another. mixbridge fits every route to the same rows
+and says where they agree."""
 
 CHECK = """\
-Reads a CSV or Parquet file with one row per unit and period, fits every route, and prints one screen:
-what was fitted on which rows, whether the routes agree with the primary one, where not and by how much,
-and the variance components of each route.
+Reads a CSV or Parquet file with one row per unit and period, fits every route, and prints one
+screen: what was fitted on which rows, whether the routes agree with the primary one, where not and
+by how much, and the variance components of each route.
 
-Formulas hold the fixed part only; the grouping factor is named by --unit. Written here, a formula may use
-column names, numbers, + - * / ** : comparisons, and a fixed list of transforms (log, sqrt, exp, center,
-standardize, C, I, Q, bs, cr and their like; anything else is refused with the list). It cannot run other code."""
+Formulas hold the fixed part only; the grouping factor is named by --unit. Written here, a formula
+may use column names, numbers, + - * / ** : comparisons, and a fixed list of transforms (log, sqrt,
+exp, center, standardize, C, I, Q, bs, cr and their like; anything else is refused with the list).
+It cannot run other code."""
 
 CHECK_EXAMPLES = """\
 examples:
-  mixbridge check honey.csv --formula 'honey ~ forage + feeding + altitude' --unit apiary --period season
-  mixbridge check visits.parquet --formula 'log(cost) ~ age + C(clinic_type)' --unit patient --primary ml
+  mixbridge check honey.csv --formula 'honey ~ forage + feeding + altitude' \\
+      --unit apiary --period season
+  mixbridge check visits.parquet --formula 'log(cost) ~ age + C(clinic_type)' \\
+      --unit patient --primary ml
   mixbridge check honey.csv --formula 'honey ~ forage' --unit apiary --json > record.json
 
 exit status: 0 done; 2 the input cannot be used (the message says what, where, and what to do)."""
@@ -97,7 +100,8 @@ def _parser() -> argparse.ArgumentParser:
         "--incomplete-rows",
         choices=("drop", "refuse"),
         default="drop",
-        help="rows with missing values: drop them and count them by cause, or refuse the file (default: drop)",
+        help="rows with missing values: drop them and count them by cause, or refuse the file "
+        "(default: drop)",
     )
     check.add_argument(
         "--json", action="store_true", help="print the whole record, unrounded, instead of the screen"
@@ -106,7 +110,8 @@ def _parser() -> argparse.ArgumentParser:
     demo = commands.add_parser(
         "demo",
         help="cross-check invented data on honey yields",
-        description="Cross-checks invented data: honey by apiary and season, with forage, feeding and altitude.",
+        description="Cross-checks invented data: honey by apiary and season, with forage, feeding and "
+        "altitude.",
     )
     demo.add_argument(
         "--save", metavar="FILE", help="also write the data as CSV, to try 'mixbridge check' on it"
@@ -148,7 +153,8 @@ def _demo(options: argparse.Namespace) -> int:
     if not options.json:
         print(
             "\nInvented data. The same on a file of your own:\n"
-            "  mixbridge check FILE --formula 'honey ~ forage + feeding + altitude' --unit apiary --period season"
+            "  mixbridge check FILE --formula 'honey ~ forage + feeding + altitude' "
+            "--unit apiary --period season"
         )
     return DONE
 

@@ -179,6 +179,7 @@ class Study:
         Parameters
         ----------
         kind : {"gls", "minque"}
+            What is iterated: generalised least squares, or minimum-norm estimation of the components.
         start : {"pooled", "within", "between"} or float
             Coefficients, or ratio, to start from; ``"minque"`` starts from a ratio (``"pooled"`` is ratio 0).
 
@@ -190,13 +191,15 @@ class Study:
         return iterate(self.curve, kind, start)
 
     def quasi_demeaned(self, route: str, **conventions: object) -> pd.DataFrame:
-        """Return the rows ``z_it - lambda_i zbar_i`` whose least squares reproduces the coefficients of a
-        curve route.
+        """Return the quasi-demeaned rows ``z_it - lambda_i zbar_i`` of a route.
+
+        Ordinary least squares on them reproduces the coefficients of the route.
 
         Parameters
         ----------
         route : str
-            A route with a ratio.
+            A route with a variance ratio; ``"within"`` has an infinite one, which gives deviations from unit
+            means.
         **conventions
             As in `fit`.
 
@@ -204,11 +207,17 @@ class Study:
         -------
         DataFrame
             Columns of the design, the outcome last; the index is that of the rows used.
+
+        Raises
+        ------
+        OptionError
+            If the route has no variance ratio.
         """
         fit = self.fit(route, **conventions)
         if not np.isfinite(fit.ratio) and not np.isposinf(fit.ratio):
             raise OptionError(
-                f"route {route!r} has no variance ratio ({fit.status}), so no rows can be quasi-demeaned for it."
+                f"route {route!r} has no variance ratio ({fit.status}), "
+                "so no rows can be quasi-demeaned for it."
             )
         counts = np.asarray(self.opened.counts)
         weight = 1.0 - 1.0 / np.sqrt(1.0 + counts * fit.ratio)
@@ -223,7 +232,11 @@ class Study:
         )
 
     def to_dict(self) -> dict[str, Any]:
-        """Return the whole record, unrounded, with the closed moments: everything in it can be recomputed from them."""
+        """Return the whole record, unrounded, with the closed moments.
+
+        Everything in it can be recomputed from these moments. JSON-ready; what is not a finite number is a
+        string or None.
+        """
         return study_record(self)
 
     def __str__(self) -> str:
@@ -233,8 +246,8 @@ class Study:
     def __repr__(self) -> str:
         """Return a one-line form."""
         return (
-            f"<Study {self.panel.formula!r}, unit {self.panel.unit_name!r}: {self.panel.n} rows, {self.panel.N} units, "
-            f"primary {self.primary!r}; print it for the first screen>"
+            f"<Study {self.panel.formula!r}, unit {self.panel.unit_name!r}: {self.panel.n} rows, "
+            f"{self.panel.N} units, primary {self.primary!r}; print it for the first screen>"
         )
 
     def _intervals(self, fit: Fit) -> dict[str, Interval]:
@@ -308,7 +321,8 @@ def crosscheck(
     Examples
     --------
     >>> import mixbridge
-    >>> study = mixbridge.crosscheck("honey ~ forage + feeding + altitude", mixbridge.demo.apiaries(), unit="apiary")
+    >>> data = mixbridge.demo.apiaries()
+    >>> study = mixbridge.crosscheck("honey ~ forage + feeding + altitude", data, unit="apiary")
     >>> study.fit("reml").status
     'fitted'
     """

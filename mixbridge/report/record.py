@@ -19,7 +19,18 @@ RECORD_VERSION = 1
 
 
 def study_record(study: StudyView) -> dict[str, Any]:
-    """Return a study as nested lists, numbers and strings (JSON-ready; what is not a finite number is a string or null)."""
+    """Return a study as nested lists, numbers and strings, ready for JSON.
+
+    Parameters
+    ----------
+    study : StudyView
+
+    Returns
+    -------
+    dict
+        Unrounded, versioned, with the closed moments. Infinite numbers are the strings ``"inf"`` and
+        ``"-inf"``, undefined ones None.
+    """
     panel = study.panel
     return {
         "format": RECORD_FORMAT,
@@ -57,7 +68,17 @@ def study_record(study: StudyView) -> dict[str, Any]:
 
 
 def fit_record(fit: Fit) -> dict[str, Any]:
-    """Return one fit as plain values."""
+    """Return one fit as plain values.
+
+    Parameters
+    ----------
+    fit : Fit
+
+    Returns
+    -------
+    dict
+        Components are variances, ``standard_errors`` are standard deviations; numbers as in `study_record`.
+    """
     record = {
         "route": fit.route,
         "conventions": {key: _plain(value) for key, value in fit.conventions.items()},

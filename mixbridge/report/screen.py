@@ -19,6 +19,7 @@ from mixbridge.routes import REFERENCE_ROUTES, Fit
 __all__ = ["StudyView", "study_screen"]
 
 LINES = 40
+"""Most lines of the first screen."""
 
 
 class StudyView(Protocol):
@@ -51,7 +52,17 @@ class StudyView(Protocol):
 
 
 def study_screen(study: StudyView) -> str:
-    """Return the first screen of a study."""
+    """Return the first screen of a study.
+
+    Parameters
+    ----------
+    study : StudyView
+
+    Returns
+    -------
+    str
+        At most 40 lines of at most 100 columns; terms that find no room are counted, never cut silently.
+    """
     head, components, foot = _rows_used(study), _components(study), _cautions(study)
     terms = len(study.curve.names)
     for shown in range(terms, 0, -1):
@@ -110,18 +121,18 @@ def _rows_used(study: StudyView) -> list[str]:
             else interval(weights.iloc[0], weights.iloc[-1], 3)
         )
         lines.append(
-            f"  primary   {study.primary} ({fit.status}): ratio ψ {number(fit.ratio)}, ICC {number(fit.icc, 3)}, "
-            f"quasi-demeaning λ {span}"
+            f"  primary   {study.primary} ({fit.status}): ratio ψ {number(fit.ratio)}, "
+            f"ICC {number(fit.icc, 3)}, quasi-demeaning λ {span}"
         )
         if fit.certificate is not None and fit.certificate.excluded:
             more = len(fit.certificate.stationary) > 1
             others = f"; {len(fit.certificate.stationary)} stationary points" if more else ""
-            lines.append(
-                f"  optimum   bounded: no ratio is better by {fit.certificate.epsilon:.0e} in deviance{others}"
-            )
+            bounded = f"no ratio is better by {fit.certificate.epsilon:.0e} in deviance"
+            lines.append(f"  optimum   bounded: {bounded}{others}")
         elif fit.certificate is not None:
             lines.append(
-                "  optimum   NOT bounded: a better ratio could not be excluded, see the certificate of the fit"
+                "  optimum   NOT bounded: a better ratio could not be excluded, "
+                "see the certificate of the fit"
             )
     else:
         lines.append(f"  primary   {study.primary}: {fit.status}")
@@ -132,14 +143,18 @@ def _rows_used(study: StudyView) -> list[str]:
 
 
 def _agreement(study: StudyView, most: int) -> list[str]:
-    """Return the two tables of agreement: random-effects routes as classes, other routes as gaps; `most` terms."""
+    """Return the two tables of agreement, of at most `most` terms.
+
+    Random-effects routes are counted by class of their gaps; other routes are shown with their gaps.
+    """
     table, primary = study.ledger, study.primary
     votes = [key for key in study.fits if key not in REFERENCE_ROUTES and key != primary]
     thresholds = Thresholds()
     lines = [
-        f"Do {len(votes)} other random-effects routes agree with {primary}? {study.confidence:.0%} intervals, "
-        f"{study.reference} reference; immaterial:",
-        f"gap below {thresholds.gap:g} standard errors (se) of {primary} and half-widths within {thresholds.width:.0%}",
+        f"Do {len(votes)} other random-effects routes agree with {primary}? "
+        f"{study.confidence:.0%} intervals, {study.reference} reference; immaterial:",
+        f"gap below {thresholds.gap:g} standard errors (se) of {primary} "
+        f"and half-widths within {thresholds.width:.0%}",
     ]
     beside = [key for key in REFERENCE_ROUTES if key in study.fits and key != primary]
     terms = [str(term) for term in dict.fromkeys(table["term"])]
@@ -149,10 +164,11 @@ def _agreement(study: StudyView, most: int) -> list[str]:
     rows = [["term", primary, "se", "other routes", "widest gap (se)"]]
     for term in shown:
         part = grouped[term].set_index("route")
-        base = part.loc[primary]
+        base = _row(part, primary)
         there = [key for key in votes if key in part.index]
         gaps = part.loc[there, "gap_in_se"].dropna()
-        widest = f"{signed(gaps[gaps.abs().idxmax()])} {gaps.abs().idxmax()}" if len(gaps) else "-"
+        far = str(gaps.abs().idxmax()) if len(gaps) else ""
+        widest = f"{signed(float(gaps[far]))} {far}" if far else "-"
         counts = part.loc[there, "verdict"].value_counts()
         classes = (
             ", ".join(f"{counts[name]} {name}" for name in CLASSES if name in counts) or "none available"
@@ -170,7 +186,7 @@ def _agreement(study: StudyView, most: int) -> list[str]:
         rows = [["term", *(key.replace("_", " ") for key in beside)]]
         for term in shown:
             part = grouped[term].set_index("route")
-            rows.append([term, *(_beside(part.loc[key]) for key in beside)])
+            rows.append([term, *(_beside(_row(part, key)) for key in beside)])
         lines += _fitted(rows, right=range(1, 1 + len(beside)))
     if len(shown) < len(terms):
         worst = [_worst(grouped[term], votes) for term in terms if term not in shown]
@@ -186,6 +202,11 @@ def _fitted(rows: list[list[str]], right: Sequence[int]) -> list[str]:
     widths = [max(len(row[j]) for row in rows) for j in range(1, len(rows[0]))]
     room = max(WIDTH - 2 - sum(widths) - 2 * len(widths), 8)
     return columns([[shorten(row[0], room), *row[1:]] for row in rows], right=right)
+
+
+def _row(part: pd.DataFrame, route: str) -> pd.Series:
+    """Return the line of a route from the ledger of one term, which `route` indexes."""
+    return part.loc[[route]].iloc[0]
 
 
 def _beside(row: pd.Series) -> str:
@@ -236,7 +257,8 @@ def _cautions(study: StudyView) -> list[str]:
     counts = {verdict: sum(item.verdict == verdict for item in results) for verdict in ("holds", "FAILS")}
     text = f"Identities, which check the arithmetic and not the model: {counts['holds']} hold"
     if counts["FAILS"]:
-        text += f", {counts['FAILS']} FAIL ({_join([item.key for item in results if item.verdict == 'FAILS'], 30)})"
+        failed = [item.key for item in results if item.verdict == "FAILS"]
+        text += f", {counts['FAILS']} FAIL ({_join(failed, 30)})"
     return [
         text + ".",
         "All routes share one covariance model and agree together when it is wrong; agreement is no",

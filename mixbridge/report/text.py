@@ -55,6 +55,15 @@ def columns(
         The first one is the heading.
     right : sequence of int
         Columns set flush right.
+    indent : int
+        Spaces before each line.
+    gap : int
+        Spaces between columns.
+
+    Returns
+    -------
+    list of str
+        Lines without trailing spaces.
     """
     widths = [max(len(row[j]) for row in rows) for j in range(len(rows[0]))]
     lines = []
