@@ -1,0 +1,123 @@
+"""Identity 11: the ends of the curve, and what one-row units do not change."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from mixbridge.errors import IdentificationError
+from mixbridge.ratio import curve_of
+from mixbridge.reconcile.identities.plain import EPS, largest, least_squares, plain_of
+from mixbridge.reconcile.identities.registry import Compared, Unmet, identity
+from mixbridge.reconcile.identities.setting import Setting, multiple
+
+__all__: list[str] = []
+
+SIZE = "relative to the coefficient or its standard error, whichever is larger"
+
+
+@identity(
+    number=11,
+    name="pooled end of the curve",
+    statement="generalised least squares at ratio 0 = ordinary least squares on all rows",
+    source="Fuller & Battese 1974",
+)
+def pooled_end(setting: Setting) -> Compared | Unmet:
+    """Compare the engine's curve at 0 with ordinary least squares from the total products, and with the rows if at hand."""
+    missing = setting.missing("pooled")
+    if missing:
+        return Unmet(missing)
+    plain, left = setting.plain, setting.fits["pooled"].beta
+    total = np.linalg.lstsq(*_split(plain.stacked(plain.sizes)), rcond=None)[0]
+    right = plain.beta(total)
+    solved = plain.at(0.0)
+    size, amplified = plain.bounds(right, solved, setting.curve.n - plain.rank)
+    tolerance = multiple(plain.rank) * amplified
+    at, difference = largest(left, right, size, tolerance)
+    name = setting.curve.names[at]
+    return Compared(
+        "any panel",
+        left[at],
+        right[at],
+        f"{name}: pooled",
+        f"{name}: singular value decomposition of the total products",
+        difference[at],
+        tolerance[at],
+        f"32 (columns + 1) x 2.2e-16 x condition {solved.condition:.3g} x amplification in this coefficient; {SIZE}",
+    )
+
+
+@identity(
+    number=11,
+    name="within end of the curve",
+    statement="slopes of generalised least squares as the ratio grows without bound = within slopes",
+    source="Maddala 1971; Hausman & Taylor 1981",
+)
+def within_end(setting: Setting) -> Compared | Unmet:
+    """Compare the curve at a ratio beyond rounding with the within fit."""
+    return _slopes(setting, setting.curve.at(1.0 / (EPS**2 * setting.curve.sizes[0])).beta, "curve at an endless ratio")
+
+
+@identity(
+    number=11,
+    name="one-row units",
+    statement="units with one row leave the within slopes unchanged",
+    source="they have no deviations from their own mean",
+)
+def one_row_units(setting: Setting) -> Compared | Unmet:
+    """Compare the within slopes with the end of the curve of the panel without one-row units."""
+    moments = setting.curve.moments
+    if 1 not in moments.sizes:
+        return Unmet("one-row units: there are none")
+    if len(moments.sizes) == 1:
+        return Unmet("units with two rows: there are none")
+    try:
+        shorter = curve_of(moments.without_sizes(1))
+    except IdentificationError as error:
+        return Unmet(f"estimable without one-row units: {error}")
+    right = shorter.at(1.0 / (EPS**2 * shorter.sizes[0])).beta
+    lost = ~shorter.free_within
+    return _slopes(setting, np.where(lost, np.nan, right), "curve without one-row units, endless ratio", shorter.condition)
+
+
+def _slopes(setting: Setting, right: np.ndarray, what: str, condition: float = 1.0) -> Compared | Unmet:
+    """Compare the within fit with other figures for its slopes."""
+    missing = setting.missing("within")
+    if missing:
+        return Unmet(missing)
+    left = setting.fits["within"].beta
+    free = np.flatnonzero(np.isfinite(left))
+    size, amplified, inner = within_bounds(setting, free)
+    tolerance = multiple(setting.plain.rank) * max(condition, setting.curve.condition) * amplified
+    at, difference = largest(left[free], right[free], size, tolerance)
+    name = setting.curve.names[free[at]]
+    return Compared(
+        "slopes estimable from within variation",
+        left[free[at]],
+        right[free[at]],
+        f"{name}: within",
+        f"{name}: {what}",
+        difference[at],
+        tolerance[at],
+        f"32 (columns + 1) x 2.2e-16 x condition of X {max(condition, setting.curve.condition):.3g} x condition of QX "
+        f"{inner:.3g} x amplification in this coefficient; {SIZE}",
+    )
+
+
+def within_bounds(setting: Setting, free: np.ndarray) -> tuple[np.ndarray, np.ndarray, float]:
+    """Return size and amplification (as `Plain.bounds`) of the within slopes, and the condition of QX."""
+    plain, kept = setting.plain, setting.curve.within_span.kept
+    solved = least_squares(plain.within[:, [*kept, plain.rank]])
+    reach = np.zeros(plain.rank)
+    reach[kept] = np.sqrt((solved.root**2).sum(axis=1)) * np.diag(plain.back)[kept]
+    beta = np.abs(setting.fits["within"].beta)
+    size = np.maximum(beta, reach * np.sqrt(solved.residual / max(setting.curve.df_within, 1)))
+    total = plain.stacked(plain.sizes)[:, plain.rank]  # the engine subtracts the pooled fit first, between variation included
+    amplified = solved.condition * reach * np.sqrt(total @ total) / size
+    return size[free], np.maximum(amplified[free], 1.0), solved.condition
+
+
+def _split(factor: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    return factor[:, :-1], factor[:, -1]
+
+
+__all__ += ["within_bounds"]

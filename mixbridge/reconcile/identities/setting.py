@@ -1,0 +1,157 @@
+"""What the checks may look at: the curve, the routes fitted on it, the plain algebra, and rows where they are at hand."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from mixbridge.correlated.means import with_unit_means
+from mixbridge.moments import Moments, noise
+from mixbridge.ratio import Curve
+from mixbridge.reconcile.identities.plain import EPS, Plain, Solved, plain_of
+from mixbridge.routes import Fit
+
+__all__ = ["Rows", "Setting", "multiple", "setting_of"]
+
+FloatArray = NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Rows:
+    """The rows that the moments were taken from, in any order.
+
+    Attributes
+    ----------
+    x : ndarray of shape (n, p)
+        Design columns in the order of the formula.
+    y : ndarray of shape (n,)
+        Outcome.
+    codes : ndarray of int, shape (n,)
+        Unit of each row, 0 to N - 1.
+    """
+
+    x: FloatArray
+    y: FloatArray
+    codes: NDArray[np.intp]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Setting:
+    """One panel with its fits.
+
+    Attributes
+    ----------
+    curve : Curve
+    fits : mapping of str to Fit
+        By ledger key; fits on other rows are left out.
+    rows : Rows or None
+    plain : Plain
+        The same moments in plain algebra.
+    solved : mapping of str to Solved
+        Plain generalised least squares at the components of each random-effects fit, pooled included.
+    with_means : Plain
+        The same panel with unit means added.
+    source : mapping of str to str
+        Column of `with_means` that is a mean -> the column it is the mean of.
+    """
+
+    curve: Curve
+    fits: Mapping[str, Fit]
+    rows: Rows | None
+    plain: Plain
+    solved: Mapping[str, Solved]
+    with_means: Plain
+    source: Mapping[str, str]
+
+    def on_curve(self) -> Iterator[tuple[str, Fit]]:
+        """Yield the fits that are generalised least squares at a finite ratio."""
+        for key in self.solved:
+            yield key, self.fits[key]
+
+    def missing(self, *keys: str) -> str | None:
+        """Say which of some routes has no estimates here and why; None if all have."""
+        for key in keys:
+            if key not in self.fits:
+                return f"route {key} was not fitted on these rows"
+            if not self.fits[key].estimated:
+                return f"route {key}: {self.fits[key].status}"
+        return None
+
+    @property
+    def balanced(self) -> bool:
+        """Whether all units have the same size."""
+        return len(self.curve.sizes) == 1
+
+    @property
+    def closed(self) -> bool:
+        """Whether the column space of X is closed under unit averaging: ``rank [PX, QX] = K_p + K_w`` equals K."""
+        return self.curve.rank_between + self.curve.rank_within == self.curve.rank
+
+    @property
+    def ranks(self) -> str:
+        """The ranks in words."""
+        c = self.curve
+        return f"rank X = {c.rank}, rank PX = {c.rank_between}, rank QX = {c.rank_within}"
+
+    @property
+    def stored(self) -> FloatArray:
+        """Bound per design column, over all rows and in the units of the data, for what rounding of the stored rows leaves."""
+        moments, bound = self.curve.moments, np.zeros(self.curve.rank)
+        floor = noise(moments) * moments.scale
+        for j, name in enumerate(moments.design):
+            if name != moments.constant:
+                bound[j] = floor[moments.columns.index(name)]
+        return bound
+
+    def engine_total(self, psi: float) -> float:
+        """Return the weighted sum of squares of the outcome as the engine holds it (pooled residuals), in scaled units."""
+        p, weights = self.curve.rank, self.curve.sizes / (1.0 + self.curve.sizes * psi)
+        whole = self.curve.within_products[p, p] + weights @ self.curve.between_products[:, p, p]
+        return float(whole) * self.curve.unit / self.plain.unit**2
+
+    def focus(self) -> float:
+        """Return the ratio at which curve-wide identities are looked at: of `reml`, else of another route, else one."""
+        keys = [key for key in ("reml", *self.solved) if key in self.solved and components_ratio(self.fits[key]) > 0.0]
+        return components_ratio(self.fits[keys[0]]) if keys else 1.0
+
+
+def components_ratio(fit: Fit) -> float:
+    """Return the ratio of the two components that a fit states."""
+    return fit.unit_variance / fit.idiosyncratic_variance
+
+
+def multiple(columns: int) -> float:
+    """Return the multiple of unit rounding allowed per unit of condition: 32 for each column of the matrix factored.
+
+    The textbook constant of a QR with c columns is of the order of c; 32 leaves room for the two sides and the maps between units.
+    """
+    return 32.0 * (columns + 1) * EPS
+
+
+def setting_of(
+    curve: Curve, fits: Mapping[str, Fit], rows: Rows | None = None, with_means: tuple[Moments, Mapping[str, str]] | None = None
+) -> Setting:
+    """Prepare what the checks share.
+
+    Parameters
+    ----------
+    curve : Curve
+    fits : mapping of str to Fit
+    rows : Rows, optional
+    with_means : (Moments, mapping), optional
+        Moments with unit means from elsewhere, and which column is the mean of which; taken from the moments unless given.
+    """
+    usable = {key: fit for key, fit in fits.items() if fit.rows == curve.n and fit.terms == curve.names}
+    plain = plain_of(curve.moments)
+    solved = {}
+    for key, fit in usable.items():
+        ratio = components_ratio(fit)
+        if fit.estimated and np.isfinite(fit.ratio) and np.isfinite(ratio) and ratio >= 0.0:
+            solved[key] = plain.at(ratio)
+    if with_means is None:
+        own = with_unit_means(curve.moments)
+        with_means = own.moments, own.source
+    return Setting(curve, usable, rows, plain, solved, plain_of(with_means[0]), with_means[1])
