@@ -2,11 +2,12 @@
 
 from mixbridge.moments.closed import Moments, close, collect
 from mixbridge.moments.columns import Span, column_table, dependency_text, noise, span_of
-from mixbridge.moments.factors import factor_from_rows, stack_factors
-from mixbridge.moments.opened import Block, OpenMoments, gather, within_factor
+from mixbridge.moments.factors import factor_from_rows, stack_factors, upper_factor
+from mixbridge.moments.opened import Block, Blocks, OpenMoments, gather, within_factor
 
 __all__ = [
     "Block",
+    "Blocks",
     "Moments",
     "OpenMoments",
     "Span",
@@ -19,5 +20,6 @@ __all__ = [
     "noise",
     "span_of",
     "stack_factors",
+    "upper_factor",
     "within_factor",
 ]

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -15,7 +15,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from mixbridge.errors import DataError
 from mixbridge.moments.factors import eigen_factor, factor_from_products, factor_from_rows, stack_factors
-from mixbridge.moments.opened import OpenMoments, gather, within_factor
+from mixbridge.moments.opened import Block, Blocks, OpenMoments, gather, within_factor
 
 __all__ = ["Moments", "close", "collect"]
 
@@ -122,7 +122,7 @@ class Moments:
         unit = unit.astype(np.intp, copy=False)
         labels = tuple(names) if names is not None else tuple(f"x{j}" for j in range(rows.shape[1]))
 
-        def blocks() -> Any:
+        def blocks() -> Iterator[Block]:
             for start in range(0, unit.size, BLOCK_ROWS):
                 stop = start + BLOCK_ROWS
                 yield unit[start:stop], rows[start:stop], response[start:stop]
@@ -131,14 +131,34 @@ class Moments:
         return collect(blocks, (*labels, outcome), keys)[1]
 
     def without_sizes(self, *sizes: int) -> Moments:
-        """Leave out every unit of the given sizes (one-row units: ``without_sizes(1)``)."""
+        """Leave out every unit of the given sizes.
+
+        Parameters
+        ----------
+        *sizes : int
+            Sizes to leave out; ``without_sizes(1)`` drops the one-row units.
+
+        Returns
+        -------
+        Moments
+
+        Raises
+        ------
+        DataError
+            If no unit is left.
+        """
         keep = ~np.isin(self.sizes, sizes)
         if not keep.any():
             raise DataError(f"no unit is left without the sizes {sorted(sizes)}.")
-        return _replace(self, sizes=self.sizes[keep], counts=self.counts[keep], between=self.between[keep])
+        return _frozen(
+            replace(self, sizes=self.sizes[keep], counts=self.counts[keep], between=self.between[keep])
+        )
 
     def __add__(self, other: Moments) -> Moments:
-        """Pool with moments of other units (a unit must not be in both: closed moments hold no keys to check it)."""
+        """Pool with moments of other units.
+
+        A unit must not be in both; closed moments hold no keys to check it.
+        """
         if (self.design, self.constant, self.outcome) != (other.design, other.constant, other.outcome):
             raise DataError(
                 "moments of different designs cannot be pooled: "
@@ -153,7 +173,7 @@ class Moments:
         for size, count, factor in zip(other.sizes, other.counts, other.between @ move, strict=True):
             parts.setdefault(int(size), []).append((int(count), factor))
         sizes = sorted(parts)
-        return _replace(
+        pooled = replace(
             self,
             magnitude=np.maximum(self.magnitude, other.magnitude),
             sizes=np.array(sizes),
@@ -162,9 +182,16 @@ class Moments:
             between=np.array([stack_factors(*(factor for _, factor in parts[size])) for size in sizes]),
             note="pooled from parts",
         )
+        return _frozen(pooled)
 
     def to_record(self) -> dict[str, Any]:
-        """Return the moments as plain lists and numbers, with a checksum over all of them."""
+        """Return the moments as plain lists and numbers, with a checksum over all of them.
+
+        Returns
+        -------
+        dict
+            JSON-ready: ``format``, ``version``, every attribute by name, ``checksum``.
+        """
         body: dict[str, Any] = {"format": "mixbridge-moments", "version": 1}
         for name in self.__slots__:
             value = getattr(self, name)
@@ -174,7 +201,21 @@ class Moments:
 
     @classmethod
     def from_record(cls, record: dict[str, Any]) -> Moments:
-        """Rebuild moments from `to_record`; refuses a record whose checksum does not fit."""
+        """Rebuild moments from the record that `to_record` made.
+
+        Parameters
+        ----------
+        record : dict
+
+        Returns
+        -------
+        Moments
+
+        Raises
+        ------
+        DataError
+            If this is no such record, or if its checksum does not fit.
+        """
         body = {key: value for key, value in record.items() if key != "checksum"}
         if body.get("format") != "mixbridge-moments" or body.get("version") != 1:
             raise DataError("this is not a record of moments of version 1.")
@@ -182,30 +223,50 @@ class Moments:
             raise DataError(
                 "the checksum of the moments does not fit their content: the record was changed or damaged."
             )
-        arrays = {
-            name: np.array(body[name], dtype=float)
-            for name in ("shift", "scale", "magnitude", "within", "between")
-        }
-        whole = {name: np.array(body[name], dtype=np.int64) for name in ("sizes", "counts")}
         return _frozen(
             cls(
-                tuple(body["design"]), body["constant"], body["outcome"], note=body["note"], **arrays, **whole
+                design=tuple(body["design"]),
+                constant=body["constant"],
+                outcome=body["outcome"],
+                shift=np.array(body["shift"], dtype=float),
+                scale=np.array(body["scale"], dtype=float),
+                magnitude=np.array(body["magnitude"], dtype=float),
+                sizes=np.array(body["sizes"], dtype=np.int64),
+                counts=np.array(body["counts"], dtype=np.int64),
+                within=np.array(body["within"], dtype=float),
+                between=np.array(body["between"], dtype=float),
+                note=body["note"],
             )
         )
 
     def save(self, path: str | Path) -> None:
-        """Write the moments as one JSON file (numbers in shortest exact form)."""
+        """Write the moments as one JSON file, numbers in shortest exact form.
+
+        Parameters
+        ----------
+        path : str or Path
+        """
         Path(path).write_text(json.dumps(self.to_record()), encoding="utf-8")
 
     @classmethod
     def load(cls, path: str | Path) -> Moments:
-        """Read moments written by `save`."""
+        """Read moments written by `save`.
+
+        Parameters
+        ----------
+        path : str or Path
+
+        Returns
+        -------
+        Moments
+        """
         return cls.from_record(json.loads(Path(path).read_text(encoding="utf-8")))
 
 
-def collect(blocks: Any, columns: tuple[str, ...], keys: pd.Index) -> tuple[OpenMoments, Moments]:
-    """Take open and closed moments of rows in blocks: one pass, and a second one where the products lose
-    digits.
+def collect(blocks: Blocks, columns: tuple[str, ...], keys: pd.Index) -> tuple[OpenMoments, Moments]:
+    """Take open and closed moments of rows in blocks.
+
+    One pass over the rows, and a second one where the products lose digits.
 
     Parameters
     ----------
@@ -221,13 +282,16 @@ def collect(blocks: Any, columns: tuple[str, ...], keys: pd.Index) -> tuple[Open
     OpenMoments, Moments
     """
     opened = gather(blocks(), columns, keys)
+    source: Blocks = blocks
     if len(opened.keys) != len(keys):
         place = keys.get_indexer(opened.keys)
         recode = np.zeros(len(keys), dtype=np.intp)
         recode[place] = np.arange(place.size)
-        source = lambda: ((recode[codes], x, y) for codes, x, y in blocks())  # noqa: E731
-    else:
-        source = blocks
+
+        def recoded() -> Iterator[Block]:
+            return ((recode[codes], x, y) for codes, x, y in blocks())
+
+        source = recoded
     if opened.loss.max() > LOSS_LIMIT or factor_from_products(opened.within) is None:
         opened = opened.with_factor(within_factor(source(), opened))
     return opened, close(opened)
@@ -238,6 +302,19 @@ def close(opened: OpenMoments) -> Moments:
 
     The shift becomes the grand mean, the scale a power of two near the total standard deviation, the explicit
     constant leaves z, and the unit means are gathered by size.
+
+    Parameters
+    ----------
+    opened : OpenMoments
+
+    Returns
+    -------
+    Moments
+
+    Raises
+    ------
+    DataError
+        If the outcome has the same value in every row.
     """
     flat = np.diag(opened.within) == 0.0
     level = (opened.means.max(axis=0) == opened.means.min(axis=0)) & flat
@@ -257,15 +334,11 @@ def close(opened: OpenMoments) -> Moments:
     factor = opened.factor
     note = "within products by QR of unit-centred rows"
     if factor is None:
-        factor, note = (
-            factor_from_products(opened.within),
-            "within products of rows measured from their unit's first",
-        )
+        factor = factor_from_products(opened.within)
+        note = "within products of rows measured from their unit's first"
     if factor is None:
-        factor, note = (
-            eigen_factor(opened.within),
-            "ill-conditioned within products without a second pass over the rows",
-        )
+        factor = eigen_factor(opened.within)
+        note = "ill-conditioned within products without a second pass over the rows"
     sizes, class_of, counts = np.unique(opened.counts, return_inverse=True, return_counts=True)
     order = np.argsort(class_of, kind="stable")
     rows = np.ones((order.size, keep.size + 1))
@@ -291,7 +364,7 @@ def close(opened: OpenMoments) -> Moments:
 
 
 def _means_factor(rows: FloatArray) -> FloatArray:
-    """Return the factor of the unit means of one size class, from their products where those carry the digits."""
+    """Return the factor of the unit means of one size, from their products where these carry the digits."""
     if rows.shape[0] > 8 * rows.shape[1]:
         factor = factor_from_products(rows.T @ rows)
         if factor is not None:
@@ -305,11 +378,6 @@ def _frozen(moments: Moments) -> Moments:
         if isinstance(value, np.ndarray):
             value.setflags(write=False)
     return moments
-
-
-def _replace(moments: Moments, **changes: Any) -> Moments:
-    values = {name: getattr(moments, name) for name in moments.__slots__}
-    return _frozen(Moments(**{**values, **changes}))
 
 
 def _checksum(body: dict[str, Any]) -> str:

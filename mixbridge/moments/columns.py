@@ -1,4 +1,4 @@
-"""What each design column is made of: its class, its share of within variation, and exact dependencies among columns."""
+"""What each design column is made of: its class, its share of within variation, its exact dependencies."""
 
 from __future__ import annotations
 
@@ -63,13 +63,19 @@ def dependency_text(
     null : ndarray of shape (p,)
         Coefficients of the vanishing combination.
     names : sequence of str
+        Names of the columns.
     small : ndarray of shape (p,), optional
         Typical size of each column; terms that contribute less than 1e-8 of the largest are left out as
         rounding.
+
+    Returns
+    -------
+    str
+        Coefficients as short fractions where these fit to nine digits.
     """
     values = -null / null[column]
     reach = np.abs(values) * (1.0 if small is None else small)
-    used = [j for j in np.flatnonzero(reach > 1e-8 * reach.max()) if j != column]
+    used = [j for j in np.flatnonzero(reach > 1e-8 * reach.max()).tolist() if j != column]
     if not used:
         return f"{names[column]} = 0"
     parts: list[str] = []
@@ -82,7 +88,17 @@ def dependency_text(
 
 
 def noise(moments: Moments) -> FloatArray:
-    """Bound per scaled column, over all rows (root sum of squares), for what rounding of the stored data leaves."""
+    """Bound what rounding of the stored data leaves in each scaled column.
+
+    Parameters
+    ----------
+    moments : Moments
+
+    Returns
+    -------
+    ndarray of shape (k,)
+        Root sum of squares over all rows, in units of `Moments.scale`.
+    """
     return np.asarray(4.0 * EPS * np.sqrt(moments.rows) * moments.magnitude / moments.scale)
 
 
@@ -115,12 +131,10 @@ def span_of(factor: FloatArray, floor: FloatArray, relative: float = 1e-12) -> S
             column = column - basis @ (basis.T @ column)
         rest = float(np.sqrt(column @ column))
         if rest < 1e-5 and kept:
-            coefficients = np.linalg.lstsq(
-                factor[:, kept] / length[kept], factor[:, j] / length[j], rcond=None
-            )[0]
-            rounding = (floor[j] + np.abs(coefficients) @ (floor[kept] / length[kept]) * length[j]) / length[
-                j
-            ]
+            earlier, target = factor[:, kept] / length[kept], factor[:, j] / length[j]
+            coefficients = np.linalg.lstsq(earlier, target, rcond=None)[0]
+            carried = np.abs(coefficients) @ (floor[kept] / length[kept]) * length[j]
+            rounding = (floor[j] + carried) / length[j]
             if rest <= relative + rounding:
                 values = coefficients * length[j] / length[kept]
                 used = np.abs(coefficients) > 1e-8

@@ -11,17 +11,23 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["PRODUCT_FLOOR", "eigen_factor", "factor_from_products", "factor_from_rows", "stack_factors"]
+__all__ = [
+    "PRODUCT_FLOOR",
+    "eigen_factor",
+    "factor_from_products",
+    "factor_from_rows",
+    "stack_factors",
+    "upper_factor",
+]
 
 FloatArray = NDArray[np.float64]
 
 PRODUCT_FLOOR = 1e-5
-"""Smallest eigenvalue of scaled products that is trusted: rounding then costs at most 1e-16 / 1e-5 = 1e-11."""
+"""Smallest eigenvalue of scaled products that is trusted; rounding then costs at most 1e-16 / 1e-5."""
 
 
 def factor_from_products(products: FloatArray) -> FloatArray | None:
-    """Return an upper triangular ``F`` with ``F'F = products``, or None where the products are too
-    ill-conditioned.
+    """Return an upper triangular ``F`` with ``F'F = products``, or None where rounding would show.
 
     Parameters
     ----------
@@ -48,6 +54,21 @@ def factor_from_products(products: FloatArray) -> FloatArray | None:
     return factor
 
 
+def upper_factor(rows: FloatArray) -> FloatArray:
+    """Return the triangular factor of a QR decomposition, ``F'F = rows'rows``.
+
+    Parameters
+    ----------
+    rows : ndarray of shape (m, k)
+
+    Returns
+    -------
+    ndarray of shape (min(m, k), k)
+        Upper triangular; the signs of its diagonal are those of the decomposition.
+    """
+    return np.asarray(np.linalg.qr(rows, mode="r"), dtype=float)
+
+
 def factor_from_rows(rows: FloatArray) -> FloatArray:
     """Return a square ``F`` with ``F'F = rows'rows``, by QR of the rows.
 
@@ -68,19 +89,41 @@ def factor_from_rows(rows: FloatArray) -> FloatArray:
     live = np.flatnonzero(length > 0.0)
     if live.size == 0:
         return factor
-    upper = np.linalg.qr(rows[:, live] / length[live], mode="r")
+    upper = upper_factor(rows[:, live] / length[live])
     factor[: upper.shape[0], live] = upper * length[live]
     return factor
 
 
 def eigen_factor(products: FloatArray) -> FloatArray:
-    """Return a square factor of products whose small eigenvalues are rounding: negative ones count as zero."""
+    """Return a square factor of products whose small eigenvalues are rounding.
+
+    Parameters
+    ----------
+    products : ndarray of shape (k, k)
+        Symmetric cross-products.
+
+    Returns
+    -------
+    ndarray of shape (k, k)
+        ``F`` with ``F'F`` the products, negative eigenvalues counted as zero; not triangular.
+    """
     length = np.sqrt(np.maximum(np.diag(products), 0.0))
     safe = np.where(length > 0.0, length, 1.0)
     values, vectors = np.linalg.eigh(products / np.outer(safe, safe))
-    return np.sqrt(np.maximum(values, 0.0))[:, None] * vectors.T * length
+    return np.asarray(np.sqrt(np.maximum(values, 0.0))[:, None] * vectors.T * length)
 
 
 def stack_factors(*factors: FloatArray) -> FloatArray:
-    """Return one square factor of the sum of the cross-products of several."""
+    """Return one square factor of the sum of the cross-products of several.
+
+    Parameters
+    ----------
+    *factors : ndarray of shape (m, k)
+        Factors, or rows, with the same columns.
+
+    Returns
+    -------
+    ndarray of shape (k, k)
+        As from `factor_from_rows`.
+    """
     return factor_from_rows(np.vstack(factors))

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -10,19 +10,23 @@ import pandas as pd
 from numpy.typing import NDArray
 
 try:  # scipy's compiled scatter-add; a public call would allocate all sums anew for each block
-    from scipy.sparse._sparsetools import csc_matvecs as _csc_matvecs
+    from scipy.sparse._sparsetools import csc_matvecs
+
+    COMPILED = True
 except ImportError:  # pragma: no cover
-    _csc_matvecs = None
+    COMPILED = False
 
 from mixbridge.errors import DataError
 from mixbridge.moments.factors import stack_factors
 
-__all__ = ["Block", "OpenMoments", "gather", "within_factor"]
+__all__ = ["Block", "Blocks", "OpenMoments", "add_by_unit", "gather", "within_factor"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.intp]
 Block = tuple[IntArray, FloatArray, FloatArray]
 """Unit codes of some rows, their design columns (b, p) and their outcome (b,)."""
+Blocks = Callable[[], Iterable[Block]]
+"""Gives the blocks of all rows afresh each time it is called."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,16 +78,16 @@ class OpenMoments:
         return int(self.counts.sum())
 
     def __add__(self, other: OpenMoments) -> OpenMoments:
-        """Merge with another part; units in both are joined by key (Chan, Golub & LeVeque 1983, eq. for two
-        samples; number from memory).
+        """Merge with another part; units in both are joined by key.
 
         The within product of a split unit grows by ``T1 T2 / (T1 + T2) d d'``, d the difference of its two
-        means.
+        means (Chan, Golub & LeVeque 1983, eq. for two samples; number from memory).
         """
         if self.columns != other.columns:
             raise DataError(
                 "moments with different columns cannot be merged: "
-                f"{list(self.columns)} against {list(other.columns)}. Build both from the same formula and levels."
+                f"{list(self.columns)} against {list(other.columns)}. "
+                "Build both from the same formula and levels."
             )
         moved = other.means + (other.shift - self.shift)
         place = self.keys.get_indexer(other.keys)
@@ -113,7 +117,17 @@ class OpenMoments:
         )
 
     def with_factor(self, factor: FloatArray) -> OpenMoments:
-        """Return the same moments with a within factor taken from the rows."""
+        """Return the same moments with a within factor taken from the rows.
+
+        Parameters
+        ----------
+        factor : ndarray of shape (k, k)
+            ``F'F = W``, as from `within_factor`.
+
+        Returns
+        -------
+        OpenMoments
+        """
         return replace(self, factor=factor)
 
 
@@ -155,9 +169,8 @@ def gather(blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index) ->
         if buffer.shape[0] < codes.size:
             buffer = np.empty((codes.size, k))
         if not all_seen:
-            new = np.flatnonzero(~seen[codes])[
-                ::-1
-            ]  # backwards, so that the first row of a unit is written last
+            # backwards, so that the first row of a unit is written last
+            new = np.flatnonzero(~seen[codes])[::-1]
             if new.size:
                 anchors[codes[new], :-1] = x[new]
                 anchors[codes[new], -1] = y[new]
@@ -215,11 +228,20 @@ def within_factor(blocks: Iterable[Block], opened: OpenMoments) -> FloatArray:
 
 
 def add_by_unit(sums: FloatArray, codes: IntArray, rows: FloatArray) -> None:
-    """Add each row to the line of its unit, in place, one row after the other: ``sums[codes[i]] += rows[i]``."""
+    """Add each row to the line of its unit, in place, row after row: ``sums[codes[i]] += rows[i]``.
+
+    Parameters
+    ----------
+    sums : ndarray of shape (N, k)
+        Changed in place; must be contiguous.
+    codes : ndarray of int, shape (b,)
+        Line of each row.
+    rows : ndarray of shape (b, k)
+    """
     n_units, k = sums.shape
     size = codes.size
-    if _csc_matvecs is not None:
-        _csc_matvecs(
+    if COMPILED:
+        csc_matvecs(
             n_units,
             size,
             k,
