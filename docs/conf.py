@@ -2,6 +2,8 @@
 
 from importlib.metadata import version as installed_version
 
+from mixbridge.routes import AXES, ROUTES
+
 project = "mixbridge"
 author = "The mixbridge developers"
 copyright = author
@@ -21,4 +23,21 @@ numpydoc_show_class_members = False  # autodoc lists the members already
 numpydoc_class_members_toctree = False
 autosummary_generate = False  # nothing is written into docs/
 
-myst_enable_extensions = ["dollarmath"]
+myst_enable_extensions = ["deflist", "dollarmath", "substitution"]
+
+
+def conventions() -> str:
+    """Write the package's table of conventions as a list, one entry per convention and group of routes."""
+    entries = []
+    for axis in AXES:
+        values = axis.allowed or ", ".join(f"`{value}`" for value in axis.values[1:])
+        every = set(axis.routes) == set(ROUTES)
+        routes = "every route" if every else ", ".join(f"`{route}`" for route in axis.routes)
+        entries.append(
+            f"`{axis.name}`\n: {axis.meaning[0].upper()}{axis.meaning[1:]}. Default `{axis.values[0]}`; "
+            f"else {values}. For {routes}. Source: {axis.source}."
+        )
+    return "\n\n".join(entries)
+
+
+myst_substitutions = {"conventions": conventions()}
