@@ -1,5 +1,4 @@
-"""Everything that follows from moments and one variance ratio ψ: the curve on which every random-effects
-route is a point.
+"""Generalised least squares as a curve in the variance ratio ψ: every random-effects route is a point on it.
 
 With ``Q`` the projection on deviations from unit means, ``P = I - Q``, and ``V / sigma_u^2 = I + psi ZZ'``,
 
@@ -22,8 +21,10 @@ from numpy.typing import NDArray
 from scipy.linalg import solve_triangular
 
 from mixbridge.errors import IdentificationError
-from mixbridge.moments import Moments
-from mixbridge.moments.columns import Span, dependency_text, noise, span_of
+from mixbridge.moments import Moments, Span
+from mixbridge.moments.coordinates import hidden, touched
+from mixbridge.moments.factors import root_of, upper_factor
+from mixbridge.moments.whitening import axes_of, identified, stack_sizes
 
 __all__ = ["Curve", "Point", "curve_of", "root_of"]
 
@@ -92,6 +93,8 @@ class Curve:
         Whitened coefficients of the unit-constant directions of the column space of X.
     within_root, between_root, unweighted_root : ndarray of shape (p, K_w), (p, K_p), (p, K_p)
         J with ``JJ'`` a generalised inverse of whitened ``X'QX``, of ``X'PX``, of ``sum xbar xbar'``.
+    between_null : ndarray of shape (p, p - K_p)
+        Whitened directions that do not vary between unit means.
     columns_within : int
         Number of columns of X that vary within units (the rank counts directions instead).
     within_residual : float
@@ -121,8 +124,10 @@ class Curve:
     within_root: FloatArray
     between_root: FloatArray
     unweighted_root: FloatArray
+    between_null: FloatArray
     columns_within: int
     condition: float
+    near_dependency: str
     within_residual: float
     reasons: Mapping[str, Mapping[str, str]] = field(default_factory=dict)
 
@@ -162,16 +167,34 @@ class Curve:
         return self.n - self.units - self.rank_within
 
     def weighted_between(self, weights: FloatArray) -> FloatArray:
-        """Return ``sum_T weights_T B_T``, whitened."""
+        """Return ``sum_T weights_T B_T``, whitened.
+
+        Parameters
+        ----------
+        weights : ndarray of shape (G,)
+
+        Returns
+        -------
+        ndarray of shape (p + 1, p + 1)
+        """
         return np.asarray(np.tensordot(weights, self.between_products, axes=1))
 
     def at(self, psi: float) -> Point:
-        """Return generalised least squares at a finite ψ, by QR of the stacked weighted factors."""
+        """Return generalised least squares at a finite ψ, by QR of the stacked weighted factors.
+
+        Parameters
+        ----------
+        psi : float
+            Variance ratio ``sigma_a^2 / sigma_u^2 >= 0``.
+
+        Returns
+        -------
+        Point
+        """
         p = self.rank
-        weights = np.sqrt(self.sizes / (1.0 + self.sizes * psi))
-        stacked = np.vstack([self.within, (weights[:, None, None] * self.between).reshape(-1, p + 1)])
+        stacked = self._stacked(psi)
         length = np.sqrt((stacked[:, :p] ** 2).sum(axis=0))
-        upper = np.linalg.qr(np.column_stack([stacked[:, :p] / length, stacked[:, p]]), mode="r")
+        upper = upper_factor(np.column_stack([stacked[:, :p] / length, stacked[:, p]]))
         slope = solve_triangular(upper[:p, :p], upper[:p, p]) / length
         root = solve_triangular(upper[:p, :p], np.eye(p)) / length[:, None]
         return Point(
@@ -183,28 +206,51 @@ class Curve:
         )
 
     def gls_root(self, psi: float) -> FloatArray:
-        """Return J with ``JJ' = A_xx(psi)^-1``, whitened."""
-        p = self.rank
-        weights = np.sqrt(self.sizes / (1.0 + self.sizes * psi))
-        between = (weights[:, None, None] * self.between).reshape(-1, p + 1)
-        return root_of(np.vstack([self.within, between])[:, :p])
+        """Return J with ``JJ' = A_xx(psi)^-1``, whitened.
+
+        Parameters
+        ----------
+        psi : float
+            Variance ratio.
+
+        Returns
+        -------
+        ndarray of shape (p, p)
+        """
+        return root_of(self._stacked(psi)[:, : self.rank])
 
     def loadings(self, white: FloatArray) -> tuple[float, FloatArray]:
-        """Return the within and, per size, the between sum of squares of the residual ``z'white``, in
-        whitened units.
+        """Return the within and, per size, the between sum of squares of the residual ``z'white``.
+
+        Parameters
+        ----------
+        white : ndarray of shape (p + 1,)
+            ``(-beta, 1)`` in whitened coordinates, as in `Point`.
 
         Returns
         -------
         float, ndarray of shape (G,)
-            ``e'Qe`` and ``rho_T = sum_{i: T_i = T} ebar_i^2``.
+            ``e'Qe`` and ``rho_T = sum_{i: T_i = T} ebar_i^2``, in whitened squared units of the outcome.
         """
         inside = self.within @ white
         means = self.between @ white
         return float(inside @ inside), np.asarray((means**2).sum(axis=1))
 
+    def _stacked(self, psi: float) -> FloatArray:
+        """Return a whitened factor of ``A(psi)``."""
+        return stack_sizes(self.within, self.between, np.sqrt(self.sizes / (1.0 + self.sizes * psi)))
+
 
 def curve_of(moments: Moments) -> Curve:
     """Reduce moments to a curve; refuses a design whose columns are dependent, naming the dependency.
+
+    Parameters
+    ----------
+    moments : Moments
+
+    Returns
+    -------
+    Curve
 
     Raises
     ------
@@ -212,205 +258,48 @@ def curve_of(moments: Moments) -> Curve:
         If the columns of X are exactly collinear, if there are no more rows than columns, or if X reproduces
         the outcome.
     """
-    names = moments.design
-    p = len(names)
+    p = len(moments.design)
     if p == 0:
         raise IdentificationError(
             "the formula has no column on its right side; write '1' for an intercept alone."
         )
-    z, to_model, offset, floor = _model_coordinates(moments)
-    within, between = moments.within @ z[1:], moments.between @ z
-    weights = np.sqrt(moments.sizes.astype(float))
-    stacked = np.vstack([within, (weights[:, None, None] * between).reshape(-1, p + 1)])
-    relative = 1e-7 if moments.note.startswith("ill-conditioned") else 1e-12
-    total = span_of(_small(stacked[:, :p]), floor[:p], relative)
-    sizes = 1.0 / np.abs(np.diag(to_model))
-    _refuse_collinear(total, to_model, names, sizes)
-    if moments.rows <= p:
-        raise IdentificationError(
-            f"{moments.rows} rows for {p} coefficients: no degrees of freedom are left. Use fewer columns or more rows."
-        )
-    within = np.where((within**2).sum(axis=0) > floor**2, within, 0.0)
-    within_span = span_of(_small(within[:, :p]), floor[:p], relative)
-    between_stack = _small((weights[:, None, None] * between).reshape(-1, p + 1)[:, :p])
-    between_span = span_of(between_stack, floor[:p], relative)
-    # unit-constant directions first, so that every matrix on the curve is graded along its axes
-    basis = np.hstack([within_span.null, np.eye(p)[:, within_span.kept]])
-    constants = within_span.null.shape[1]
-    between_plain, columns_within = between, int((within[:, :p] != 0.0).any(axis=0).sum())
-    plain, to_plain = to_model, to_model @ basis
-    within = np.column_stack([within[:, :p] @ basis, within[:, p]])
-    within[:, :constants] = 0.0
-    between = np.concatenate([between[:, :, :p] @ basis, between[:, :, p:]], axis=2)
-    stacked = np.vstack([within, (weights[:, None, None] * between).reshape(-1, p + 1)])
-    upper = np.linalg.qr(stacked, mode="r")
-    leftover = abs(float(upper[p, p]))
-    size = float(np.sqrt((stacked[:, p] ** 2).sum()))
-    if moments.rows > p and leftover <= 1e-13 * size + floor[p]:
-        raise IdentificationError(
-            f"the outcome {moments.outcome!r} is reproduced exactly by the covariates (perfect fit): there is no error left "
-            "to estimate variances from. Look for a covariate that is computed from the outcome."
-        )
-    upper_x, upper_xy = upper[:p, :p], upper[:p, p]
-    residual = float(upper[p, p])
-    inverse = solve_triangular(upper, np.eye(p + 1))  # (x*, y*) @ inverse is whitened
-    white_within, white_between = within @ inverse, between @ inverse
-    scale_y = moments.scale[-1]
-    to_beta = np.zeros((p, p + 1))
-    to_beta[:, :p] = scale_y * residual * (to_plain @ solve_triangular(upper_x, np.eye(p)))
-    to_beta[:, p] = scale_y * (to_plain @ solve_triangular(upper_x, upper_xy)) + offset
-    unit = float((scale_y * residual) ** 2)
-    length = np.sqrt((upper_x**2).sum(axis=0))
-    condition = float(np.linalg.cond(upper_x / length))
-    log_det = 2.0 * float(np.log(np.abs(np.diag(upper_x))).sum()) - 2.0 * float(
-        np.linalg.slogdet(to_plain)[1]
-    )
-    within_root = upper_x[:, constants:] @ root_of(within[:, constants:p])
-    inverse_basis = np.linalg.inv(basis)
-    between_root = upper_x @ (
-        inverse_basis[:, between_span.kept] @ root_of(between_stack[:, between_span.kept])
-    )
-    plain_stack = _small(between_plain.reshape(-1, p + 1)[:, :p])
-    unweighted_root = upper_x @ (
-        inverse_basis[:, between_span.kept] @ root_of(plain_stack[:, between_span.kept])
-    )
-    touched_within, touched_between = _touched(within_span, plain), _touched(between_span, plain)
-    inner = white_within @ np.append(
-        -within_root @ (within_root.T @ (white_within[:, :p].T @ white_within[:, p])), 1.0
-    )
-    left = float(np.sqrt(inner @ inner))
-    nothing = 1e-13 * float(np.sqrt((within[:, p] ** 2).sum())) / abs(residual) + floor[p] / abs(residual)
+    model, within_span, between_span = identified(moments)
+    axes = axes_of(moments, model, within_span)
+    within, between = axes.whitened(axes.within), axes.whitened(axes.between)
+    within_root = axes.within_root()
+    sizes = moments.sizes.astype(float)
     return Curve(
         moments=moments,
-        names=names,
-        sizes=moments.sizes.astype(float),
+        names=moments.design,
+        sizes=sizes,
         counts=moments.counts.astype(float),
-        within=white_within,
-        between=white_between,
-        within_products=white_within.T @ white_within,
-        between_products=np.matmul(white_between.transpose(0, 2, 1), white_between),
-        to_beta=to_beta,
-        unit=unit,
-        log_det=log_det,
+        within=within,
+        between=between,
+        within_products=within.T @ within,
+        between_products=np.matmul(between.transpose(0, 2, 1), between),
+        to_beta=axes.to_beta(model, moments.scale[-1]),
+        unit=float((moments.scale[-1] * axes.residual) ** 2),
+        log_det=axes.log_det(model),
         within_span=within_span,
         between_span=between_span,
-        free_within=~touched_within.any(axis=1),
-        free_between=~touched_between.any(axis=1),
-        constant_white=np.eye(p)[:, :constants],
+        free_within=~_any(touched(model, within_span)),
+        free_between=~_any(touched(model, between_span)),
+        constant_white=np.eye(p)[:, : axes.constants],
         within_root=within_root,
-        between_root=between_root,
-        unweighted_root=unweighted_root,
-        columns_within=columns_within,
-        condition=condition,
-        within_residual=left**2 if left > nothing else 0.0,
+        between_root=axes.between_root(model, between_span, np.sqrt(sizes)),
+        unweighted_root=axes.between_root(model, between_span, np.ones(len(sizes))),
+        between_null=axes.null(between_span),
+        columns_within=int(_any(model.within[:, :p].T != 0.0).sum()),
+        condition=axes.condition,
+        near_dependency=axes.near_dependency(model),
+        within_residual=axes.within_residual(within, within_root, model.floor[p]),
         reasons={
-            "within": _reasons(
-                within_span, plain, names, touched_within, "within units", sizes, moments.constant
-            ),
-            "between": _reasons(
-                between_span, plain, names, touched_between, "between unit means", sizes, moments.constant
-            ),
+            "within": hidden(model, within_span, "within units"),
+            "between": hidden(model, between_span, "between unit means"),
         },
     )
 
 
-def _model_coordinates(moments: Moments) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
-    """Return the map from ``(1, scaled z)`` to model columns and outcome, and back to coefficients.
-
-    With an explicit constant, model columns are centred and scaled; without one they are only scaled, since
-    moving the origin would change the model. Returned: map ``(k + 1, p + 1)``; L and o with ``beta = scale_y
-    L beta* + o``; and the rounding floor of each model column.
-    """
-    names, columns = moments.design, moments.columns
-    p, k = len(names), len(columns)
-    z = np.zeros((k + 1, p + 1))
-    to_model = np.zeros((p, p))
-    offset = np.zeros(p)
-    floor = np.zeros(p + 1)
-    bound = noise(moments)
-    free = moments.constant is None
-    intercept = None if free else names.index(str(moments.constant))
-    for j, name in enumerate(names):
-        if j == intercept:
-            z[0, j] = to_model[j, j] = 1.0
-            offset[j] = moments.shift[-1]
-            continue
-        at = columns.index(name)
-        z[at + 1, j] = 1.0
-        to_model[j, j] = 1.0 / moments.scale[at]
-        floor[j] = bound[at]
-        if free:
-            z[0, j] = moments.shift[at] / moments.scale[at]
-        else:
-            to_model[intercept, j] = -moments.shift[at] / moments.scale[at]
-    z[k, p] = 1.0
-    floor[p] = bound[-1]
-    if free:
-        z[0, p] = moments.shift[-1] / moments.scale[-1]
-    return z, to_model, offset, floor
-
-
-def _small(factor: FloatArray) -> FloatArray:
-    """Return a square factor with the same products."""
-    return np.linalg.qr(factor, mode="r") if factor.shape[0] > factor.shape[1] else factor
-
-
-def root_of(factor: FloatArray) -> FloatArray:
-    """Return J with ``JJ' = (F'F)^-1`` for F of full column rank."""
-    if factor.shape[1] == 0:
-        return np.zeros((0, 0))
-    length = np.sqrt((factor**2).sum(axis=0))
-    upper = np.linalg.qr(factor / length, mode="r")
-    return np.asarray(solve_triangular(upper, np.eye(upper.shape[0])) / length[:, None])
-
-
-def _touched(span: Span, to_model: FloatArray) -> NDArray[np.bool_]:
-    """Tell which coefficients (rows) each null direction (columns) touches; small against what it is made of is zero."""
-    null = np.abs(span.null)
-    touched = null > 1e-9 * null.max(axis=0, initial=0.0)
-    for j in np.flatnonzero((to_model != 0.0).sum(axis=1) > 1):  # the intercept, which collects all origins
-        touched[j] = np.abs(to_model[j] @ span.null) > 1e-9 * (np.abs(to_model[j]) @ null)
-    return np.asarray(touched)
-
-
-def _reasons(
-    span: Span,
-    to_model: FloatArray,
-    names: tuple[str, ...],
-    touched: NDArray[np.bool_],
-    where: str,
-    sizes: FloatArray,
-    intercept: str | None,
-) -> dict[str, str]:
-    """Say for each coefficient that is not estimable which dependency hides it."""
-    reasons: dict[str, str] = {}
-    null = to_model @ span.null
-    for j in np.flatnonzero(touched.any(axis=1)):
-        at = next(
-            (k for k in np.flatnonzero(touched[j]) if span.dependencies[k].column == j),
-            int(touched[j].argmax()),
-        )
-        dependency = span.dependencies[at]
-        if dependency.column == j and not dependency.others:
-            reasons[names[j]] = f"does not vary {where}"
-        else:
-            visible = np.where(touched[:, at], null[:, at], 0.0)
-            if where.startswith("within"):  # a constant drops out of deviations from unit means
-                visible[[name == intercept for name in names]] = 0.0
-            text = dependency_text(dependency.column, visible, names, sizes)
-            reasons[names[j]] = f"not separable {where}: {text}"
-    return reasons
-
-
-def _refuse_collinear(span: Span, to_model: FloatArray, names: tuple[str, ...], sizes: FloatArray) -> None:
-    if not span.dependencies:
-        return
-    null = to_model @ span.null
-    lines = [
-        dependency_text(dependency.column, null[:, at], names, sizes)
-        for at, dependency in enumerate(span.dependencies)
-    ]
-    raise IdentificationError(
-        f"the columns of the design are exactly collinear: {'; '.join(lines)}. "
-        "No data can tell these coefficients apart; leave one column of each dependency out of the formula."
-    )
+def _any(table: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Tell for each row whether anything in it is true."""
+    return np.asarray(table.any(axis=1))

@@ -10,12 +10,14 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.linalg import solve_triangular
 
 __all__ = [
     "PRODUCT_FLOOR",
     "eigen_factor",
     "factor_from_products",
     "factor_from_rows",
+    "root_of",
     "stack_factors",
     "upper_factor",
 ]
@@ -127,3 +129,22 @@ def stack_factors(*factors: FloatArray) -> FloatArray:
         As from `factor_from_rows`.
     """
     return factor_from_rows(np.vstack(factors))
+
+
+def root_of(factor: FloatArray) -> FloatArray:
+    """Return J with ``JJ' = (F'F)^-1``.
+
+    Parameters
+    ----------
+    factor : ndarray of shape (r, k)
+        F, of full column rank.
+
+    Returns
+    -------
+    ndarray of shape (k, k)
+    """
+    if factor.shape[1] == 0:
+        return np.zeros((0, 0))
+    length = np.sqrt((factor**2).sum(axis=0))
+    upper = upper_factor(factor / length)
+    return np.asarray(solve_triangular(upper, np.eye(upper.shape[0])) / length[:, None])
