@@ -6,8 +6,8 @@ On an interval ``[a, b]`` (see `likelihood`: r and g' are completely monotone)
     m (r''(b)/r(a) - r'(a)^2/r(b)^2) + g''(a)  <= D'' <= m (r''(a)/r(b) - r'(b)^2/r(a)^2) + g''(b)
 
 so an interval is *settled* once D' has one sign on it, or D'' has one sign and D' changes sign between the
-ends (one stationary point inside). Intervals are halved until all are settled. Beyond the last b, with ``L =
-lim psi^2 |r'|``,
+ends (one stationary point inside). Intervals are halved until all are settled. Beyond the last b, with
+``L = lim psi^2 |r'|``,
 
     D >= m log RSS_w + g(b),      psi D' >= b g'(b) - m L / (b RSS_w).
 
@@ -38,6 +38,7 @@ class StationaryPoint:
     Attributes
     ----------
     psi : float
+        Variance ratio.
     deviance : float
         Above the lowest one, in units of deviance (−2 log-likelihood).
     kind : str
@@ -112,6 +113,7 @@ def certify(profile: Profile, within_residual: float, limit: float) -> Certifica
     Parameters
     ----------
     profile : Profile
+        Deviance to minimise.
     within_residual : float
         ``RSS_w > 0`` in whitened units.
     limit : float

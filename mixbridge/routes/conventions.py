@@ -10,6 +10,7 @@ import math
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from types import MappingProxyType
+from typing import cast
 
 from mixbridge.errors import OptionError, nearest
 
@@ -89,15 +90,17 @@ AXES: tuple[Axis, ...] = (
         "between",
         ("size_weighted", "harmonic", "unweighted"),
         ("swamy_arora",),
-        "form of the second residual sum of squares: unit means weighted by size with exact expectation; unweighted with "
-        "the harmonic mean size in place of the exact expectation; unweighted with exact expectation",
+        "form of the second residual sum of squares: unit means weighted by size with exact expectation; "
+        "unweighted with the harmonic mean size in place of the exact expectation; unweighted with exact "
+        "expectation",
         "Swamy & Arora 1972; Baltagi & Chang 1994; harmonic mean: common practice",
     ),
     Axis(
         "expectation",
         ("exact", "short"),
         ("wallace_hussain",),
-        "expectations of both forms exact, or divisors n - N and N without the correction for estimated coefficients",
+        "expectations of both forms exact, or divisors n - N and N without the correction for estimated "
+        "coefficients",
         "Wallace & Hussain 1969; Baltagi & Chang 1994",
     ),
     Axis(
@@ -120,16 +123,17 @@ AXES: tuple[Axis, ...] = (
         "count",
         ("rank", "columns"),
         ("within", "between", "swamy_arora", "wansbeek_kapteyn", "pooled_minus_within", "fitting_constants"),
-        "degrees of freedom count ranks of X, QX and PX, or columns (wrong where unit means are collinear, but printed)",
+        "degrees of freedom count ranks of X, QX and PX, or columns (wrong where unit means are collinear, "
+        "but printed)",
         "common practice",
     ),
     Axis(
         "scale",
         ("own", "gls_residuals", "gls_residuals_n"),
         CURVE_ROUTES[1:],
-        "variance that multiplies the inverse cross-products: the route's own idiosyncratic variance, or the residual sum "
-        "of squares of the quasi-demeaned regression over n - K (for `reml` the same as its own; for `ml` what is printed as "
-        "'components over n - K'), or over n (for `ml` the same as its own)",
+        "variance that multiplies the inverse cross-products: the route's own idiosyncratic variance, or the "
+        "residual sum of squares of the quasi-demeaned regression over n - K (for `reml` the same as its "
+        "own; for `ml` what is printed as 'components over n - K'), or over n (for `ml` the same as its own)",
         "common practice; Wooldridge prints the second (Table 14.2; from memory)",
     ),
     Axis(
@@ -159,12 +163,34 @@ AXES: tuple[Axis, ...] = (
 
 
 def axes_of(route: str) -> tuple[Axis, ...]:
-    """Return the axes that a route has."""
+    """Return the axes that a route has.
+
+    Parameters
+    ----------
+    route : str
+        Key of a route; ledger keys such as ``minque_1`` have none of their own.
+
+    Returns
+    -------
+    tuple of Axis
+    """
     return tuple(axis for axis in AXES if route in axis.routes)
 
 
 def resolve(route: str, given: Mapping[str, object]) -> Mapping[str, Value]:
     """Check conventions given by the user and fill in the defaults.
+
+    Parameters
+    ----------
+    route : str
+        Key of a route.
+    given : mapping
+        Conventions that differ from the defaults.
+
+    Returns
+    -------
+    mapping
+        Every convention of the route with its value, read-only.
 
     Raises
     ------
@@ -186,5 +212,5 @@ def resolve(route: str, given: Mapping[str, object]) -> Mapping[str, Value]:
                 raise OptionError(f"{name}={value!r} is not allowed for {route!r}; allowed: {axis.allowed}.")
         elif value not in axis.values:
             raise OptionError.not_among(f"{route}: {name}", value, axis.values)
-        chosen[name] = value  # type: ignore[assignment]
+        chosen[name] = cast(Value, value)  # among `axis.values`, or let through by `axis.check`
     return MappingProxyType(chosen)

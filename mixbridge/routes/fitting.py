@@ -39,7 +39,10 @@ Conventions = Mapping[str, Value]
 REFERENCE_ROUTES = ("pooled", "within", "between", "first_difference")
 """Routes that answer other questions: reference points, not votes."""
 
-ROUTES = (*REFERENCE_ROUTES, *QUADRATIC, "ml", "reml")
+LIKELIHOOD: dict[str, Kind] = {"ml": "ml", "reml": "reml"}
+"""Each likelihood route by key, with the kind of its likelihood."""
+
+ROUTES = (*REFERENCE_ROUTES, *QUADRATIC, *LIKELIHOOD)
 """Every route that `study.fit` knows."""
 
 LEDGER_ROUTES = (
@@ -47,14 +50,30 @@ LEDGER_ROUTES = (
     *(key for key in QUADRATIC if key != "minque"),
     "minque_0",
     "minque_1",
-    "ml",
-    "reml",
+    *LIKELIHOOD,
 )
 """Routes shown side by side unless the user chooses."""
 
 
 def named_route(key: str) -> tuple[str, dict[str, object]]:
-    """Split a ledger key into route and conventions: ``minque_1`` is `minque` with ``prior=1``."""
+    """Split a ledger key into route and conventions: ``minque_1`` is `minque` with ``prior=1``.
+
+    Parameters
+    ----------
+    key : str
+        Key of a route, or ``minque_`` and a prior ratio.
+
+    Returns
+    -------
+    route : str
+    conventions : dict
+        Those that the key implies.
+
+    Raises
+    ------
+    OptionError
+        If there is no such route.
+    """
     if key in ROUTES:
         return key, {}
     if key.startswith("minque_"):
@@ -105,8 +124,8 @@ def fit_route(
         units=curve.units,
     )
     try:
-        if route in ("ml", "reml"):
-            return _likelihood(curve, route, conventions, blank)  # type: ignore[arg-type]
+        if route in LIKELIHOOD:
+            return _likelihood(curve, LIKELIHOOD[route], conventions, blank)
         if route in QUADRATIC:
             return _quadratic(curve, route, conventions, blank)
         return _least_squares(curve, route, conventions, differences, blank)
@@ -124,29 +143,27 @@ def _least_squares(
 ) -> Fit:
     fit: LeastSquares
     notes: tuple[str, ...] = ()
-    known: dict[str, float] = {}
+    unit, ratio = np.nan, np.nan
     if route == "pooled":
-        fit, known = pooled(curve), {"unit_variance": 0.0, "unit_variance_raw": 0.0, "ratio": 0.0}
+        fit, unit, ratio = pooled(curve), 0.0, 0.0
         notes = ("takes the unit variance to be zero",)
     elif route == "within":
-        fit, known = within(curve, conventions), {"ratio": np.inf}
+        fit, ratio = within(curve, conventions), np.inf
         notes = ("treats unit effects as fixed: no unit variance",)
     elif route == "between":
         fit = between(curve, conventions)
     else:
         if isinstance(differences, str):
             raise NotEstimableError(differences)
-        products = differences(conventions["step"])  # type: ignore[arg-type]
+        step = conventions["step"]
+        products = differences(step if isinstance(step, int) else None)
         fit = first_difference(curve, products)
-        notes = (
-            f"{products.count} differences over {products.step} period step(s), {products.gaps} gaps left out",
-        )
+        pairs = f"{products.count} differences over {products.step} period step(s)"
+        notes = (f"{pairs}, {products.gaps} gaps left out",)
     scale, status = fit.residual / fit.df if fit.df > 0 else np.nan, FITTED
     if fit.df < 1:
         status = NO_DF
         notes = (*notes, f"{fit.form}: degrees of freedom {fit.df}, so no scale and no standard errors")
-    if route in ("pooled", "within"):
-        known["idiosyncratic_variance"] = scale
     covariance = np.full((2, 2), np.nan)
     if route in ("pooled", "within") and fit.df > 0:
         covariance[1, 1] = 2.0 * scale**2 / fit.df
@@ -157,13 +174,16 @@ def _least_squares(
         beta=fit.beta,
         root=fit.root,
         not_estimable=fit.reasons,
+        unit_variance_raw=unit,
+        unit_variance=unit,
+        idiosyncratic_variance=scale if route in ("pooled", "within") else np.nan,
+        ratio=ratio,
         components_covariance=covariance,
         components_method="exact under normality and this route's model, estimate plugged in",
         scale=scale,
         residual_df=float(fit.df),
         rank=fit.rank,
         forms_table=((fit.form, fit.residual, float(fit.df), np.nan),),
-        **known,
     )
 
 
@@ -184,16 +204,18 @@ def _quadratic(curve: Curve, route: str, conventions: Conventions, blank: Fit) -
     )
     floor = 1e-13 * curve.unit / curve.n
     if not idiosyncratic > floor:
-        note = f"idiosyncratic variance {idiosyncratic:.6g} is not positive: kept as it is, no generalised least squares step"
+        note = (
+            f"idiosyncratic variance {idiosyncratic:.6g} is not positive: kept as it is, "
+            "no generalised least squares step"
+        )
         lost = dict.fromkeys(curve.names, NOT_POSITIVE)
         return replace(fit, status=NOT_POSITIVE, notes=(note,), not_estimable=lost)
     notes: tuple[str, ...] = ()
     status = FITTED
     if unit < 0.0:
         status = TRUNCATED
-        notes = (
-            f"unit variance {unit:.6g} is negative: kept as unit_variance_raw, ratio 0 used in the coefficients",
-        )
+        used = "kept as unit_variance_raw, ratio 0 used in the coefficients"
+        notes = (f"unit variance {unit:.6g} is negative: {used}",)
     if not pair.unbiased:
         notes = (*notes, "solved with the divisors of this convention, not with exact expectations")
     covariance = components.sampling_covariance(curve)
@@ -216,7 +238,8 @@ def _likelihood(curve: Curve, route: Kind, conventions: Conventions, blank: Fit)
     notes: tuple[str, ...] = ()
     if psi == 0.0:
         notes = (
-            "the estimate lies on the boundary, unit variance 0: standard errors of components are not the usual ones there",
+            "the estimate lies on the boundary, unit variance 0: "
+            "standard errors of components are not the usual ones there",
         )
     if not certificate.excluded:
         notes = (*notes, "the certificate is incomplete: see certificate.lines()")
@@ -237,19 +260,16 @@ def _likelihood(curve: Curve, route: Kind, conventions: Conventions, blank: Fit)
 def _flat(curve: Curve, route: Kind) -> tuple[str, str] | None:
     """Tell why a likelihood has no maximum, if it has none."""
     if curve.n == curve.units:
-        return (
-            "likelihood flat",
-            "every unit has one row: the likelihood depends on the sum of the two variances only",
-        )
+        only = "the likelihood depends on the sum of the two variances only"
+        return "likelihood flat", f"every unit has one row: {only}"
     if route == "reml" and curve.units <= curve.rank_constant:
-        return (
-            "likelihood flat",
-            f"N = {curve.units} units for K_c = {curve.rank_constant} unit-constant directions: nothing is left between units",
-        )
+        used = f"N = {curve.units} units for K_c = {curve.rank_constant} unit-constant directions"
+        return "likelihood flat", f"{used}: nothing is left between units"
     if curve.df_within < 1:
         kind = "likelihood flat" if route == "reml" else "likelihood unbounded"
         return kind, (
-            f"n - N - K_w = {curve.df_within}: the within regression leaves no error, the likelihood has no maximum at a finite ratio"
+            f"n - N - K_w = {curve.df_within}: the within regression leaves no error, "
+            "the likelihood has no maximum at a finite ratio"
         )
     if not curve.within_residual > 0.0:
         return (
@@ -278,7 +298,7 @@ def _information(curve: Curve, route: Kind, psi: float, idiosyncratic: float) ->
         )
     scale = np.sqrt(np.diag(matrix))
     inverse = np.linalg.inv(matrix / np.outer(scale, scale)) / np.outer(scale, scale)
-    return 2.0 * idiosyncratic**2 * inverse[::-1, ::-1]
+    return np.asarray(2.0 * idiosyncratic**2 * inverse[::-1, ::-1])
 
 
 def _on_curve(curve: Curve, fit: Fit, psi: float, conventions: Conventions) -> Fit:

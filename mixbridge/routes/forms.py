@@ -62,14 +62,28 @@ class Form:
 
 @dataclass(frozen=True, slots=True)
 class _Tall:
-    """An n-by-c matrix in ``QX a_w + sum_T P_T X a_T``, through the factors of W and of the B_T: ``F_w a_w`` and ``F_T a_T``."""
+    """An n-by-c matrix ``QX a_w + sum_T P_T X a_T``, as ``F_w a_w`` and ``F_T a_T``.
+
+    ``F_w`` and ``F_T`` are the factors of W and of the B_T.
+    """
 
     within: FloatArray
     means: FloatArray
 
 
 def value(curve: Curve, form: Form) -> float:
-    """Return ``q = e'De`` in squared units of the outcome."""
+    """Return ``q = e'De``.
+
+    Parameters
+    ----------
+    curve : Curve
+    form : Form
+
+    Returns
+    -------
+    float
+        In squared units of the outcome.
+    """
     p = curve.rank
     rows_w, rows_b = curve.within[:, :p], curve.between[:, :, :p]
     tall = _Tall(rows_w @ form.basis, rows_b @ form.basis)
@@ -86,7 +100,17 @@ def value(curve: Curve, form: Form) -> float:
 
 
 def expectations(curve: Curve, form: Form) -> tuple[float, float]:
-    """Return the coefficients of ``sigma_u^2`` and of ``sigma_a^2`` in ``E q``."""
+    """Return the coefficients of ``sigma_u^2`` and of ``sigma_a^2`` in ``E q``.
+
+    Parameters
+    ----------
+    curve : Curve
+    form : Form
+
+    Returns
+    -------
+    float, float
+    """
     ones = np.ones_like(curve.sizes)
     return _trace(curve, form, 1.0, ones), _trace(curve, form, 0.0, curve.sizes)
 
@@ -99,11 +123,12 @@ def covariance(curve: Curve, forms: Sequence[Form], idiosyncratic: float, unit: 
     curve : Curve
     forms : sequence of Form
     idiosyncratic, unit : float
-        ``sigma_u^2`` and ``sigma_a^2``.
+        ``sigma_u^2`` and ``sigma_a^2``, variances.
 
     Returns
     -------
     ndarray of shape (len(forms), len(forms))
+        In fourth powers of the units of the outcome.
     """
     # in units of sigma_u^2, so that nothing depends on the scale of the outcome
     on_means = 1.0 + curve.sizes * (unit / idiosyncratic)

@@ -1,4 +1,4 @@
-"""Iterated forms as paths: iterated generalised least squares with likelihood divisors, and iterated MINQUE."""
+"""Iterated forms as paths: generalised least squares with likelihood divisors, and MINQUE."""
 
 from __future__ import annotations
 
@@ -30,11 +30,11 @@ def iterate(
     ----------
     curve : Curve
     kind : {"gls", "minque"}
-        ``gls``: coefficients at the current ratio, then the ratio that maximises the likelihood given these
-        coefficients (in a balanced panel ``sigma_u^2 = e'Qe/(n - N)`` and ``sigma_1^2 = e'Pe/N``), and so on:
-        each step raises the likelihood, and in balanced panels the path is monotone from both ends (Breusch
-        1987). ``minque``: the prior of each step is the estimate of the last; a point where it stays is a
-        stationary point of the restricted likelihood (Harville 1977).
+        What is iterated. ``gls``: coefficients at the current ratio, then the ratio that maximises the
+        likelihood given these coefficients (in a balanced panel ``sigma_u^2 = e'Qe/(n - N)`` and
+        ``sigma_1^2 = e'Pe/N``), and so on: each step raises the likelihood, and in balanced panels the path
+        is monotone from both ends (Breusch 1987). ``minque``: the prior of each step is the estimate of the
+        last; a point where it stays is a stationary point of the restricted likelihood (Harville 1977).
     start : {"pooled", "within", "between"} or float
         Coefficients, or ratio, to start from.
     steps : int
@@ -90,7 +90,8 @@ def _start_white(curve: Curve, start: str) -> FloatArray:
     if start == "between":
         if curve.rank_between < p:
             raise IdentificationError(
-                f"start='between' needs coefficients for every column, but unit means have rank {curve.rank_between} of {p}."
+                "start='between' needs coefficients for every column, "
+                f"but unit means have rank {curve.rank_between} of {p}."
             )
         products = curve.weighted_between(curve.sizes)
         return np.append(-curve.between_root @ (curve.between_root.T @ products[:p, p]), 1.0)
@@ -114,7 +115,10 @@ def _gls(curve: Curve, start: str | float) -> Iterator[tuple[float, float, float
 
 
 def _best_ratio(curve: Curve, inside: float, means: FloatArray) -> float:
-    """Maximise the likelihood in ψ for fixed residuals: ``min n log(e'Qe + sum w_T rho_T) + sum m_T log(1 + T psi)``."""
+    """Maximise the likelihood in ψ for fixed residuals.
+
+    The ratio minimises ``n log(e'Qe + sum w_T rho_T) + sum m_T log(1 + T psi)``.
+    """
 
     def slope(psi: float) -> float:
         weight = curve.sizes / (1.0 + curve.sizes * psi)

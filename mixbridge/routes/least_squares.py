@@ -33,6 +33,7 @@ class LeastSquares:
     df : int
         Degrees of freedom of the scale ``residual / df``; below one there is no scale.
     rank : int
+        Number of directions that the regression determines.
     reasons : mapping of str to str
         Coefficient -> why it is not estimable.
     form : str
@@ -49,7 +50,16 @@ class LeastSquares:
 
 
 def pooled(curve: Curve) -> LeastSquares:
-    """Ordinary least squares on all rows: ψ = 0, scale ``RSS/(n - K)``."""
+    """Ordinary least squares on all rows: ψ = 0, scale ``RSS/(n - K)``.
+
+    Parameters
+    ----------
+    curve : Curve
+
+    Returns
+    -------
+    LeastSquares
+    """
     point = curve.at(0.0)
     df = curve.n - curve.rank
     return LeastSquares(
@@ -58,7 +68,19 @@ def pooled(curve: Curve) -> LeastSquares:
 
 
 def within(curve: Curve, conventions: Mapping[str, object]) -> LeastSquares:
-    """Least squares on deviations from unit means: scale ``RSS_w/(n - N - K_w)``; intercepts are not reported."""
+    """Least squares on deviations from unit means: scale ``RSS_w/(n - N - K_w)``.
+
+    Parameters
+    ----------
+    curve : Curve
+    conventions : mapping
+        ``count`` is read.
+
+    Returns
+    -------
+    LeastSquares
+        Unit intercepts are not reported.
+    """
     p = curve.rank
     columns = curve.columns_within if conventions["count"] == "columns" else curve.rank_within
     df = curve.n - curve.units - columns
@@ -67,11 +89,22 @@ def within(curve: Curve, conventions: Mapping[str, object]) -> LeastSquares:
     slope = _solve(curve.within[:, :p], curve.within[:, p], curve.within_root)
     residual = curve.unit * curve.within_residual
     form = "within residual sum of squares"
-    return _off(curve, slope, curve.within_root, residual, df, "within", form)
+    return _off(curve, slope, curve.within_root, "within", residual=residual, df=df, form=form)
 
 
 def between(curve: Curve, conventions: Mapping[str, object]) -> LeastSquares:
-    """Least squares on unit means, weighted by size or each counted once; scale ``RSS/(N - K_p)``."""
+    """Least squares on unit means, weighted by size or each counted once; scale ``RSS/(N - K_p)``.
+
+    Parameters
+    ----------
+    curve : Curve
+    conventions : mapping
+        ``between`` and ``count`` are read.
+
+    Returns
+    -------
+    LeastSquares
+    """
     p = curve.rank
     df = curve.units - (p if conventions["count"] == "columns" else curve.rank_between)
     weighted = conventions["between"] == "size_weighted"
@@ -82,7 +115,7 @@ def between(curve: Curve, conventions: Mapping[str, object]) -> LeastSquares:
     left = stacked @ np.append(-slope, 1.0)
     residual = curve.unit * float(left @ left)
     form = f"between residual sum of squares, {'size-weighted' if weighted else 'unweighted'}"
-    return _off(curve, slope, root, residual, df, "between", form)
+    return _off(curve, slope, root, "between", residual=residual, df=df, form=form)
 
 
 def _solve(x: FloatArray, y: FloatArray, root: FloatArray) -> FloatArray:
@@ -93,7 +126,7 @@ def _solve(x: FloatArray, y: FloatArray, root: FloatArray) -> FloatArray:
 
 
 def _off(
-    curve: Curve, slope: FloatArray, root: FloatArray, residual: float, df: int, side: str, form: str
+    curve: Curve, slope: FloatArray, root: FloatArray, side: str, *, residual: float, df: int, form: str
 ) -> LeastSquares:
     """Bring an off-curve regression to the units of the data and blank what it does not determine."""
     p = curve.rank
@@ -140,6 +173,15 @@ def differences_of(
         Unit and period of each row.
     step : int or None
         Period steps of a difference; the smallest one seen unless stated.
+
+    Returns
+    -------
+    Differences
+
+    Raises
+    ------
+    NotEstimableError
+        If there is nothing to difference.
     """
     order = np.lexsort((ordinals, codes))
     same = codes[order[1:]] == codes[order[:-1]]
@@ -164,7 +206,17 @@ def _slices(positions: IntArray, length: int) -> Iterator[IntArray]:
 
 
 def first_difference(curve: Curve, products: Differences) -> LeastSquares:
-    """Least squares on differences, without an added constant; scale ``RSS/(differences - rank)``."""
+    """Least squares on differences, without an added constant; scale ``RSS/(differences - rank)``.
+
+    Parameters
+    ----------
+    curve : Curve
+    products : Differences
+
+    Returns
+    -------
+    LeastSquares
+    """
     names, moments = curve.names, curve.moments
     p = len(names)
     bound = np.zeros(p)

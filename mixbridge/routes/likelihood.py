@@ -9,8 +9,8 @@ Up to constants (Hartley & Rao 1967; Patterson & Thompson 1971; Harville 1977)
 With w_T = T / (1 + T psi), S_k = sum_T w_T^k B_T and c = (-beta(psi), 1):
 
     r'  = -c' S_2 c,   r'' = 2 c' S_3 c - 2 v' A_xx^-1 v,  v = (S_2 c)_x
-    g'  = sum m_T w_T   - tr(A_xx^-1 S_2),   g'' = -sum m_T w_T^2 + 2 tr(A_xx^-1 S_3) - tr(A_xx^-1 S_2 A_xx^-1
-    S_2)
+    g'  = sum m_T w_T - tr(A_xx^-1 S_2)
+    g'' = -sum m_T w_T^2 + 2 tr(A_xx^-1 S_3) - tr(A_xx^-1 S_2 A_xx^-1 S_2)
 
 (traces for REML only). In the spectral form of ``K'VK`` with ``K'X = 0``, r is ``const + sum c_k^2 / (1 +
 mu_k psi)`` and the g of REML is ``const + sum log(1 + mu_k psi)``: r and g' are completely monotone, so r
@@ -40,6 +40,7 @@ class Values:
     Attributes
     ----------
     psi, r, r1, r2, g, g1, g2 : ndarray of shape (M,)
+        Ratios; r and g, each with its first and second derivative.
     amplified : ndarray of shape (M,)
         ``A_yy / r``: by how much the subtraction in r amplifies rounding.
     m : int
@@ -74,7 +75,13 @@ class Values:
 
 @dataclass(frozen=True, slots=True)
 class Profile:
-    """Profile deviance of one kind on one curve."""
+    """Profile deviance of one kind on one curve.
+
+    Attributes
+    ----------
+    curve : Curve
+    kind : {"ml", "reml"}
+    """
 
     curve: Curve
     kind: Kind
@@ -85,7 +92,17 @@ class Profile:
         return self.curve.n - (self.curve.rank if self.kind == "reml" else 0)
 
     def values(self, psi: FloatArray) -> Values:
-        """Evaluate r, g and two derivatives of each at an array of ψ."""
+        """Evaluate r, g and two derivatives of each.
+
+        Parameters
+        ----------
+        psi : ndarray of shape (M,)
+            Variance ratios.
+
+        Returns
+        -------
+        Values
+        """
         curve = self.curve
         p, g_count = curve.rank, len(curve.sizes)
         weight = curve.sizes / (1.0 + np.multiply.outer(psi, curve.sizes))
@@ -127,16 +144,21 @@ class Profile:
 
 
 def log_likelihood(curve: Curve, kind: Kind, psi: float, constant: bool = True) -> float:
-    """Return the maximised log-likelihood at ψ, all constants included.
+    """Return the log-likelihood at ψ, maximised over all else, with its constants.
 
     Parameters
     ----------
     curve : Curve
     kind : {"ml", "reml"}
     psi : float
+        Variance ratio.
     constant : bool
         For REML: whether ``½ log|X'X|`` is included. With it the value does not depend on the coordinates of
         X; neither compares different column spaces (Harville 1974).
+
+    Returns
+    -------
+    float
     """
     m = curve.n - (curve.rank if kind == "reml" else 0)
     point = curve.at(psi)

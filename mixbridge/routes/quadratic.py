@@ -66,11 +66,19 @@ class Components:
     pair: Pair
 
     def sampling_covariance(self, curve: Curve) -> FloatArray:
-        """Return the covariance of ``(unit, idiosyncratic)`` under normality: exact formula, estimates
-        plugged in.
+        """Return the sampling covariance of ``(unit, idiosyncratic)``, the two variances, under normality.
 
-        A negative unit variance is plugged in as zero; with a non-positive idiosyncratic variance the result
-        is undefined.
+        The formula is exact, the estimates are plugged in: a negative unit variance as zero; with a
+        non-positive idiosyncratic variance the result is undefined.
+
+        Parameters
+        ----------
+        curve : Curve
+            The one that `pair` was made for.
+
+        Returns
+        -------
+        ndarray of shape (2, 2)
         """
         if not self.idiosyncratic > 0.0:
             return np.full((2, 2), np.nan)
@@ -81,7 +89,22 @@ class Components:
 
 
 def solve(curve: Curve, pair: Pair) -> Components:
-    """Solve the two equations ``q = C (sigma_u^2, sigma_a^2)'``."""
+    """Solve the two equations ``q = C (sigma_u^2, sigma_a^2)'``.
+
+    Parameters
+    ----------
+    curve : Curve
+    pair : Pair
+
+    Returns
+    -------
+    Components
+
+    Raises
+    ------
+    NotEstimableError
+        If C is singular.
+    """
     q = np.array([value(curve, form) for form in pair.forms])
     scale = np.abs(pair.system).max(axis=1)
     if np.linalg.cond(pair.system / scale[:, None]) > 1e12:
@@ -105,9 +128,8 @@ def within_df(curve: Curve, conventions: Conventions) -> int:
         extra = curve.columns_within - curve.rank_within
     df = curve.df_within - extra
     if df < 1:
-        raise NotEstimableError(
-            f"no degrees of freedom within units: n - N - K_w = {curve.n} - {curve.units} - {curve.rank_within + extra} = {df}"
-        )
+        terms = f"{curve.n} - {curve.units} - {curve.rank_within + extra}"
+        raise NotEstimableError(f"no degrees of freedom within units: n - N - K_w = {terms} = {df}")
     return df
 
 
@@ -129,7 +151,10 @@ def pooled_form(curve: Curve, name: str, on_within: float, on_means: FloatArray)
 
 
 def unit_means_form(curve: Curve, weighted: bool) -> Form:
-    """Return the residual sum of squares of the regression of unit means: weighted by size, or each unit counted once."""
+    """Return the residual sum of squares of the regression of unit means.
+
+    Each mean is weighted by its number of rows, or counted once.
+    """
     ones = np.ones(len(curve.sizes))
     if weighted:
         root, weights = curve.between_root, ones
@@ -141,12 +166,11 @@ def unit_means_form(curve: Curve, weighted: bool) -> Form:
 
 
 def remainder_form(curve: Curve, weighted: bool) -> Form:
-    """Return the form in unit remainders ``ybar - xbar'b_w`` after the unit-constant directions of X are
-    regressed out.
+    """Return the form in unit remainders ``ybar - xbar'b_w``, weighted by size or each counted once.
 
-    These directions are ``{Xv : QXv = 0}``: constant, unit-constant columns, and combinations that cancel
-    within units. Their number is ``K_c``, and the form does not depend on which of several equal within fits
-    ``b_w`` is.
+    The unit-constant directions of X are regressed out of the remainders: ``{Xv : QXv = 0}``, which is the
+    constant, unit-constant columns, and combinations that cancel within units. Their number is ``K_c``, and
+    the form does not depend on which of several equal within fits ``b_w`` is.
     """
     p, c = curve.rank, curve.rank_constant
     on_means = np.ones(len(curve.sizes)) if weighted else 1.0 / curve.sizes
@@ -176,8 +200,8 @@ def swamy_arora(curve: Curve, conventions: Conventions) -> Pair:
     """Swamy & Arora 1972; size-weighted with unbalanced expectation: Baltagi & Chang 1994.
 
     ``E q_b = (N - K_p) sigma_u^2 + (n - tr[(X'PX)^+ X'ZZ'X]) sigma_a^2``; `unweighted` uses the unweighted
-    residual sum of squares with its exact expectation; `harmonic` replaces that expectation by ``(N -
-    K_p)(sigma_a^2 + sigma_u^2 / T_h)`` with the harmonic mean size T_h.
+    residual sum of squares with its exact expectation; `harmonic` replaces that expectation by
+    ``(N - K_p)(sigma_a^2 + sigma_u^2 / T_h)`` with the harmonic mean size T_h.
     """
     form = conventions["between"]
     df_w, df_b = within_df(curve, conventions), between_df(curve, conventions)
@@ -203,11 +227,10 @@ def wansbeek_kapteyn(curve: Curve, conventions: Conventions) -> Pair:
 
 
 def wallace_hussain(curve: Curve, conventions: Conventions) -> Pair:
-    """Wallace & Hussain 1969: within and between sums of squares of pooled residuals; unbalanced: Baltagi &
-    Chang 1994.
+    """Wallace & Hussain 1969: within and between sums of squares of pooled residuals.
 
-    `short` takes ``E q = ((n - N) sigma_u^2, N sigma_u^2 + n sigma_a^2)``, without the correction for the
-    estimated coefficients.
+    Unbalanced: Baltagi & Chang 1994. `short` takes ``E q = ((n - N) sigma_u^2, N sigma_u^2 + n sigma_a^2)``,
+    without the correction for the estimated coefficients.
     """
     g = len(curve.sizes)
     if curve.n == curve.units:
@@ -221,11 +244,10 @@ def wallace_hussain(curve: Curve, conventions: Conventions) -> Pair:
 
 
 def amemiya(curve: Curve, conventions: Conventions) -> Pair:
-    """Amemiya 1971 (balanced): ``sigma_u^2 = RSS_w/(n - N)``, ``sigma_a^2 = (q_b - N sigma_u^2)/n`` in unit
-    remainders.
+    """Amemiya 1971 (balanced): ``sigma_u^2 = RSS_w/(n - N)``, ``sigma_a^2 = (q_b - N sigma_u^2)/n``.
 
-    The form for unequal sizes is this project's. What is printed as Amemiya is often the unbiased form,
-    `wansbeek_kapteyn`.
+    ``q_b`` is the size-weighted form in unit remainders, `remainder_form`. The use for unequal sizes is this
+    project's. What is printed as Amemiya is often the unbiased form, `wansbeek_kapteyn`.
     """
     n, units = float(curve.n), float(curve.units)
     if n == units:
@@ -239,8 +261,7 @@ def amemiya(curve: Curve, conventions: Conventions) -> Pair:
 
 
 def nerlove(curve: Curve, conventions: Conventions) -> Pair:
-    """Nerlove 1971: ``sigma_u^2 = RSS_w/n``; ``sigma_a^2`` the sample variance of the estimated unit
-    intercepts.
+    """Nerlove 1971: ``sigma_u^2 = RSS_w/n``; ``sigma_a^2`` the sample variance of estimated unit intercepts.
 
     Unit-constant covariates, the constant among them, are first regressed out of the intercepts, unweighted;
     that extension is this project's. Without a constant in the column space the model takes the intercepts to
@@ -255,7 +276,10 @@ def nerlove(curve: Curve, conventions: Conventions) -> Pair:
 
 
 def pooled_minus_within(curve: Curve, conventions: Conventions) -> Pair:
-    """Textbook difference: ``sigma_a^2 = RSS_pooled/(n - K) - RSS_w/(n - N - K_w)`` (Greene, *Econometric Analysis*; from memory)."""
+    """Textbook difference: ``sigma_a^2 = RSS_pooled/(n - K) - RSS_w/(n - N - K_w)``.
+
+    Greene, *Econometric Analysis*; from memory.
+    """
     df_w, df = within_df(curve, conventions), curve.n - curve.rank
     total = pooled_form(curve, "pooled residual sum of squares", 1.0, np.ones(len(curve.sizes)))
     return Pair((within_form(curve), total), np.array([[float(df_w), 0.0], [float(df), float(df)]]), False)

@@ -142,7 +142,7 @@ class Fit:
 
     @property
     def standard_errors(self) -> pd.Series:
-        """Square roots of the diagonal of `covariance`."""
+        """Standard errors by term, the square roots of the diagonal of `covariance`."""
         values = np.sqrt(np.diag(self.covariance_array))
         return pd.Series(values, index=list(self.terms), name=self.route)
 
@@ -153,11 +153,11 @@ class Fit:
 
     @property
     def component_standard_errors(self) -> pd.Series:
-        """Standard errors of the components, and by the delta method of ratio and ICC."""
+        """Standard errors of the two variances, and by the delta method of ratio and ICC."""
         c = self.components_covariance
         unit, idiosyncratic = np.sqrt(np.diag(c))
         gradient = np.array([1.0, -self.ratio]) / self.idiosyncratic_variance
-        ratio = float(np.sqrt(max(gradient @ c @ gradient, 0.0))) if np.isfinite(c).all() else np.nan
+        ratio = float(np.sqrt(max(float(gradient @ c @ gradient), 0.0))) if np.isfinite(c).all() else np.nan
         return pd.Series(
             [unit, idiosyncratic, ratio, ratio / (1.0 + self.ratio) ** 2], index=[*COMPONENTS, "ratio", "icc"]
         )
@@ -169,14 +169,14 @@ class Fit:
 
     @property
     def shrinkage(self) -> pd.Series:
-        """``s = T psi / (1 + T psi)`` by unit size: the weight of a unit's own data in its predicted effect."""
+        """``s = T psi / (1 + T psi)`` by unit size: the weight of a unit's data in its predicted effect."""
         if np.isinf(self.ratio):
             return self._by_size(np.ones(len(self.sizes)), "shrinkage")
         return self._by_size(self.sizes * self.ratio / (1.0 + self.sizes * self.ratio), "shrinkage")
 
     @property
     def forms(self) -> pd.DataFrame:
-        """First-stage forms: value, and the coefficients of both variances in the equations that were solved."""
+        """First-stage forms: value, and the coefficients of both variances in the equations solved."""
         columns = ["form", "value", "on_idiosyncratic_variance", "on_unit_variance"]
         return pd.DataFrame(list(self.forms_table), columns=columns).set_index("form")
 
