@@ -1,6 +1,7 @@
 """Unit means as further columns, from moments alone.
 
-The mean of a column over its unit does not vary within the unit, so its within products are zero, and on unit means it equals
+The mean of a column over its unit does not vary within the unit, so its within products are zero, and on
+unit means it equals
 the column it came from: every product is already in the moments, and the means are those of the rows used.
 """
 
@@ -41,7 +42,8 @@ class WithMeans:
 def with_unit_means(moments: Moments) -> WithMeans:
     """Add the unit mean of every column that varies within units.
 
-    A mean that is a combination of the columns given and of means already added is left out; a given column never is.
+    A mean that is a combination of the columns given and of means already added is left out; a given column
+    never is.
 
     Parameters
     ----------
@@ -68,7 +70,9 @@ def with_unit_means(moments: Moments) -> WithMeans:
             dropped[name] = text if dependency.others else f"{name} is the same for all units"
     added = tuple(wide.design[raw + j] for j in kept)
     chosen = [varying[j] for j in kept]
-    return WithMeans(_widened(moments, chosen, added), dict(zip(added, (columns[j] for j in chosen), strict=True)), dropped)
+    return WithMeans(
+        _widened(moments, chosen, added), dict(zip(added, (columns[j] for j in chosen), strict=True)), dropped
+    )
 
 
 def _names(moments: Moments, varying: list[int]) -> tuple[str, ...]:
@@ -89,11 +93,13 @@ def _widened(moments: Moments, varying: list[int], names: tuple[str, ...]) -> Mo
     weights = moments.sizes.astype(float)
     squares = np.einsum("g,gri->i", weights, moments.between[:, :, 1:] ** 2)[picks]
     spread = np.sqrt(squares / moments.rows)
-    ratio = np.exp2(np.round(np.log2(np.where(spread > 0.0, spread, 1.0))))  # the mean's own unit, in those of its column
+    ratio = np.exp2(
+        np.round(np.log2(np.where(spread > 0.0, spread, 1.0)))
+    )  # the mean's own unit, in those of its column
     last = k - 1
     within = np.zeros((moments.within.shape[0] + q, k + q))
-    within[:-q or None, :last] = moments.within[:, :last]
-    within[:-q or None, -1] = moments.within[:, last]
+    within[: -q or None, :last] = moments.within[:, :last]
+    within[: -q or None, -1] = moments.within[:, last]
     groups, rows, _ = moments.between.shape
     between = np.zeros((groups, rows + q, k + 1 + q))
     between[:, :rows, :k] = moments.between[:, :, :k]
@@ -117,7 +123,7 @@ def _widened(moments: Moments, varying: list[int], names: tuple[str, ...]) -> Mo
 
 
 def _design_factor(moments: Moments) -> tuple[FloatArray, FloatArray]:
-    """Return a factor of X'X in scaled columns (centred where there is a constant), and the rounding floor of each."""
+    """Return a factor of X'X in scaled columns (centred beside a constant), and their rounding floors."""
     columns, bound = moments.columns, noise(moments)
     weights = np.sqrt(moments.sizes.astype(float))[:, None]
     factor, floor = [], np.zeros(len(moments.design))
@@ -133,7 +139,7 @@ def _design_factor(moments: Moments) -> tuple[FloatArray, FloatArray]:
 
 
 def _in_data_units(moments: Moments, null: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Return combinations of scaled columns as combinations of the columns themselves, and the typical size of each."""
+    """Return combinations of scaled columns in the columns themselves, and the typical size of each."""
     sizes, shift = np.ones(len(moments.design)), np.zeros(len(moments.design))
     for j, name in enumerate(moments.design):
         if name != moments.constant:

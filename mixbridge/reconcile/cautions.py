@@ -8,8 +8,10 @@ IDENTITIES_HEADING = "These check the arithmetic, not the model."
 """Above every list of identities."""
 
 IDENTITIES_LIMIT = (
-    "An identity that holds shows that two computations on these rows agree as they must. It does not show that unit effects are "
-    "unrelated to the covariates, that errors have one variance, or that the covariates are the right ones: all routes share these "
+    "An identity that holds shows that two computations on these rows agree as they must. It does not "
+    "show that unit effects are "
+    "unrelated to the covariates, that errors have one variance, or that the covariates are the right "
+    "ones: all routes share these "
     "assumptions and would agree just as well if they were wrong."
 )
 """Below it, where there is room."""

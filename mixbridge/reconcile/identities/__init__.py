@@ -1,7 +1,16 @@
 """What theory says must agree, checked on the data at hand: these check the arithmetic, not the model."""
 
-from mixbridge.reconcile.identities import ends, unit_means, weighting
-from mixbridge.reconcile.identities.registry import DOES_NOT_APPLY, FAILS, HOLDS, REGISTRY, Compared, Identity, Unmet, identity
+from mixbridge.reconcile.identities import ends, iteration, moments_agree, restricted, unit_means, weighting
+from mixbridge.reconcile.identities.registry import (
+    DOES_NOT_APPLY,
+    FAILS,
+    HOLDS,
+    REGISTRY,
+    Compared,
+    Identity,
+    Unmet,
+    identity,
+)
 from mixbridge.reconcile.identities.setting import Rows, Setting
 from mixbridge.reconcile.identities.table import check_identities, identity_table
 
@@ -19,6 +28,9 @@ __all__ = [
     "ends",
     "identity",
     "identity_table",
+    "iteration",
+    "moments_agree",
+    "restricted",
     "unit_means",
     "weighting",
 ]

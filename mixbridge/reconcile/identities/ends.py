@@ -6,7 +6,7 @@ import numpy as np
 
 from mixbridge.errors import IdentificationError
 from mixbridge.ratio import curve_of
-from mixbridge.reconcile.identities.plain import EPS, largest, least_squares, plain_of
+from mixbridge.reconcile.identities.plain import EPS, largest, least_squares
 from mixbridge.reconcile.identities.registry import Compared, Unmet, identity
 from mixbridge.reconcile.identities.setting import Setting, multiple
 
@@ -22,7 +22,7 @@ SIZE = "relative to the coefficient or its standard error, whichever is larger"
     source="Fuller & Battese 1974",
 )
 def pooled_end(setting: Setting) -> Compared | Unmet:
-    """Compare the engine's curve at 0 with ordinary least squares from the total products, and with the rows if at hand."""
+    """Compare the pooled fit with ordinary least squares from the total products."""
     missing = setting.missing("pooled")
     if missing:
         return Unmet(missing)
@@ -42,7 +42,8 @@ def pooled_end(setting: Setting) -> Compared | Unmet:
         f"{name}: singular value decomposition of the total products",
         difference[at],
         tolerance[at],
-        f"32 (columns + 1) x 2.2e-16 x condition {solved.condition:.3g} x amplification in this coefficient; {SIZE}",
+        f"32 (columns + 1) x 2.2e-16 x condition {solved.condition:.3g} x amplification in this "
+        f"coefficient; {SIZE}",
     )
 
 
@@ -54,7 +55,9 @@ def pooled_end(setting: Setting) -> Compared | Unmet:
 )
 def within_end(setting: Setting) -> Compared | Unmet:
     """Compare the curve at a ratio beyond rounding with the within fit."""
-    return _slopes(setting, setting.curve.at(1.0 / (EPS**2 * setting.curve.sizes[0])).beta, "curve at an endless ratio")
+    return _slopes(
+        setting, setting.curve.at(1.0 / (EPS**2 * setting.curve.sizes[0])).beta, "curve at an endless ratio"
+    )
 
 
 @identity(
@@ -76,7 +79,12 @@ def one_row_units(setting: Setting) -> Compared | Unmet:
         return Unmet(f"estimable without one-row units: {error}")
     right = shorter.at(1.0 / (EPS**2 * shorter.sizes[0])).beta
     lost = ~shorter.free_within
-    return _slopes(setting, np.where(lost, np.nan, right), "curve without one-row units, endless ratio", shorter.condition)
+    return _slopes(
+        setting,
+        np.where(lost, np.nan, right),
+        "curve without one-row units, endless ratio",
+        shorter.condition,
+    )
 
 
 def _slopes(setting: Setting, right: np.ndarray, what: str, condition: float = 1.0) -> Compared | Unmet:
@@ -98,7 +106,8 @@ def _slopes(setting: Setting, right: np.ndarray, what: str, condition: float = 1
         f"{name}: {what}",
         difference[at],
         tolerance[at],
-        f"32 (columns + 1) x 2.2e-16 x condition of X {max(condition, setting.curve.condition):.3g} x condition of QX "
+        f"32 (columns + 1) x 2.2e-16 x condition of X {max(condition, setting.curve.condition):.3g} x "
+        f"condition of QX "
         f"{inner:.3g} x amplification in this coefficient; {SIZE}",
     )
 
@@ -111,7 +120,9 @@ def within_bounds(setting: Setting, free: np.ndarray) -> tuple[np.ndarray, np.nd
     reach[kept] = np.sqrt((solved.root**2).sum(axis=1)) * np.diag(plain.back)[kept]
     beta = np.abs(setting.fits["within"].beta)
     size = np.maximum(beta, reach * np.sqrt(solved.residual / max(setting.curve.df_within, 1)))
-    total = plain.stacked(plain.sizes)[:, plain.rank]  # the engine subtracts the pooled fit first, between variation included
+    total = plain.stacked(plain.sizes)[
+        :, plain.rank
+    ]  # the engine subtracts the pooled fit first, between variation included
     amplified = solved.condition * reach * np.sqrt(total @ total) / size
     return size[free], np.maximum(amplified[free], 1.0), solved.condition
 

@@ -1,16 +1,17 @@
 """Plain algebra to check the engine against: least squares on the factors as the moments hold them.
 
-Columns are scaled, and centred where there is a constant; nothing is whitened and no direction is singled out. Every weighting
+Columns are scaled, and centred where there is a constant; nothing is whitened and no direction is singled
+out. Every weighting
 and every map back to the units of the data is written here a second time, on purpose.
 """
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import solve_triangular
 
 from mixbridge.moments import Moments
 
@@ -48,20 +49,33 @@ class Solved:
 
 def least_squares(factor: FloatArray) -> Solved:
     """Solve for the last column on the others."""
-    p = factor.shape[1] - 1
-    length = np.sqrt((factor[:, :p] ** 2).sum(axis=0))
-    upper = np.linalg.qr(np.column_stack([factor[:, :p] / length, factor[:, p]]), mode="r")
-    r, y = upper[:p, :p], upper[:, p]
-    inverse = solve_triangular(r, np.eye(p)) if p else np.zeros((0, 0))
-    values = np.linalg.svd(r, compute_uv=False) if p else np.ones(1)
-    return Solved(
-        slope=inverse @ y[:p] / length,
-        root=inverse / length[:, None],
-        residual=float((y[p:] ** 2).sum()),
-        total=float((y**2).sum()),
-        condition=float(values[0] / values[-1]),
-        log_det=2.0 * float(np.log(np.abs(np.diag(r))).sum() + np.log(length).sum()),
-    )
+    return least_squares_of_each(factor[None])[0]
+
+
+def least_squares_of_each(factors: FloatArray) -> list[Solved]:
+    """Solve several problems of one shape, ``factors`` (M, r, p + 1), each for its last column."""
+    count, rows, p = factors.shape[0], factors.shape[1], factors.shape[2] - 1
+    length = np.sqrt((factors[:, :, :p] ** 2).sum(axis=1))
+    scaled = np.concatenate([factors[:, :, :p] / length[:, None, :], factors[:, :, p:]], axis=2)
+    if rows <= p:
+        scaled = np.concatenate([scaled, np.zeros((count, p + 1 - rows, p + 1))], axis=1)
+    upper = np.asarray(np.linalg.qr(scaled, mode="r"))
+    r, y = upper[:, :p, :p], upper[:, :, p]
+    inverse = np.linalg.inv(r)
+    values = np.linalg.svd(r, compute_uv=False) if p else np.ones((count, 1))
+    diagonal = np.abs(np.diagonal(r, axis1=1, axis2=2))
+    log_det = 2.0 * (np.log(diagonal).sum(axis=1) + np.log(length).sum(axis=1))
+    return [
+        Solved(
+            slope=inverse[i] @ y[i, :p] / length[i],
+            root=inverse[i] / length[i][:, None],
+            residual=float((y[i, p:] ** 2).sum()),
+            total=float((y[i] ** 2).sum()),
+            condition=float(values[i, 0] / values[i, -1]),
+            log_det=float(log_det[i]),
+        )
+        for i in range(count)
+    ]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -82,9 +96,11 @@ class Plain:
     unit : float
         Unit of the scaled outcome.
     origin : ndarray of shape (p + 1,)
-        Where the columns, and the outcome, were centred, in the units of the data (0 for the constant, or without one).
+        Where the columns, and the outcome, were centred, in the units of the data (0 for the constant, or
+        without one).
     log_det_back : float
-        ``log |det back|`` with the unit of the outcome taken out: what a change of columns adds to ``log |X'X|``, halved and negated.
+        ``log |det back|`` with the unit of the outcome taken out: what a change of columns adds to ``log
+        |X'X|``, halved and negated.
     """
 
     names: tuple[str, ...]
@@ -110,10 +126,19 @@ class Plain:
 
     def at(self, psi: float) -> Solved:
         """Return generalised least squares at one ratio."""
-        return least_squares(self.stacked(self.sizes / (1.0 + self.sizes * psi)))
+        return self.at_each([psi])[0]
+
+    def at_each(self, ratios: Sequence[float]) -> list[Solved]:
+        """Return generalised least squares at several ratios."""
+        weights = np.sqrt(self.sizes / (1.0 + np.multiply.outer(np.array(ratios), self.sizes)))
+        means = weights[:, :, None, None] * self.between
+        inside = np.broadcast_to(self.within, (len(ratios), *self.within.shape))
+        return least_squares_of_each(
+            np.concatenate([inside, means.reshape(len(ratios), -1, self.rank + 1)], axis=1)
+        )
 
     def means(self, weights: FloatArray, kept: NDArray[np.intp]) -> Solved:
-        """Return least squares of unit means on some columns, each unit counted with the weight of its size."""
+        """Return least squares of unit means on some columns, weighted by size class."""
         rows = (np.sqrt(weights)[:, None, None] * self.between).reshape(-1, self.rank + 1)
         return least_squares(rows[:, [*kept, self.rank]])
 
@@ -123,24 +148,28 @@ class Plain:
 
     def slope(self, beta: FloatArray) -> FloatArray:
         """Return scaled coefficients from coefficients in the units of the data."""
-        return np.linalg.solve(self.back, beta - self.offset)
+        return np.asarray(np.linalg.solve(self.back, beta - self.offset))
 
     def reach(self, solved: Solved) -> FloatArray:
-        """Return per coefficient, in the units of the data, the length of its row of J for an outcome in scaled units."""
+        """Return per coefficient the length of its row of J, from scaled outcome to data units."""
         return np.asarray(np.sqrt(((self.back @ solved.root) ** 2).sum(axis=1)))
 
     def bounds(
         self, beta: FloatArray, solved: Solved, df: int, engine_total: float = 0.0
     ) -> tuple[FloatArray, FloatArray]:
-        """Return the size of each coefficient (not below its standard error), and by how much rounding is amplified in it (at least 1).
+        """Return sizes (at least the standard errors) and amplification of rounding (at least 1).
 
-        Least squares with backward error ``eps`` moves coefficient j by at most ``eps * condition * |J_j| * |outcome|``
-        (Golub & Van Loan, *Matrix Computations*, ch. 5; section from memory); the longer of the outcome as it is here and as the
+        Least squares with backward error ``eps`` moves coefficient j by at most ``eps * condition * |J_j| *
+        |outcome|``
+        (Golub & Van Loan, *Matrix Computations*, ch. 5; section from memory); the longer of the outcome as
+        it is here and as the
         engine holds it counts.
         """
         reach = self.reach(solved)
         size = np.maximum(np.abs(beta), reach * np.sqrt(solved.residual / max(df, 1)))
-        return size, np.maximum(solved.condition * reach * np.sqrt(max(solved.total, engine_total)) / size, 1.0)
+        return size, np.maximum(
+            solved.condition * reach * np.sqrt(max(solved.total, engine_total)) / size, 1.0
+        )
 
 
 def plain_of(moments: Moments) -> Plain:
@@ -172,8 +201,10 @@ def plain_of(moments: Moments) -> Plain:
     return Plain(names, sizes, counts, within, between, back, offset, float(scale[p]), origin, log_det_back)
 
 
-def largest(left: FloatArray, right: FloatArray, size: FloatArray, tolerance: FloatArray) -> tuple[int, FloatArray]:
-    """Return where two vectors are furthest apart for their tolerance, and their distances relative to `size`."""
+def largest(
+    left: FloatArray, right: FloatArray, size: FloatArray, tolerance: FloatArray
+) -> tuple[int, FloatArray]:
+    """Return where two vectors are furthest apart for their tolerance, and distances relative to `size`."""
     difference = np.abs(left - right) / size
     excess = difference / tolerance
     bad = ~np.isfinite(excess)

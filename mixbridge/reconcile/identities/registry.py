@@ -1,6 +1,7 @@
 """What an identity is, and the register of all of them.
 
-A new identity is one function with the decorator `identity`. It takes a `Setting` and returns `Compared` (its condition holds: here are
+A new identity is one function with the decorator `identity`. It takes a `Setting` and returns `Compared`
+(its condition holds: here are
 two numbers from two computations) or `Unmet` (its condition does not hold: which one).
 """
 
@@ -11,7 +12,18 @@ from dataclasses import dataclass
 
 from mixbridge.reconcile.identities.setting import Setting
 
-__all__ = ["DOES_NOT_APPLY", "FAILS", "HOLDS", "REGISTRY", "Compared", "Identity", "Rule", "Unmet", "identity", "result"]
+__all__ = [
+    "DOES_NOT_APPLY",
+    "FAILS",
+    "HOLDS",
+    "REGISTRY",
+    "Compared",
+    "Identity",
+    "Rule",
+    "Unmet",
+    "identity",
+    "result",
+]
 
 HOLDS, DOES_NOT_APPLY, FAILS = "holds", "does not apply", "FAILS"
 

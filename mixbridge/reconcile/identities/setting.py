@@ -1,4 +1,4 @@
-"""What the checks may look at: the curve, the routes fitted on it, the plain algebra, and rows where they are at hand."""
+"""What the checks may look at: the curve, its fits, the plain algebra, and rows where they are at hand."""
 
 from __future__ import annotations
 
@@ -87,7 +87,7 @@ class Setting:
 
     @property
     def closed(self) -> bool:
-        """Whether the column space of X is closed under unit averaging: ``rank [PX, QX] = K_p + K_w`` equals K."""
+        """Whether the columns are closed under unit averaging: ``rank [PX, QX] = K_p + K_w`` equals K."""
         return self.curve.rank_between + self.curve.rank_within == self.curve.rank
 
     @property
@@ -98,7 +98,7 @@ class Setting:
 
     @property
     def stored(self) -> FloatArray:
-        """Bound per design column, over all rows and in the units of the data, for what rounding of the stored rows leaves."""
+        """Bound per design column, over all rows and in data units, for the rounding of the stored rows."""
         moments, bound = self.curve.moments, np.zeros(self.curve.rank)
         floor = noise(moments) * moments.scale
         for j, name in enumerate(moments.design):
@@ -107,14 +107,18 @@ class Setting:
         return bound
 
     def engine_total(self, psi: float) -> float:
-        """Return the weighted sum of squares of the outcome as the engine holds it (pooled residuals), in scaled units."""
+        """Return the weighted sum of squares of the engine's outcome, the pooled residual, scaled."""
         p, weights = self.curve.rank, self.curve.sizes / (1.0 + self.curve.sizes * psi)
         whole = self.curve.within_products[p, p] + weights @ self.curve.between_products[:, p, p]
         return float(whole) * self.curve.unit / self.plain.unit**2
 
     def focus(self) -> float:
-        """Return the ratio at which curve-wide identities are looked at: of `reml`, else of another route, else one."""
-        keys = [key for key in ("reml", *self.solved) if key in self.solved and components_ratio(self.fits[key]) > 0.0]
+        """Return the ratio at which the curve is looked at: of `reml`, else of another route, else one."""
+        keys = [
+            key
+            for key in ("reml", *self.solved)
+            if key in self.solved and components_ratio(self.fits[key]) > 0.0
+        ]
         return components_ratio(self.fits[keys[0]]) if keys else 1.0
 
 
@@ -124,15 +128,19 @@ def components_ratio(fit: Fit) -> float:
 
 
 def multiple(columns: int) -> float:
-    """Return the multiple of unit rounding allowed per unit of condition: 32 for each column of the matrix factored.
+    """Return the rounding allowed per unit of condition: 32 units for each column of the matrix factored.
 
-    The textbook constant of a QR with c columns is of the order of c; 32 leaves room for the two sides and the maps between units.
+    The textbook constant of a QR with c columns is of the order of c; 32 leaves room for the two sides and
+    the maps between units.
     """
     return 32.0 * (columns + 1) * EPS
 
 
 def setting_of(
-    curve: Curve, fits: Mapping[str, Fit], rows: Rows | None = None, with_means: tuple[Moments, Mapping[str, str]] | None = None
+    curve: Curve,
+    fits: Mapping[str, Fit],
+    rows: Rows | None = None,
+    with_means: tuple[Moments, Mapping[str, str]] | None = None,
 ) -> Setting:
     """Prepare what the checks share.
 
@@ -142,15 +150,22 @@ def setting_of(
     fits : mapping of str to Fit
     rows : Rows, optional
     with_means : (Moments, mapping), optional
-        Moments with unit means from elsewhere, and which column is the mean of which; taken from the moments unless given.
+        Moments with unit means from elsewhere, and which column is the mean of which; taken from the moments
+        unless given.
     """
     usable = {key: fit for key, fit in fits.items() if fit.rows == curve.n and fit.terms == curve.names}
     plain = plain_of(curve.moments)
-    solved = {}
-    for key, fit in usable.items():
-        ratio = components_ratio(fit)
-        if fit.estimated and np.isfinite(fit.ratio) and np.isfinite(ratio) and ratio >= 0.0:
-            solved[key] = plain.at(ratio)
+    ratios = {
+        key: components_ratio(fit)
+        for key, fit in usable.items()
+        if fit.estimated
+        and np.isfinite(fit.ratio)
+        and np.isfinite(components_ratio(fit))
+        and fit.unit_variance >= 0.0
+    }
+    distinct = sorted(set(ratios.values()))
+    at = dict(zip(distinct, plain.at_each(distinct), strict=True)) if distinct else {}
+    solved = {key: at[ratio] for key, ratio in ratios.items()}
     if with_means is None:
         own = with_unit_means(curve.moments)
         with_means = own.moments, own.source

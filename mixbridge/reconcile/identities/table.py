@@ -36,7 +36,8 @@ def check_identities(
     rows : Rows, optional
         Rows, for what is checked on rows too.
     with_means : (Moments, mapping), optional
-        Moments with unit means that were fitted elsewhere, with each mean column's source, to be checked in place of
+        Moments with unit means that were fitted elsewhere, with each mean column's source, to be checked in
+        place of
         those that are taken here from the moments.
 
     Returns
@@ -51,4 +52,6 @@ def check_identities(
 
 def identity_table(identities: Iterable[Identity]) -> pd.DataFrame:
     """Return one row per identity, with the fields of `Identity` as columns."""
-    return pd.DataFrame([asdict(one) for one in identities], columns=[field.name for field in fields(Identity)])
+    return pd.DataFrame(
+        [asdict(one) for one in identities], columns=[field.name for field in fields(Identity)]
+    )

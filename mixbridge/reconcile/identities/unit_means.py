@@ -22,12 +22,17 @@ def _estimable(setting: Setting) -> NDArray[np.intp] | Unmet:
     if missing:
         return Unmet(missing)
     if setting.with_means.rank >= setting.curve.n:
-        return Unmet(f"more rows than columns with unit means: {setting.curve.n} rows, {setting.with_means.rank} columns")
+        return Unmet(
+            f"more rows than columns with unit means: {setting.curve.n} rows, {setting.with_means.rank} "
+            f"columns"
+        )
     return np.flatnonzero(np.isfinite(setting.fits["within"].beta))
 
 
-def _tolerance(setting: Setting, solved: Solved, free: NDArray[np.intp]) -> tuple[FloatArray, FloatArray, str]:
-    """Return size and tolerance of the slopes of the regression with means, from it and from the within regression."""
+def _tolerance(
+    setting: Setting, solved: Solved, free: NDArray[np.intp]
+) -> tuple[FloatArray, FloatArray, str]:
+    """Return size and tolerance of slopes, from the regression with means and the within regression."""
     size, amplified, inner = within_bounds(setting, free)
     wide = setting.with_means
     reach = wide.reach(solved)[free]
@@ -40,8 +45,10 @@ def _tolerance(setting: Setting, solved: Solved, free: NDArray[np.intp]) -> tupl
         tolerance = tolerance + reach * (setting.stored @ coefficients) / wide.unit / size
         stored = " and, a mean being left out as a combination of columns, the rounding of the stored columns"
     reason = (
-        f"32 (columns + 1) x 2.2e-16 x (condition with means {solved.condition:.3g} x its amplification + condition of X "
-        f"{setting.curve.condition:.3g} x condition of QX {inner:.3g} x its amplification in this coefficient){stored}; {SIZE}"
+        f"32 (columns + 1) x 2.2e-16 x (condition with means {solved.condition:.3g} x its amplification + "
+        f"condition of X "
+        f"{setting.curve.condition:.3g} x condition of QX {inner:.3g} x its amplification in this "
+        f"coefficient){stored}; {SIZE}"
     )
     return size, tolerance, reason
 
@@ -49,17 +56,18 @@ def _tolerance(setting: Setting, solved: Solved, free: NDArray[np.intp]) -> tupl
 @identity(
     number=3,
     name="slopes beside their unit means",
-    statement="with the unit mean of every within-varying column added, their slopes = within slopes, at every ratio",
+    statement="with the unit mean of every within-varying column added, their slopes = within slopes, at "
+    "every ratio",
     source="Mundlak 1978; Wooldridge 2019",
 )
 def slopes_with_means(setting: Setting) -> Compared | Unmet:
-    """Compare the slopes of the regression with means with the within fit, at ratio 0, at that of the primary route, and at one."""
+    """Compare the slopes beside the means with the within fit, at ratio 0, one, and that of REML."""
     free = _estimable(setting)
     if isinstance(free, Unmet):
         return free
     right, found = setting.fits["within"].beta[free], []
-    for psi in sorted({0.0, setting.focus(), 1.0}):
-        solved = setting.with_means.at(psi)
+    ratios = sorted({0.0, setting.focus(), 1.0})
+    for psi, solved in zip(ratios, setting.with_means.at_each(ratios), strict=True):
         left = setting.with_means.beta(solved.slope)[free]
         size, tolerance, reason = _tolerance(setting, solved, free)
         at, difference = largest(left, right, size, tolerance)
@@ -86,7 +94,7 @@ def slopes_with_means(setting: Setting) -> Compared | Unmet:
     source="Mundlak 1978; omitted-variable algebra",
 )
 def contextual_decomposition(setting: Setting) -> Compared | Unmet:
-    """Compare the slopes of each random-effects fit with the within slopes plus weighted contextual coefficients."""
+    """Compare slopes of two fits with the within slopes plus weighted contextual coefficients."""
     free = _estimable(setting)
     if isinstance(free, Unmet):
         return free
@@ -99,7 +107,8 @@ def contextual_decomposition(setting: Setting) -> Compared | Unmet:
         psi = components_ratio(fit)
         full = wide.stacked(wide.sizes / (1.0 + wide.sizes * psi))
         solved, short = wide.at(psi), setting.solved[key]
-        # the means regressed on the columns of X, both in scaled columns; the slopes of X brought to units of the outcome
+        # the means regressed on the columns of X, both in scaled columns; the slopes of X brought to units
+        # of the outcome
         weights = short.root @ (short.root.T @ (full[:, :p].T @ full[:, p : wide.rank]))
         moved = setting.plain.back @ weights @ solved.slope[p:]
         left, right = fit.beta[free], setting.fits["within"].beta[free] + moved[free]

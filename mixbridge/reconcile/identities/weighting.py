@@ -1,4 +1,4 @@
-"""Identities 1 and 2: one ratio in three dresses (quasi-demeaned rows, generalised least squares, penalised unit effects)."""
+"""Identities 1 and 2: quasi-demeaned rows, generalised least squares and penalised unit effects are one."""
 
 from __future__ import annotations
 
@@ -18,9 +18,10 @@ NONE = "no route on these rows is generalised least squares at a finite ratio"
 
 
 def ridge(plain: Plain, solved: Solved, psi: float) -> FloatArray:
-    """Return fixed coefficients of least squares on X and unit indicators, the indicators penalised by ``1 / psi``.
+    """Return the coefficients of X beside unit indicators, the indicators penalised by ``1 / psi``.
 
-    The equations ``X'(y - Xb - Zu) = 0`` and ``Z'(y - Xb - Zu) = u / psi`` are solved by refinement: what a trial solution
+    The equations ``X'(y - Xb - Zu) = 0`` and ``Z'(y - Xb - Zu) = u / psi`` are solved by refinement: what a
+    trial solution
     leaves of the first, u being taken from the second, corrects b. Any start leads to the same b.
     """
     p = plain.rank
@@ -28,13 +29,18 @@ def ridge(plain: Plain, solved: Solved, psi: float) -> FloatArray:
     for _ in range(2):
         c = np.append(-slope, 1.0)
         inside, means = plain.within @ c, plain.between @ c
-        effect = (plain.sizes / (plain.sizes + 1.0 / psi))[:, None] * means if psi > 0.0 else np.zeros_like(means)
-        # what the effects leave of a unit mean; by the second equation also effect / (T psi), without cancellation
-        strong = plain.sizes * psi > 1.0
-        left = np.where(strong[:, None], effect / np.where(strong, plain.sizes * psi, 1.0)[:, None], means - effect)
-        rest = plain.within[:, :p].T @ inside + ((plain.sizes[:, None] * left)[:, None, :] @ plain.between[:, :, :p]).sum(
-            axis=(0, 1)
+        effect = (
+            (plain.sizes / (plain.sizes + 1.0 / psi))[:, None] * means if psi > 0.0 else np.zeros_like(means)
         )
+        # what the effects leave of a unit mean; by the second equation also effect / (T psi), without
+        # cancellation
+        strong = plain.sizes * psi > 1.0
+        left = np.where(
+            strong[:, None], effect / np.where(strong, plain.sizes * psi, 1.0)[:, None], means - effect
+        )
+        rest = plain.within[:, :p].T @ inside + (
+            (plain.sizes[:, None] * left)[:, None, :] @ plain.between[:, :, :p]
+        ).sum(axis=(0, 1))
         slope = slope + solved.root @ (solved.root.T @ rest)
     return plain.beta(slope)
 
@@ -42,26 +48,35 @@ def ridge(plain: Plain, solved: Solved, psi: float) -> FloatArray:
 @identity(
     number=1,
     name="ridge on unit indicators",
-    statement="generalised least squares at the stated components = least squares with unit indicators penalised by the inverse ratio",
+    statement="generalised least squares at the stated components = least squares with unit indicators "
+    "penalised by the inverse ratio",
     source="Robinson 1991; Henderson's equations",
 )
 def ridge_on_indicators(setting: Setting) -> Compared | Unmet:
-    """Compare the coefficients of every random-effects fit with the penalised regression at its stated components."""
+    """Compare every random-effects fit with the penalised regression at its stated components."""
     sides = {}
     for key, fit in setting.on_curve():
         sides[key] = ridge(setting.plain, setting.solved[key], components_ratio(fit))
     reason = "least squares by triangular factors on both sides"
-    return _worst(setting, sides, "least squares on indicators, penalised", 1.0, reason, "any panel")
+    return _worst(
+        setting,
+        sides,
+        what="least squares on indicators, penalised",
+        loss=1.0,
+        reason=reason,
+        condition="any panel",
+    )
 
 
 @identity(
     number=1,
     name="quasi-demeaned rows",
-    statement="least squares on rows less the stated share of their unit mean, one share per unit = generalised least squares",
+    statement="least squares on rows less the stated share of their unit mean, one share per unit = "
+    "generalised least squares",
     source="Fuller & Battese 1974",
 )
 def quasi_demeaned_rows(setting: Setting) -> Compared | Unmet:
-    """Compare the coefficients of every random-effects fit with a regression of rows, its own weights applied."""
+    """Compare every random-effects fit with a regression of rows, its own weights applied."""
     if setting.rows is None:
         return Unmet("rows: the rows are not at hand, only their moments")
     sides = {}
@@ -75,11 +90,18 @@ def quasi_demeaned_rows(setting: Setting) -> Compared | Unmet:
         sides[key] = back @ np.append(least_squares(rows).slope, 1.0)
     loss = _taking(setting)
     reason = f"rounding of the moments themselves allowed for by a factor {loss:.3g}"
-    return _worst(setting, sides, "least squares on quasi-demeaned rows", loss, reason, "any panel, rows at hand")
+    return _worst(
+        setting,
+        sides,
+        what="least squares on quasi-demeaned rows",
+        loss=loss,
+        reason=reason,
+        condition="any panel, rows at hand",
+    )
 
 
 def _worst(
-    setting: Setting, sides: dict[str, FloatArray], what: str, loss: float, reason: str, condition: str
+    setting: Setting, sides: dict[str, FloatArray], *, what: str, loss: float, reason: str, condition: str
 ) -> Compared | Unmet:
     """Pick the coefficient of the route whose two sides are furthest apart for their tolerance."""
     if not sides:
@@ -103,7 +125,8 @@ def _worst(
                     f"{setting.curve.names[at]}: {what}",
                     difference[at],
                     tolerance[at],
-                    f"{reason}; 32 (columns + 1) x 2.2e-16 x condition {solved.condition:.3g} x amplification in this "
+                    f"{reason}; 32 (columns + 1) x 2.2e-16 x condition {solved.condition:.3g} x "
+                    f"amplification in this "
                     "coefficient; relative to the coefficient or its standard error, whichever is larger",
                 ),
             )
@@ -112,7 +135,7 @@ def _worst(
 
 
 def _near_zero(setting: Setting, rows: Rows) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Return rows moved near zero where the model has a constant, and the map from ``(slope, 1)`` to coefficients."""
+    """Return rows moved near zero if the model has a constant, and the map from ``(slope, 1)`` back."""
     p, names = setting.plain.rank, setting.plain.names
     back = np.column_stack([np.eye(p), np.zeros(p)])
     constant = setting.curve.moments.constant
@@ -129,7 +152,8 @@ def _near_zero(setting: Setting, rows: Rows) -> tuple[FloatArray, FloatArray, Fl
 def _taking(setting: Setting) -> float:
     """Return by how much the taking of moments may amplify rounding, beyond the condition of the regression.
 
-    Rows are summed unit by unit and over units: the square root of n. Where products stood in for rows, their factor adds its
+    Rows are summed unit by unit and over units: the square root of n. Where products stood in for rows,
+    their factor adds its
     condition once more.
     """
     moments, factor = setting.curve.moments, setting.plain.within
@@ -147,7 +171,8 @@ def _taking(setting: Setting) -> float:
 def effects_first(plain: Plain, psi: float) -> FloatArray:
     """Return predicted unit effects from the mixed-model equations with the fixed part eliminated first.
 
-    ``(Z'MZ + I/psi) u = Z'My``, M the residual maker of X. Units of a size enter through the factor of their means: turning them
+    ``(Z'MZ + I/psi) u = Z'My``, M the residual maker of X. Units of a size enter through the factor of their
+    means: turning them
     among themselves turns their effects alike.
     """
     p = plain.rank
@@ -165,7 +190,8 @@ def effects_first(plain: Plain, psi: float) -> FloatArray:
 @identity(
     number=2,
     name="predicted effects",
-    statement="predicted effects from the mixed-model equations = shrinkage x (mean outcome - mean covariates x coefficients)",
+    statement="predicted effects from the mixed-model equations = shrinkage x (mean outcome - mean "
+    "covariates x coefficients)",
     source="Henderson 1975; Robinson 1991",
 )
 def predicted_effects(setting: Setting) -> Compared | Unmet:
@@ -181,10 +207,16 @@ def predicted_effects(setting: Setting) -> Compared | Unmet:
     length = float(np.sqrt((right**2).sum()))
     scale = plain.unit / np.sqrt(units)
     strength = 1.0 + float(plain.sizes[-1]) * psi
-    stored = float(np.abs(plain.origin[:-1]) @ np.abs(fit.beta) + abs(plain.origin[-1])) * np.sqrt(units) / plain.unit
+    stored = (
+        float(np.abs(plain.origin[:-1]) @ np.abs(fit.beta) + abs(plain.origin[-1]))
+        * np.sqrt(units)
+        / plain.unit
+    )
     solved = setting.solved[key]
     total = float(np.sqrt((plain.between[:, :, -1] ** 2).sum()))
-    tolerance = multiple(plain.rank) * solved.condition * strength * total / length + 4.0 * EPS * stored / length
+    tolerance = (
+        multiple(plain.rank) * solved.condition * strength * total / length + 4.0 * EPS * stored / length
+    )
     return Compared(
         "any panel, positive unit variance",
         float(np.sqrt((left**2).sum())) * scale,
@@ -193,8 +225,10 @@ def predicted_effects(setting: Setting) -> Compared | Unmet:
         "root mean square predicted effect: mixed-model equations",
         float(np.sqrt(((left - right) ** 2).sum())) / length,
         tolerance,
-        f"distance of the two sets of effects relative to their length; 32 (columns + 1) x 2.2e-16 x condition "
-        f"{solved.condition:.3g} x (1 + largest size x ratio) {strength:.3g} x length of unit means over length of effects, "
+        f"distance of the two sets of effects relative to their length; 32 (columns + 1) x 2.2e-16 x "
+        f"condition "
+        f"{solved.condition:.3g} x (1 + largest size x ratio) {strength:.3g} x length of unit means over "
+        f"length of effects, "
         "and the last place of coefficients times origins of the columns",
     )
 
