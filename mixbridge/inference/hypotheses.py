@@ -111,7 +111,7 @@ def test_hypothesis(  # the name is the user's word; no test of this project is 
     rows, q = hypothesis.matrix, hypothesis.matrix.shape[0]
     used = (rows != 0.0).any(axis=0)
     _require_estimable(fit, used)
-    name = _rule(fit, rule, given.get(covariance))
+    name = _rule(fit, rule, given.get(covariance), q)
     estimate = rows[:, used] @ fit.beta[used] - hypothesis.values
     scaling = 1.0
     notes: tuple[str, ...] = ()
@@ -162,14 +162,15 @@ def test_hypothesis(  # the name is the user's word; no test of this project is 
     )
 
 
-def _rule(fit: Fit, rule: str | None, robust: Robust | None) -> str:
+def _rule(fit: Fit, rule: str | None, robust: Robust | None, q: int) -> str:
     if rule is not None:
         if rule not in RULES:
             raise OptionError.not_among("reference", rule, RULES)
         return rule
     if robust is None:
         return default_rule(fit)
-    return "satterthwaite" if robust.satterthwaite is not None else "t_units"
+    own = robust.satterthwaite if q == 1 else robust.joint
+    return "t_units" if own is None else "satterthwaite"
 
 
 def _robust_law(

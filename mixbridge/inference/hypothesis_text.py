@@ -208,6 +208,8 @@ class _Reader:
             sides = [self.sum()]
             while self._take("="):
                 sides.append(self.sum())
+            if self.at < len(self.tokens) and self.tokens[self.at][0] != ",":
+                raise self._misplaced("an operator, '=' or ','")
             label = self._label(start)
             if len(sides) == 1:
                 raise FormulaError(f"{label!r} has no '=': write {label + ' = 0'!r}.")
@@ -217,8 +219,7 @@ class _Reader:
                 found.append((name, left.plus(right, Fraction(-1))))
             if self.at == len(self.tokens):
                 return found
-            if not self._take(","):
-                raise self._misplaced("an operator, '=' or ','")
+            self.at += 1
 
     def sum(self) -> _Linear:
         total = self.product()

@@ -1,4 +1,4 @@
-"""The law an estimate over its standard error is compared with: quantiles, intervals, p values from the tail."""
+"""What an estimate over its standard error is compared with: quantiles, intervals, p values from the tail."""
 
 from __future__ import annotations
 
