@@ -59,7 +59,8 @@ class Thresholds:
 
     def text(self) -> str:
         """Return the thresholds in words."""
-        return f"gap below {self.gap:g} standard errors of the primary route and half-widths within {self.width:.0%}"
+        gap = f"gap below {self.gap:g} standard errors of the primary route"
+        return f"{gap} and half-widths within {self.width:.0%}"
 
 
 @dataclass(frozen=True, slots=True)
@@ -91,8 +92,19 @@ class Interval:
 def expected_identity(curve: Curve, a: Fit, b: Fit) -> str:
     """Name the identity that makes two routes agree on these data, or return an empty string.
 
-    Conditions: balanced is one unit size; ``cl(X)``, the column space closed under unit averaging, is ``K_w +
-    K_p = K``.
+    Conditions: balanced is one unit size; ``cl(X)``, the column space closed under unit averaging, is
+    ``K_w + K_p = K``.
+
+    Parameters
+    ----------
+    curve : Curve
+    a, b : Fit
+        Two routes fitted to the curve.
+
+    Returns
+    -------
+    str
+        For example ``identity 13: columns closed under unit averaging``.
     """
     if a.route == b.route:
         return ""
@@ -142,68 +154,76 @@ def ledger(
         verdict, reason``. The verdict is ``primary``, ``reference point``, ``not available``, or one of
         `CLASSES`.
     """
-    chosen = fits[primary]
     rows: list[list[object]] = []
     for term in curve.names:
         base = intervals[primary][term]
         for key, fit in fits.items():
             here = intervals[key][term]
-            gap = here.estimate - base.estimate
-            in_se = gap / base.standard_error if base.standard_error > 0 else np.nan
-            verdict, reason = _verdict(curve, chosen, fit, base, here, in_se, thresholds, term)
-            rows.append(
-                [
-                    term,
-                    key,
-                    here.estimate,
-                    here.standard_error,
-                    here.lower,
-                    here.upper,
-                    gap,
-                    in_se,
-                    verdict,
-                    reason,
-                ]
-            )
+            pair = _Pair(term, fits[primary], fit, base, here)
+            verdict, reason = _verdict(curve, pair, thresholds)
+            values = [here.estimate, here.standard_error, here.lower, here.upper, pair.gap, pair.in_se]
+            rows.append([term, key, *values, verdict, reason])
     return pd.DataFrame(rows, columns=LEDGER_COLUMNS)
 
 
-def _verdict(
-    curve: Curve,
-    primary: Fit,
-    fit: Fit,
-    base: Interval,
-    here: Interval,
-    in_se: float,
-    thresholds: Thresholds,
-    term: str,
-) -> tuple[str, str]:
+@dataclass(frozen=True, slots=True)
+class _Pair:
+    """One term by the primary route and by another one."""
+
+    term: str
+    primary: Fit
+    fit: Fit
+    base: Interval
+    here: Interval
+
+    @property
+    def gap(self) -> float:
+        """Estimate minus the primary one."""
+        return self.here.estimate - self.base.estimate
+
+    @property
+    def in_se(self) -> float:
+        """The gap in standard errors of the primary route; NaN where it has none."""
+        return self.gap / self.base.standard_error if self.base.standard_error > 0 else np.nan
+
+    @property
+    def wider(self) -> float:
+        """Half-width relative to the primary one, minus one."""
+        return self.here.half_width / self.base.half_width - 1.0
+
+
+def _verdict(curve: Curve, pair: _Pair, thresholds: Thresholds) -> tuple[str, str]:
+    """Return the verdict on one line of the ledger and its reason."""
+    fit, primary, term = pair.fit, pair.primary, pair.term
+    shown = "" if fit.status == FITTED else fit.status
     if fit.route == primary.route:
-        return "primary", fit.not_estimable.get(term, "" if fit.status == FITTED else fit.status)
-    if not np.isfinite(here.estimate):
+        return "primary", fit.not_estimable.get(term, shown)
+    if not np.isfinite(pair.here.estimate):
         return "not available", fit.not_estimable.get(term, fit.status)
     if fit.route in REFERENCE_ROUTES:
-        return "reference point", "" if fit.status == FITTED else fit.status
-    if not np.isfinite(in_se):
-        return (
-            "not available",
-            f"no primary estimate to compare with: {primary.not_estimable.get(term, primary.status)}",
-        )
-    width = abs(here.half_width / base.half_width - 1.0)
-    if abs(in_se) <= thresholds.rounding and width <= thresholds.rounding:
-        return "identical", expected_identity(
-            curve, primary, fit
-        ) or "equal to rounding, though no identity requires it"
+        return "reference point", shown
+    if not np.isfinite(pair.in_se):
+        why = primary.not_estimable.get(term, primary.status)
+        return "not available", f"no primary estimate to compare with: {why}"
+    return _class(curve, pair, thresholds)
+
+
+def _class(curve: Curve, pair: _Pair, thresholds: Thresholds) -> tuple[str, str]:
+    """Return the class of a gap between two random-effects routes, and what makes it."""
+    gap, width = abs(pair.in_se), abs(pair.wider)
+    if gap <= thresholds.rounding and width <= thresholds.rounding:
+        identity = expected_identity(curve, pair.primary, pair.fit)
+        return "identical", identity or "equal to rounding, though no identity requires it"
     causes = [
-        "" if abs(in_se) < thresholds.gap else f"gap of {in_se:+.2g} standard errors",
-        "" if width < thresholds.width else f"half-width {here.half_width / base.half_width - 1.0:+.0%}",
-        fit.status if fit.status == TRUNCATED else "",
+        "" if gap < thresholds.gap else f"gap of {pair.in_se:+.2g} standard errors",
+        "" if width < thresholds.width else f"half-width {pair.wider:+.0%}",
+        pair.fit.status if pair.fit.status == TRUNCATED else "",
     ]
     reason = ", ".join(cause for cause in causes if cause)
-    if abs(in_se) < thresholds.gap and width < thresholds.width:
+    if gap < thresholds.gap and width < thresholds.width:
         return "immaterial", reason
-    if here.against_zero != base.against_zero:
+    if pair.here.against_zero != pair.base.against_zero:
         signs = {1: "above zero", -1: "below zero", 0: "holding zero"}
-        change = f"interval {signs[here.against_zero]} instead of {signs[base.against_zero]}"
+        change = f"interval {signs[pair.here.against_zero]} instead of {signs[pair.base.against_zero]}"
         return "conflicting", f"{reason}; {change}" if reason else change
     return "visible", reason
