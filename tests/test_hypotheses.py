@@ -289,7 +289,7 @@ def test_zero_ratio_is_said():
 
 
 def test_balanced_closed_joint_hypotheses_are_the_classical_f_tests():
-    """Identity 12 for tests: F(q, n - N - K_w) within, F(q, N - K_p) between, under both small-sample rules."""
+    """Identity 12 for tests: F(q, n - N - K_w) within, F(q, N - K_p) between, both small-sample rules."""
     panel = make("closed", "", BALANCED, "pure pure between between", seed=5, psi=2.0)
     c = curve_of(Moments.from_arrays(panel.X, panel.y, panel.units, panel.names))
     one = fit_route(c, "reml", {}, "")
