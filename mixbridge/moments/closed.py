@@ -20,6 +20,7 @@ from mixbridge.moments.opened import Block, Blocks, OpenMoments, gather, within_
 __all__ = ["Moments", "close", "collect"]
 
 FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
 BLOCK_ROWS = 8192
 LOSS_LIMIT = 1e4
 """Amplified rounding above which the within products are taken again from unit-centred rows."""
@@ -316,20 +317,22 @@ def close(opened: OpenMoments) -> Moments:
     DataError
         If the outcome has the same value in every row.
     """
-    flat = np.diag(opened.within) == 0.0
-    level = (opened.means.max(axis=0) == opened.means.min(axis=0)) & flat
-    candidates = np.flatnonzero(level[:-1] & (opened.means[0, :-1] + opened.shift[:-1] != 0.0))
+    low, high = opened.means.min(axis=0), opened.means.max(axis=0)
+    level = (high == low) & (np.diag(opened.within) == 0.0)
+    candidates = np.flatnonzero(level[:-1] & (low + opened.shift != 0.0)[:-1])
     constant = int(candidates[0]) if candidates.size else None
     if level[-1]:
         raise DataError(
             f"the outcome {opened.columns[-1]!r} has the same value in every row: nothing can be fitted."
         )
     keep = np.array([j for j in range(len(opened.columns)) if j != constant])
-    grand = (opened.counts @ opened.means[:, keep]) / opened.rows
-    shift = opened.shift[keep] + grand
-    means = opened.means[:, keep] - (shift - opened.shift[keep])
-    within_squares = np.diag(opened.within)[keep]
-    spread = np.sqrt((within_squares + opened.counts @ means**2) / opened.rows)
+    shift = opened.shift + (opened.counts.astype(float) @ opened.means) / opened.rows
+    move = shift - opened.shift
+    sizes, counts, order = _size_classes(opened.counts)
+    classes = np.split(order, np.cumsum(counts)[:-1])
+    products = np.array([_means_products(opened.means, units, move) for units in classes])
+    between_squares = sizes @ np.diagonal(products, axis1=1, axis2=2)[:, 1:]
+    spread = np.sqrt((np.diag(opened.within) + between_squares)[keep] / opened.rows)
     scale = np.exp2(np.round(np.log2(np.where(spread > 0.0, spread, 1.0))))
     factor = opened.factor
     note = "within products by QR of unit-centred rows"
@@ -339,21 +342,24 @@ def close(opened: OpenMoments) -> Moments:
     if factor is None:
         factor = eigen_factor(opened.within)
         note = "ill-conditioned within products without a second pass over the rows"
-    sizes, class_of, counts = np.unique(opened.counts, return_inverse=True, return_counts=True)
-    order = np.argsort(class_of, kind="stable")
-    rows = np.ones((order.size, keep.size + 1))
-    np.divide(np.take(means, order, axis=0), scale, out=rows[:, 1:])
-    ends = np.cumsum(counts)
-    between = np.array([_means_factor(rows[end - m : end]) for m, end in zip(counts, ends, strict=True)])
+    axes, units_of = np.append(0, keep + 1), np.append(1.0, scale)
+    products = products[:, axes[:, None], axes] / np.outer(units_of, units_of)
+    between = np.zeros_like(products)
+    for at, units in enumerate(classes):
+        found = factor_from_products(products[at]) if units.size > 8 * axes.size else None
+        if found is None:
+            rows = (opened.means[units] - move)[:, keep] / scale
+            found = factor_from_rows(np.column_stack([np.ones(units.size), rows]))
+        between[at] = found
     columns = [opened.columns[j] for j in keep]
     return _frozen(
         Moments(
             design=opened.columns[:-1],
             constant=None if constant is None else opened.columns[constant],
             outcome=columns[-1],
-            shift=shift,
+            shift=shift[keep],
             scale=scale,
-            magnitude=opened.magnitude[keep],
+            magnitude=np.maximum(np.abs(low + opened.shift), np.abs(high + opened.shift))[keep],
             sizes=sizes,
             counts=counts,
             within=factor[:, keep] / scale,
@@ -363,13 +369,27 @@ def close(opened: OpenMoments) -> Moments:
     )
 
 
-def _means_factor(rows: FloatArray) -> FloatArray:
-    """Return the factor of the unit means of one size, from their products where these carry the digits."""
-    if rows.shape[0] > 8 * rows.shape[1]:
-        factor = factor_from_products(rows.T @ rows)
-        if factor is not None:
-            return factor
-    return factor_from_rows(rows)
+def _size_classes(counts: IntArray) -> tuple[IntArray, IntArray, IntArray]:
+    """Return the distinct unit sizes, the number of units of each, and the units in order of size."""
+    short = counts.astype(np.uint16) if counts.max() < 2**16 else counts  # sorted by radix
+    order = np.argsort(short, kind="stable")
+    ordered = counts[order]
+    starts = np.flatnonzero(np.diff(ordered, prepend=0))
+    return ordered[starts], np.diff(starts, append=counts.size), order
+
+
+def _means_products(means: FloatArray, units: IntArray, move: FloatArray) -> FloatArray:
+    """Return the products of ``(1, mean - move)`` over some units."""
+    k = means.shape[1]
+    products = np.zeros((k + 1, k + 1))
+    products[0, 0] = units.size
+    for start in range(0, units.size, BLOCK_ROWS):
+        rows = np.take(means, units[start : start + BLOCK_ROWS], axis=0)
+        rows -= move
+        products[1:, 1:] += rows.T @ rows
+        products[0, 1:] += np.ones(rows.shape[0]) @ rows
+    products[1:, 0] = products[0, 1:]
+    return products
 
 
 def _frozen(moments: Moments) -> Moments:

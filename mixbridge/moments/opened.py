@@ -27,6 +27,7 @@ Block = tuple[IntArray, FloatArray, FloatArray]
 """Unit codes of some rows, their design columns (b, p) and their outcome (b,)."""
 Blocks = Callable[[], Iterable[Block]]
 """Gives the blocks of all rows afresh each time it is called."""
+UNITS_AT_ONCE = 8192
 
 
 @dataclass(frozen=True, slots=True)
@@ -70,7 +71,8 @@ class OpenMoments:
     @property
     def magnitude(self) -> FloatArray:
         """Largest absolute unit mean per column."""
-        return np.asarray(np.abs(self.means + self.shift).max(axis=0))
+        low, high = self.means.min(axis=0), self.means.max(axis=0)
+        return np.asarray(np.maximum(np.abs(low + self.shift), np.abs(high + self.shift)))
 
     @property
     def rows(self) -> int:
@@ -157,47 +159,62 @@ def gather(blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index) ->
     Since ``(dbar_i)^2 <= W_i (T_i - 1) / T_i`` for each unit and column, the subtraction amplifies rounding
     by at most T_i.
     """
-    n_units, k = len(keys), len(columns)
-    anchors = np.zeros((n_units, k))
-    seen = np.zeros(n_units, dtype=bool)
-    all_seen = False
-    sums = np.zeros((n_units, k))
+    n_units, p = len(keys), len(columns) - 1
+    # design and outcome apart: every step then runs over contiguous memory, without a copy of the rows
+    anchors, anchors_y = np.zeros((n_units, p)), np.zeros(n_units)
+    sums, sums_y = np.zeros((n_units, p)), np.zeros((n_units, 1))
     counts = np.zeros(n_units, dtype=np.int64)
-    total = np.zeros((k, k))
-    buffer = np.empty((0, k))
+    unseen = np.ones(n_units, dtype=bool)
+    waiting = n_units > 0
+    total = np.zeros((p + 1, p + 1))
+    buffer, buffer_y = np.empty((0, p)), np.empty(0)
     for codes, x, y in blocks:
-        if buffer.shape[0] < codes.size:
-            buffer = np.empty((codes.size, k))
-        if not all_seen:
+        size = codes.size
+        if buffer_y.size < size:
+            buffer, buffer_y = np.empty((size, p)), np.empty(size)
+        if waiting:
             # backwards, so that the first row of a unit is written last
-            new = np.flatnonzero(~seen[codes])[::-1]
+            new = np.flatnonzero(np.take(unseen, codes, mode="clip"))[::-1]
             if new.size:
-                anchors[codes[new], :-1] = x[new]
-                anchors[codes[new], -1] = y[new]
-                seen[codes[new]] = True
-                all_seen = bool(seen.all())
-        d = buffer[: codes.size]
-        np.take(anchors, codes, axis=0, out=d, mode="clip")
-        np.subtract(x, d[:, :-1], out=d[:, :-1])
-        np.subtract(y, d[:, -1], out=d[:, -1])
-        total += d.T @ d
+                units = codes[new]
+                anchors[units], anchors_y[units] = x[new], y[new]
+                unseen[units] = False
+                waiting = bool(unseen.any())
+        d, d_y = buffer[:size], buffer_y[:size]
+        np.subtract(x, np.take(anchors, codes, axis=0, out=d, mode="clip"), out=d)
+        np.subtract(y, np.take(anchors_y, codes, out=d_y, mode="clip"), out=d_y)
+        total[:p, :p] += d.T @ d
+        total[:p, p] += d_y @ d
+        total[p, p] += d_y @ d_y
         add_by_unit(sums, codes, d)
-        counts += np.bincount(codes, minlength=n_units)
-    if not all_seen:
-        keys, anchors, sums, counts = keys[seen], anchors[seen], sums[seen], counts[seen]
+        add_by_unit(sums_y, codes, d_y[:, None])
+        np.add.at(counts, codes, 1)
+    total[p, :p] = total[:p, p]
+    if waiting:
+        seen = ~unseen
+        keys, counts = keys[seen], counts[seen]
+        anchors, anchors_y, sums, sums_y = anchors[seen], anchors_y[seen], sums[seen], sums_y[seen]
     if counts.size == 0:
         raise DataError("there are no rows to take moments of.")
-    _refuse_non_finite(total, anchors, columns)
-    shift = anchors[0].copy()
-    dbar = sums / counts[:, None]
-    within = total - sums.T @ dbar
+    _refuse_non_finite(
+        total, np.append(np.isfinite(anchors).all(axis=0), np.isfinite(anchors_y).all()), columns
+    )
+    shift = np.append(anchors[0], anchors_y[0])
+    means = np.empty((counts.size, p + 1))
+    within = total.copy()
+    for start in range(0, counts.size, UNITS_AT_ONCE):
+        part = slice(start, start + UNITS_AT_ONCE)
+        dsum = np.column_stack([sums[part], sums_y[part]])
+        dbar = dsum / counts[part, None]
+        within -= dsum.T @ dbar
+        means[part, :p], means[part, p] = anchors[part], anchors_y[part]
+        means[part] -= shift
+        means[part] += dbar
     within = (within + within.T) / 2.0
     spread, kept = np.diag(total), np.diag(within)
-    loss = np.divide(spread, kept, out=np.ones(k), where=kept > 0.0)
+    loss = np.divide(spread, kept, out=np.ones(p + 1), where=kept > 0.0)
     loss[(spread > 0.0) & (kept <= 0.0)] = np.inf
-    anchors -= shift
-    anchors += dbar
-    return OpenMoments(columns, keys, counts, shift, anchors, within, loss)
+    return OpenMoments(columns, keys, counts, shift, means, within, loss)
 
 
 def within_factor(blocks: Iterable[Block], opened: OpenMoments) -> FloatArray:
@@ -256,8 +273,8 @@ def add_by_unit(sums: FloatArray, codes: IntArray, rows: FloatArray) -> None:
         sums[:, j] += np.bincount(codes, weights=rows[:, j], minlength=n_units)
 
 
-def _refuse_non_finite(total: FloatArray, anchors: FloatArray, columns: tuple[str, ...]) -> None:
-    bad = ~(np.isfinite(np.diag(total)) & np.isfinite(anchors).all(axis=0))
+def _refuse_non_finite(total: FloatArray, finite: NDArray[np.bool_], columns: tuple[str, ...]) -> None:
+    bad = ~(np.isfinite(np.diag(total)) & finite)
     if bad.any():
         names = ", ".join(repr(columns[j]) for j in np.flatnonzero(bad))
         raise DataError(
