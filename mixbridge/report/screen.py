@@ -136,6 +136,10 @@ def _rows_used(study: StudyView) -> list[str]:
             )
     else:
         lines.append(f"  primary   {study.primary}: {fit.status}")
+    if study.curve.near_dependency:
+        digits = int(np.log10(study.curve.condition))
+        text = f"columns are nearly collinear, {study.curve.near_dependency}: about {digits} of 16 digits are lost"
+        lines.append(shorten(f"  note      {text}", WIDTH))
     lines += [shorten(f"  note      {note}", WIDTH) for note in account.notes[:2]]
     if len(account.notes) > 2:
         lines.append(f"  note      {len(account.notes) - 2} more in study.panel.accounting")

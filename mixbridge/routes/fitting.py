@@ -166,7 +166,8 @@ def _least_squares(
         notes = (*notes, f"{fit.form}: degrees of freedom {fit.df}, so no scale and no standard errors")
     covariance = np.full((2, 2), np.nan)
     if route in ("pooled", "within") and fit.df > 0:
-        covariance[1, 1] = 2.0 * scale**2 / fit.df
+        exact_df = curve.df_within if route == "within" else fit.df
+        covariance[1, 1] = 2.0 * scale**2 * exact_df / fit.df**2
     return replace(
         blank,
         status=status,

@@ -107,7 +107,7 @@ def solve(curve: Curve, pair: Pair) -> Components:
     """
     q = np.array([value(curve, form) for form in pair.forms])
     scale = np.abs(pair.system).max(axis=1)
-    if np.linalg.cond(pair.system / scale[:, None]) > 1e12:
+    if scale.min() <= 1e-12 * curve.n or np.linalg.cond(pair.system / scale[:, None]) > 1e12:
         raise NotEstimableError(
             "the two forms have proportional expectations, so the components cannot be separated"
         )
@@ -211,8 +211,7 @@ def swamy_arora(curve: Curve, conventions: Conventions) -> Pair:
         system = np.array([[df_w, 0.0], [df_b / harmonic, df_b]])
         return Pair((first, second), system, len(curve.sizes) == 1)
     system = np.array([[df_w, 0.0], expectations(curve, second)])
-    if form == "size_weighted":
-        system[1, 0] = df_b
+    system[1, 0 if form == "size_weighted" else 1] = df_b  # where the exact expectation is N - K_p
     return Pair((first, second), system, conventions["count"] == "rank")
 
 
@@ -280,6 +279,7 @@ def pooled_minus_within(curve: Curve, conventions: Conventions) -> Pair:
 
     Greene, *Econometric Analysis*; from memory.
     """
+    _require_remainders(curve)
     df_w, df = within_df(curve, conventions), curve.n - curve.rank
     total = pooled_form(curve, "pooled residual sum of squares", 1.0, np.ones(len(curve.sizes)))
     return Pair((within_form(curve), total), np.array([[float(df_w), 0.0], [float(df), float(df)]]), False)

@@ -156,8 +156,10 @@ class Fit:
         """Standard errors of the two variances, and by the delta method of ratio and ICC."""
         c = self.components_covariance
         unit, idiosyncratic = np.sqrt(np.diag(c))
-        gradient = np.array([1.0, -self.ratio]) / self.idiosyncratic_variance
-        ratio = float(np.sqrt(max(float(gradient @ c @ gradient), 0.0))) if np.isfinite(c).all() else np.nan
+        ratio = np.nan
+        if np.isfinite(c).all() and self.idiosyncratic_variance > 0.0:
+            gradient = np.array([1.0, -self.ratio]) / self.idiosyncratic_variance
+            ratio = float(np.sqrt(max(float(gradient @ c @ gradient), 0.0)))
         return pd.Series(
             [unit, idiosyncratic, ratio, ratio / (1.0 + self.ratio) ** 2], index=[*COMPONENTS, "ratio", "icc"]
         )

@@ -1,0 +1,104 @@
+"""The command line: outputs and exit statuses."""
+
+from __future__ import annotations
+
+import json
+import subprocess
+import sys
+
+import pytest
+
+import mixbridge
+from mixbridge.cli import main
+
+FORMULA = "honey ~ forage + feeding + altitude"
+
+
+@pytest.fixture
+def file(tmp_path):
+    path = tmp_path / "honey.csv"
+    mixbridge.demo.apiaries().to_csv(path, index=False)
+    return str(path)
+
+
+def check(file, *more):
+    return main(["check", file, "--formula", FORMULA, "--unit", "apiary", *more])
+
+
+def test_check_prints_the_screen_of_the_library(file, capsys):
+    assert check(file, "--period", "season") == 0
+    study = mixbridge.crosscheck(FORMULA, mixbridge.demo.apiaries(), unit="apiary", period="season")
+    assert capsys.readouterr().out == f"{study}\n"
+
+
+def test_check_reads_parquet_and_prints_the_record(tmp_path, capsys):
+    pytest.importorskip("pyarrow")
+    path = tmp_path / "honey.parquet"
+    mixbridge.demo.apiaries().to_parquet(path)
+    assert check(str(path), "--json", "--primary", "ml", "--confidence", "0.9") == 0
+    record = json.loads(capsys.readouterr().out)
+    assert record["primary"] == "ml"
+    assert record["confidence"] == 0.9
+    study = mixbridge.crosscheck(FORMULA, mixbridge.demo.apiaries(), unit="apiary")
+    assert record["fits"]["ml"]["ratio"] == study.fit("ml").ratio
+
+
+def test_routes_can_be_chosen(file, capsys):
+    assert check(file, "--routes", "swamy_arora, within") == 0
+    out = capsys.readouterr().out
+    assert "swamy_arora" in out
+    assert "nerlove" not in out
+
+
+def test_demo_runs_and_saves_its_data(tmp_path, capsys):
+    path = tmp_path / "demo.csv"
+    assert main(["demo", "--save", str(path)]) == 0
+    assert "Cross-check of honey ~ forage + feeding + altitude" in capsys.readouterr().out
+    assert path.read_bytes() == mixbridge.demo.path().read_bytes()
+    assert main(["demo", "--save", str(tmp_path / "nowhere" / "demo.csv")]) == 2
+    assert "cannot write" in capsys.readouterr().err
+
+
+@pytest.mark.parametrize(
+    ("arguments", "message"),
+    [
+        (["--formula", "honey ~ forrage", "--unit", "apiary"], "Did you mean 'forage'"),
+        (["--formula", "honey ~ forage", "--unit", "apiray"], "apiary"),
+        (["--formula", "honey ~ forage", "--unit", "apiary", "--primary", "rmel"], "reml"),
+        (["--formula", "honey ~ forage", "--unit", "apiary", "--confidence", "95"], "between 0 and 1"),
+        (["--formula", "honey ~ forage", "--unit", "apiary", "--incomplete-rows", "refuse"], "refused"),
+        (["--formula", "honey ~ __import__('os').getcwd()", "--unit", "apiary"], "log"),
+        (["--formula", "honey ~ open('x')", "--unit", "apiary"], "log"),
+        (["--formula", "honey ~ forage.to_csv('x')", "--unit", "apiary"], "log"),
+    ],
+)
+def test_unusable_input_has_exit_status_two_and_says_what_to_do(file, capsys, arguments, message):
+    assert main(["check", file, *arguments]) == 2
+    captured = capsys.readouterr()
+    assert captured.out == ""
+    assert message in captured.err
+
+
+def test_a_missing_file_is_unusable_input(tmp_path, capsys):
+    assert check(str(tmp_path / "none.csv")) == 2
+    assert "none.csv" in capsys.readouterr().err
+
+
+def test_help_teaches(capsys):
+    for arguments in (["--help"], ["check", "--help"], ["demo", "--help"]):
+        with pytest.raises(SystemExit) as ended:
+            main(arguments)
+        assert ended.value.code == 0
+        assert max(map(len, capsys.readouterr().out.split("\n"))) <= 110
+    with pytest.raises(SystemExit) as ended:
+        main(["check"])
+    assert ended.value.code == 2
+
+
+def test_module_runs_as_a_program():
+    done = subprocess.run(
+        [sys.executable, "-m", "mixbridge", "demo"], capture_output=True, text=True, check=False
+    )
+    assert done.returncode == 0
+    assert done.stderr == ""
+    assert "Invented data" in done.stdout
