@@ -111,7 +111,7 @@ class Pivot:
         if at_zero < low:
             note = (
                 f"empty: F(0) = {at_zero:.4g} lies below the {tail:.4g} quantile {low:.4g}, so even "
-                "ratio 0 is rejected; unit means vary less than the model allows, which no ratio >= 0 explains"
+                "ratio 0 is rejected; unit means vary less than the model allows; no ratio >= 0 explains it"
             )
             return RatioSet(np.nan, np.nan, True, note)
         upper = self.solve(low)

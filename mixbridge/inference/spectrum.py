@@ -81,7 +81,7 @@ def class_factors(curve: Curve) -> list[FloatArray]:
     if total > RANK_LIMIT:
         raise DataError(
             f"the unit means of X have ranks adding up to {total} over {len(factors)} distinct unit sizes; "
-            f"exact null laws are computed up to {RANK_LIMIT}. The F test of unit intercepts has no such limit."
+            f"exact null laws are taken up to {RANK_LIMIT}. The F test of unit intercepts has no such limit."
         )
     return factors
 
