@@ -6,11 +6,14 @@ import numpy as np
 
 from mixbridge.errors import IdentificationError
 from mixbridge.ratio import curve_of
-from mixbridge.reconcile.identities.plain import EPS, largest, least_squares
+from mixbridge.reconcile.identities.plain import largest, least_squares
 from mixbridge.reconcile.identities.registry import Compared, Unmet, identity
 from mixbridge.reconcile.identities.setting import Setting, multiple
 
-__all__: list[str] = []
+__all__ = ["SIZE", "within_bounds"]
+
+ENDLESS = 1e80
+"""Size times ratio that stands for infinity: no between variation weighs anything beside within variation."""
 
 SIZE = "relative to the coefficient or its standard error, whichever is larger"
 
@@ -27,11 +30,15 @@ def pooled_end(setting: Setting) -> Compared | Unmet:
     if missing:
         return Unmet(missing)
     plain, left = setting.plain, setting.fits["pooled"].beta
-    total = np.linalg.lstsq(*_split(plain.stacked(plain.sizes)), rcond=None)[0]
-    right = plain.beta(total)
+    right = plain.beta(_by_singular_values(plain.stacked(plain.sizes)))
     solved = plain.at(0.0)
     size, amplified = plain.bounds(right, solved, setting.curve.n - plain.rank)
     tolerance = multiple(plain.rank) * amplified
+    if setting.snapped:
+        tolerance = (
+            tolerance
+            + solved.condition * plain.reach(solved) * setting.stored_length(right) / plain.unit / size
+        )
     at, difference = largest(left, right, size, tolerance)
     name = setting.curve.names[at]
     return Compared(
@@ -56,7 +63,7 @@ def pooled_end(setting: Setting) -> Compared | Unmet:
 def within_end(setting: Setting) -> Compared | Unmet:
     """Compare the curve at a ratio beyond rounding with the within fit."""
     return _slopes(
-        setting, setting.curve.at(1.0 / (EPS**2 * setting.curve.sizes[0])).beta, "curve at an endless ratio"
+        setting, setting.curve.at(ENDLESS / setting.curve.sizes[0]).beta, "curve at an endless ratio"
     )
 
 
@@ -77,7 +84,7 @@ def one_row_units(setting: Setting) -> Compared | Unmet:
         shorter = curve_of(moments.without_sizes(1))
     except IdentificationError as error:
         return Unmet(f"estimable without one-row units: {error}")
-    right = shorter.at(1.0 / (EPS**2 * shorter.sizes[0])).beta
+    right = shorter.at(ENDLESS / shorter.sizes[0]).beta
     lost = ~shorter.free_within
     return _slopes(
         setting,
@@ -127,8 +134,8 @@ def within_bounds(setting: Setting, free: np.ndarray) -> tuple[np.ndarray, np.nd
     return size[free], np.maximum(amplified[free], 1.0), solved.condition
 
 
-def _split(factor: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    return factor[:, :-1], factor[:, -1]
-
-
-__all__ += ["within_bounds"]
+def _by_singular_values(factor: np.ndarray) -> np.ndarray:
+    """Return least-squares coefficients of the last column, by a singular value decomposition of the others."""
+    length = np.sqrt((factor[:, :-1] ** 2).sum(axis=0))
+    left, values, right = np.linalg.svd(factor[:, :-1] / length, full_matrices=False)
+    return np.asarray(right.T @ (left.T @ factor[:, -1] / values) / length)

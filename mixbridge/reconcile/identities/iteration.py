@@ -28,7 +28,7 @@ def _map(setting: Setting) -> tuple[Callable[[FloatArray], FloatArray], float]:
     curve = setting.curve
     p, size = curve.rank, float(curve.sizes[0])
     within, means = curve.within, np.sqrt(size) * curve.between[0]
-    axes = np.linalg.eigh(means[:, :p].T @ means[:, :p])[1]
+    axes = _common_axes(within[:, :p], means[:, :p])
     inside, outside = within[:, :p] @ axes, means[:, :p] @ axes
     on_within, on_between = (inside**2).sum(axis=0), (outside**2).sum(axis=0)
     only_within, only_between = curve.rank - curve.rank_between, curve.rank_constant
@@ -54,9 +54,33 @@ def _map(setting: Setting) -> tuple[Callable[[FloatArray], FloatArray], float]:
         toward = np.where(np.isfinite(w)[:, None], finite * share / (other + finite * share), 1.0)
         deviations = rest + (other * (toward * gap) ** 2).sum(axis=1)
         unit_means = least + (share * ((1.0 - toward) * gap) ** 2).sum(axis=1)
-        return np.asarray(deviations / unit_means / (size - 1.0))
+        # unit means fitted exactly: the next variance ratio is endless
+        ratio = np.divide(deviations, unit_means, out=np.full(len(w), np.inf), where=unit_means > 0.0)
+        return np.asarray(ratio / (size - 1.0))
 
     return step, amplified
+
+
+def _common_axes(within: FloatArray, between: FloatArray) -> FloatArray:
+    """Return axes in which both products are diagonal, their sum being the identity, in increasing share between.
+
+    Axes of small shares are exact only from the factor in which the share is small: the right singular
+    vectors of the one are
+    taken below the widest gap in the shares, those of the other above it.
+    """
+    on_within, from_within = _right_vectors(within)
+    _, from_between = _right_vectors(between)
+    shares = np.concatenate([[0.0], on_within, [1.0]])
+    small = int(np.argmax(np.diff(shares)))
+    return np.column_stack([from_between[:, : len(on_within) - small], from_within[:, :small][:, ::-1]])
+
+
+def _right_vectors(factor: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Return squared singular values, smallest first, and their right vectors as columns."""
+    _, values, vectors = np.linalg.svd(factor)
+    squares = np.zeros(factor.shape[1])
+    squares[: len(values)] = values**2
+    return np.minimum(squares[::-1], 1.0), vectors[::-1].T
 
 
 def _unmet(setting: Setting) -> str | None:

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mixbridge.reconcile.identities.ends import SIZE, within_bounds
-from mixbridge.reconcile.identities.plain import largest, least_squares
+from mixbridge.reconcile.identities.plain import EPS, largest, least_squares
 from mixbridge.reconcile.identities.registry import Compared, Unmet, identity
 from mixbridge.reconcile.identities.restricted import scoring_step
 from mixbridge.reconcile.identities.setting import Setting, components_ratio, multiple
@@ -262,8 +262,8 @@ def wallace_hussain_is_minque_zero(setting: Setting) -> Compared | Unmet:
     one, other = setting.fits[pair[0]], setting.fits[pair[1]]
     left = np.array([one.idiosyncratic_variance, one.unit_variance_raw])
     right = np.array([other.idiosyncratic_variance, other.unit_variance_raw])
-    errors = np.sqrt(np.diag(other.components_covariance))[::-1]
-    size = np.fmax(np.abs(right), errors)
+    errors = np.sqrt(np.maximum(np.diag(other.components_covariance), 0.0))[::-1]
+    size = np.fmax(np.fmax(np.abs(right), errors), setting.curve.unit * EPS)
     rounding = _solved_rounding(setting, one) + _solved_rounding(setting, other)
     tolerance = multiple(setting.curve.rank) * setting.curve.condition * rounding / size
     at, difference = largest(left, right, size, tolerance)

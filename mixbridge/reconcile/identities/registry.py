@@ -25,6 +25,9 @@ __all__ = [
     "result",
 ]
 
+TELLING = 1e-2
+"""Tolerance above which agreement says nothing: the columns leave too few digits."""
+
 HOLDS, DOES_NOT_APPLY, FAILS = "holds", "does not apply", "FAILS"
 
 
@@ -126,14 +129,18 @@ def identity(*, number: int, name: str, statement: str, source: str) -> Callable
 
 
 def result(rule: Rule, setting: Setting) -> Identity:
-    """Check one rule: it holds only if the distance is a number not above the tolerance."""
+    """Check one rule: it holds if the distance is a number not above the tolerance, itself small enough to tell."""
     outcome = rule.check(setting)
     about = (rule.key, rule.number, rule.name, rule.statement, rule.source)
     if isinstance(outcome, Unmet):
         return Identity(*about, DOES_NOT_APPLY, outcome.condition)
+    agrees = outcome.difference <= outcome.tolerance
+    if agrees and outcome.tolerance > TELLING:
+        few = f"digits left to compare: rounding alone could make a difference of {outcome.tolerance:.2g}"
+        return Identity(*about, DOES_NOT_APPLY, few)
     return Identity(
         *about,
-        HOLDS if outcome.difference <= outcome.tolerance else FAILS,
+        HOLDS if agrees else FAILS,
         outcome.condition,
         float(outcome.left),
         float(outcome.right),

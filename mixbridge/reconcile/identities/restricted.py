@@ -28,7 +28,10 @@ def _usable_reml(setting: Setting) -> str | None:
 
 @dataclass(frozen=True, slots=True)
 class _Step:
-    """One scoring step from a ratio: where it leads, standard errors there, and how rounding is amplified."""
+    """One scoring step from a ratio: where it leads, standard errors there, and how rounding is amplified.
+
+    All are NaN where the information is not positive.
+    """
 
     components: FloatArray
     errors: FloatArray
@@ -49,6 +52,8 @@ def scoring_step(setting: Setting, psi: float) -> _Step:
     unit = g1 + r1 / start
     score = np.array([m - r / start - psi * unit, unit]) / start
     information = np.array([[m - psi * (2.0 * g1 + psi * g2), g1 + psi * g2], [g1 + psi * g2, -g2]])
+    if not (np.diag(information) > 0.0).all():
+        return _Step(np.full(2, np.nan), np.full(2, np.nan), np.nan)
     scale = np.sqrt(np.diag(information))
     scaled = information / np.outer(scale, scale)
     inverse = np.linalg.inv(scaled) / np.outer(scale, scale)
@@ -141,13 +146,17 @@ def minque_is_scoring(setting: Setting) -> Compared | Unmet:
         if "prior" in fit.conventions and np.isfinite(fit.idiosyncratic_variance):
             prior = float(str(fit.conventions["prior"]))
             step = scoring_step(setting, prior)
+            if not np.isfinite(step.amplified):
+                continue
             left = np.array([fit.idiosyncratic_variance, fit.unit_variance_raw])
             names = (f"{key}, prior {prior:g}", f"scoring step from ratio {prior:g}")
             found.append(
                 _step_compared(setting, left, step.components, step=step, names=names, condition="any panel")
             )
     if not found:
-        return Unmet("no minimum-norm route has estimates on these rows")
+        return Unmet(
+            "positive information: no minimum-norm route has estimates on these rows, or both are confounded"
+        )
     return max(
         found, key=lambda one: one.difference / one.tolerance if np.isfinite(one.difference) else np.inf
     )
@@ -183,7 +192,8 @@ def _equations(setting: Setting, fit: Fit) -> tuple[FloatArray, FloatArray, floa
     amplified = float(
         solved.condition * (np.sqrt(rough / forms).max() + np.sqrt(total) + (whole / traces).max())
     )
-    return forms / sigma**2, traces / sigma, amplified * np.sqrt(total)
+    stored = setting.snapped * setting.stored_length(fit.beta) / plain.unit / np.sqrt(solved.residual)
+    return forms / sigma**2, traces / sigma, amplified * np.sqrt(total) + 2.0 * stored / multiple(p)
 
 
 @identity(
@@ -245,6 +255,8 @@ def _recombined(setting: Setting, fit: Fit) -> tuple[float, float, float, float]
     without = -0.5 * (m * np.log(2.0 * np.pi * variance) + m + logs + solved.log_det + doubled)
     total = max(solved.total, setting.engine_total(components_ratio(fit))) / solved.residual
     rounding = m * solved.condition * np.sqrt(total) + p * max(solved.condition, pooled.condition)
+    stored = setting.snapped * setting.stored_length(fit.beta) / plain.unit / np.sqrt(solved.residual)
+    rounding += m * stored / multiple(p)
     return (
         without + 0.5 * (pooled.log_det + doubled),
         without,

@@ -106,8 +106,19 @@ class Setting:
                 bound[j] = floor[moments.columns.index(name)]
         return bound
 
+    @property
+    def snapped(self) -> bool:
+        """Whether the engine took as zero what the stored rows leave of a column or of a combination within units."""
+        curve = self.curve
+        nonzero = int((self.plain.within[:, :-1] != 0.0).any(axis=0).sum())
+        return nonzero > curve.columns_within or any(found.others for found in curve.within_span.dependencies)
+
+    def stored_length(self, beta: FloatArray) -> float:
+        """Return how long a residual the stored rounding of the columns can leave at these coefficients, in data units."""
+        return float(self.stored @ np.abs(beta))
+
     def engine_total(self, psi: float) -> float:
-        """Return the weighted sum of squares of the engine's outcome, the pooled residual, scaled."""
+        """Return the weighted sum of squares of the pooled residual, the engine's outcome, scaled."""
         p, weights = self.curve.rank, self.curve.sizes / (1.0 + self.curve.sizes * psi)
         whole = self.curve.within_products[p, p] + weights @ self.curve.between_products[:, p, p]
         return float(whole) * self.curve.unit / self.plain.unit**2

@@ -57,12 +57,12 @@ def ridge_on_indicators(setting: Setting) -> Compared | Unmet:
     sides = {}
     for key, fit in setting.on_curve():
         sides[key] = ridge(setting.plain, setting.solved[key], components_ratio(fit))
-    reason = "least squares by triangular factors on both sides"
+    reason = "least squares by triangular factors on both sides: "
     return _worst(
         setting,
         sides,
         what="least squares on indicators, penalised",
-        loss=1.0,
+        loss={},
         reason=reason,
         condition="any panel",
     )
@@ -88,8 +88,10 @@ def quasi_demeaned_rows(setting: Setting) -> Compared | Unmet:
         share = fit.quasi_demeaning.reindex(counts).to_numpy()[setting.rows.codes]
         rows = np.column_stack([x, y]) - share[:, None] * averages
         sides[key] = back @ np.append(least_squares(rows).slope, 1.0)
-    loss = _taking(setting)
-    reason = f"rounding of the moments themselves allowed for by a factor {loss:.3g}"
+    # 1 - share carries the rounding of the share, larger by 1 / (1 - share) = sqrt(1 + T psi)
+    largest_size, taking = float(setting.curve.sizes[-1]), _taking(setting)
+    loss = {key: taking * np.sqrt(1.0 + largest_size * components_ratio(setting.fits[key])) for key in sides}
+    reason = "taking of moments and 1 / (1 - largest share): "
     return _worst(
         setting,
         sides,
@@ -101,7 +103,13 @@ def quasi_demeaned_rows(setting: Setting) -> Compared | Unmet:
 
 
 def _worst(
-    setting: Setting, sides: dict[str, FloatArray], *, what: str, loss: float, reason: str, condition: str
+    setting: Setting,
+    sides: dict[str, FloatArray],
+    *,
+    what: str,
+    loss: dict[str, float],
+    reason: str,
+    condition: str,
 ) -> Compared | Unmet:
     """Pick the coefficient of the route whose two sides are furthest apart for their tolerance."""
     if not sides:
@@ -112,7 +120,11 @@ def _worst(
         left, solved = setting.fits[key].beta, setting.solved[key]
         total = setting.engine_total(components_ratio(setting.fits[key]))
         size, amplified = setting.plain.bounds(right, solved, df, total)
-        tolerance = multiple(setting.plain.rank) * loss * amplified
+        more = loss.get(key, 1.0)
+        tolerance = multiple(setting.plain.rank) * more * amplified
+        if setting.snapped:
+            stored = setting.stored_length(right) / setting.plain.unit
+            tolerance = tolerance + solved.condition * setting.plain.reach(solved) * stored / size
         at, difference = largest(left, right, size, tolerance)
         found.append(
             (
@@ -125,9 +137,9 @@ def _worst(
                     f"{setting.curve.names[at]}: {what}",
                     difference[at],
                     tolerance[at],
-                    f"{reason}; 32 (columns + 1) x 2.2e-16 x condition {solved.condition:.3g} x "
-                    f"amplification in this "
-                    "coefficient; relative to the coefficient or its standard error, whichever is larger",
+                    f"{reason}{more:.3g} x 32 (columns + 1) x 2.2e-16 x condition {solved.condition:.3g} x "
+                    "amplification in this coefficient; relative to the coefficient or its standard error, "
+                    "whichever is larger",
                 ),
             )
         )
@@ -201,22 +213,22 @@ def predicted_effects(setting: Setting) -> Compared | Unmet:
         return Unmet("positive unit variance: no route on these rows has one")
     key = "reml" if "reml" in keys else keys[0]
     fit, plain = setting.fits[key], setting.plain
-    psi, units = components_ratio(fit), setting.curve.units
-    right = effects_first(plain, psi)
-    left = _shrunken(plain, fit)
+    psi, solved = components_ratio(fit), setting.solved[key]
+    right, left = effects_first(plain, psi), _shrunken(plain, fit)
     length = float(np.sqrt((right**2).sum()))
-    scale = plain.unit / np.sqrt(units)
+    if not length > 0.0:
+        return Unmet("predicted effects: all are zero")
+    scale = plain.unit / np.sqrt(setting.curve.units)
+    columns = np.sqrt((plain.between**2).sum(axis=(0, 1)))
+    reach = np.sqrt((solved.root**2).sum(axis=1)) * np.sqrt(max(solved.total, setting.engine_total(psi)))
     strength = 1.0 + float(plain.sizes[-1]) * psi
+    carried = solved.condition * float(columns[:-1] @ reach)
+    lost = strength * plain.at(0.0).condition * float(columns[-1])
+    origins = float(np.abs(plain.origin[:-1]) @ np.abs(fit.beta) + abs(plain.origin[-1])) / scale
     stored = (
-        float(np.abs(plain.origin[:-1]) @ np.abs(fit.beta) + abs(plain.origin[-1]))
-        * np.sqrt(units)
-        / plain.unit
+        setting.snapped * solved.condition * np.sqrt(strength) * setting.stored_length(fit.beta) / plain.unit
     )
-    solved = setting.solved[key]
-    total = float(np.sqrt((plain.between[:, :, -1] ** 2).sum()))
-    tolerance = (
-        multiple(plain.rank) * solved.condition * strength * total / length + 4.0 * EPS * stored / length
-    )
+    tolerance = multiple(plain.rank) * (carried + lost) + 4.0 * EPS * origins + stored
     return Compared(
         "any panel, positive unit variance",
         float(np.sqrt((left**2).sum())) * scale,
@@ -224,12 +236,12 @@ def predicted_effects(setting: Setting) -> Compared | Unmet:
         f"root mean square predicted effect, {key}: shrinkage x unit residual",
         "root mean square predicted effect: mixed-model equations",
         float(np.sqrt(((left - right) ** 2).sum())) / length,
-        tolerance,
-        f"distance of the two sets of effects relative to their length; 32 (columns + 1) x 2.2e-16 x "
-        f"condition "
-        f"{solved.condition:.3g} x (1 + largest size x ratio) {strength:.3g} x length of unit means over "
-        f"length of effects, "
-        "and the last place of coefficients times origins of the columns",
+        tolerance / length,
+        "distance of the two sets of effects relative to their length; 32 (columns + 1) x 2.2e-16 x "
+        "(rounding of "
+        f"coefficients in unit means {carried / length:.3g} + (1 + largest size x ratio) x condition of X "
+        f"x unit "
+        f"means {lost / length:.3g}), and the last place of coefficients times origins",
     )
 
 
