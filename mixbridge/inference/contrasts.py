@@ -18,13 +18,15 @@ not be non-negative: then there is no statistic.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 from scipy.stats import chi2
 
+from mixbridge.inference.robust_regression import regression_of
+from mixbridge.moments.products import UnitProducts
 from mixbridge.ratio import Curve, root_of
 from mixbridge.routes import Fit
 
@@ -101,14 +103,16 @@ def shared_directions(curve: Curve) -> FloatArray:
     return np.asarray(left[:, lost.shape[1] :])
 
 
-def contrasts(curve: Curve, fit: Fit) -> tuple[Contrast, ...]:
-    """Compute every model-based contrast at the ratio and variances of a fit.
+def contrasts(curve: Curve, fit: Fit, products: UnitProducts | None = None) -> tuple[Contrast, ...]:
+    """Compute every contrast at the ratio and variances of a fit.
 
     Parameters
     ----------
     curve : Curve
     fit : Fit
         A curve route with a positive idiosyncratic variance.
+    products : UnitProducts, optional
+        Of the same rows: adds cluster-robust contrasts.
 
     Returns
     -------
@@ -143,7 +147,33 @@ def contrasts(curve: Curve, fit: Fit) -> tuple[Contrast, ...]:
             )
             if weights == "T / (1 + T psi)":
                 found.append(_unit_means(curve, fit, inside, between, own))
+    if products is not None:
+        found += _robust(curve, fit, products, directions)
     return tuple(found)
+
+
+def _robust(curve: Curve, fit: Fit, products: UnitProducts, directions: FloatArray) -> list[Contrast]:
+    """Test the contrasts with a covariance robust to any dependence within units.
+
+    ``b_w`` and ``b_b``, weights ``T / (1 + T psi)``, are the two halves of the regression with unit means; with its residuals and one
+    multiplier N / (N - 1) the within - between, within - GLS and unit-means forms are one statistic, since the three contrasts
+    are linear images of one another (Arellano 1993).
+    """
+    inside = regression_of(curve, products, np.inf)
+    between = regression_of(curve, products, "between", curve.sizes / (1.0 + curve.sizes * fit.ratio))
+    to_white = np.linalg.inv(curve.to_beta[:, :-1])
+    parts = [directions.T @ to_white @ side.root for side in (inside, between)]
+    influence = inside.scores() @ parts[0].T - between.scores() @ parts[1].T
+    units, d = influence.shape
+    gap = _within(curve, directions).values - _between(curve, fit.ratio, "T / (1 + T psi)", directions).values
+    covariance = influence.T @ influence * (units / (units - 1.0))
+    measure = parts[0] @ parts[0].T
+    name = "cluster-robust, multiplier N/(N - 1)"
+    if units <= d:
+        reason = f"{units} units for {d} directions: a cluster-robust covariance of this rank does not exist"
+        return [Contrast("unit means", name, "T / (1 + T psi)", np.nan, d, np.nan, np.nan, np.nan, reason)]
+    item = _contrast("unit means", name, "T / (1 + T psi)", gap, covariance, measure)
+    return [item, replace(item, name="within - between"), replace(item, name="within - gls", weights="none")]
 
 
 def contrast_table(found: tuple[Contrast, ...]) -> pd.DataFrame:

@@ -155,10 +155,8 @@ def _agreement(study: StudyView, most: int) -> list[str]:
     votes = [key for key in study.fits if key not in REFERENCE_ROUTES and key != primary]
     thresholds = Thresholds()
     lines = [
-        f"Do {len(votes)} other random-effects routes agree with {primary}? "
-        f"{study.confidence:.0%} intervals, {study.reference} reference; immaterial:",
-        f"gap below {thresholds.gap:g} standard errors (se) of {primary} "
-        f"and half-widths within {thresholds.width:.0%}",
+        f"Do {len(votes)} other random-effects routes agree with {primary}? Immaterial: gap below {thresholds.gap:g} standard",
+        f"errors (se) of {primary} and half-widths within {thresholds.width:.0%}. {study.confidence:.0%} intervals: {study.reference}.",
     ]
     beside = [key for key in REFERENCE_ROUTES if key in study.fits and key != primary]
     terms = [str(term) for term in dict.fromkeys(table["term"])]

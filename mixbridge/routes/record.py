@@ -78,6 +78,8 @@ class Fit:
         For `ml` and `reml`.
     rows, units : int
         Rows and units used.
+    robust : ndarray of shape (p, p) or None
+        Covariance of the coefficients where the conventions ask for a robust one.
     """
 
     route: str
@@ -103,6 +105,7 @@ class Fit:
     forms_table: tuple[tuple[str, float, float, float], ...] = ()
     log_likelihood: float = np.nan
     certificate: Certificate | None = None
+    robust: FloatArray | None = None
 
     def __post_init__(self) -> None:
         """Make arrays and mappings read-only."""
@@ -129,6 +132,8 @@ class Fit:
     @property
     def covariance_array(self) -> FloatArray:
         """``scale (X'V_0^-1 X)^-1`` as an array; NaN in the rows of coefficients that are not estimable."""
+        if self.robust is not None:
+            return self.robust.copy()
         covariance = self.scale * (self.root @ self.root.T)
         lost = ~np.isfinite(self.beta)
         covariance[lost] = np.nan
@@ -137,7 +142,7 @@ class Fit:
 
     @property
     def covariance(self) -> pd.DataFrame:
-        """Covariance of the coefficients, model-based, with the scale named in the conventions."""
+        """Covariance of the coefficients, of the kind named in the conventions."""
         return pd.DataFrame(self.covariance_array, index=list(self.terms), columns=list(self.terms))
 
     @property

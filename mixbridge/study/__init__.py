@@ -1,0 +1,6 @@
+"""The study: everything below, bound for the user."""
+
+from mixbridge.study.crosscheck import crosscheck
+from mixbridge.study.record import Study
+
+__all__ = ["Study", "crosscheck"]

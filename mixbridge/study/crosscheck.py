@@ -1,0 +1,92 @@
+"""`crosscheck`: the one call."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Literal
+
+from mixbridge.errors import OptionError
+from mixbridge.moments import collect
+from mixbridge.panel import build_panel
+from mixbridge.routes import LEDGER_ROUTES, named_route
+from mixbridge.study.record import Study
+
+__all__ = ["crosscheck"]
+
+
+def crosscheck(
+    formula: str,
+    data: object,
+    *,
+    unit: str,
+    period: str | None = None,
+    primary: str = "reml",
+    routes: Sequence[str] | None = None,
+    confidence: float = 0.95,
+    incomplete_rows: Literal["drop", "refuse"] = "drop",
+    trusted: bool = True,
+) -> Study:
+    """Fit one random-intercept model by every route and set the results side by side.
+
+    Parameters
+    ----------
+    formula : str
+        Fixed part in patsy's notation, ``"honey ~ forage + feeding"``; the grouping factor is `unit`, never
+        part of it.
+    data : DataFrame, object with an Arrow stream, or path
+        One row per unit and period.
+    unit : str
+        Column of the grouping factor (apiary, firm, school, patient).
+    period : str, optional
+        Column that orders the rows of a unit; needed by ``first_difference``.
+    primary : str
+        The route that is reported.
+    routes : sequence of str, optional
+        Routes shown; all of `mixbridge.routes.LEDGER_ROUTES` unless given. The primary one is always among
+        them.
+    confidence : float
+        Level of the intervals, between 0 and 1.
+    incomplete_rows : {"drop", "refuse"}
+        Whether rows with missing values are dropped and counted, or refused.
+    trusted : bool
+        False restricts the formula to column names and a fixed list of transforms.
+
+    Returns
+    -------
+    Study
+
+    Raises
+    ------
+    DataError, FormulaError, OptionError, IdentificationError
+        Each says what is wrong, where, and what to do.
+
+    Examples
+    --------
+    >>> import mixbridge
+    >>> data = mixbridge.demo.apiaries()
+    >>> study = mixbridge.crosscheck("honey ~ forage + feeding + altitude", data, unit="apiary")
+    >>> study.fit("reml").status
+    'fitted'
+    """
+    if not (isinstance(confidence, (int, float)) and 0.0 < confidence < 1.0):
+        raise OptionError(
+            f"confidence={confidence!r} is not allowed; allowed: a number between 0 and 1, such as 0.95."
+        )
+    chosen = tuple(dict.fromkeys(LEDGER_ROUTES if routes is None else routes))
+    for key in (*chosen, primary):
+        named_route(key)
+    panel = build_panel(
+        formula, data, unit=unit, period=period, incomplete_rows=incomplete_rows, trusted=trusted, env=1
+    )
+    columns = (*panel.names, panel.outcome)
+    codes = panel.codes
+    opened, moments = collect(
+        lambda: ((codes[start : start + y.size], x, y) for start, x, y in panel.blocks()),
+        columns,
+        panel.unit_keys,
+    )
+    study = Study(
+        panel, opened, moments, primary, chosen if primary in chosen else (*chosen, primary), confidence
+    )
+    _ = study.curve  # an unidentified design is refused here, not at the first question
+    return study
