@@ -1,0 +1,135 @@
+"""Time tasks against each other, and measure the memory that a task takes at its peak."""
+
+from __future__ import annotations
+
+import ctypes
+import gc
+import multiprocessing
+import statistics
+import time
+import tracemalloc
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from pathlib import Path
+
+STATUS = Path("/proc/self/status")
+RESET = Path("/proc/self/clear_refs")
+SMALL = 200
+
+
+@dataclass(frozen=True, slots=True)
+class Timing:
+    """Wall-clock seconds of one task over the rounds."""
+
+    seconds: tuple[float, ...]
+
+    @property
+    def best(self) -> float:
+        return min(self.seconds)
+
+    @property
+    def median(self) -> float:
+        return statistics.median(self.seconds)
+
+    def cells(self) -> tuple[str, str]:
+        """Return best and median as text, with a unit."""
+        return text(self.best), text(self.median)
+
+
+def text(seconds: float) -> str:
+    """Return a duration with three digits and a unit."""
+    return f"{seconds:.3g} s" if seconds >= 1.0 else f"{seconds * 1e3:.3g} ms"
+
+
+def interleaved(tasks: Mapping[str, Callable[[], object]], rounds: int) -> dict[str, Timing]:
+    """Run every task once per round, so that a busy spell of the machine meets all of them.
+
+    The first round is run and not counted when there is more than one: it pays for imports and first-touched memory.
+    """
+    seconds: dict[str, list[float]] = {name: [] for name in tasks}
+    for turn in range(rounds + 1 if rounds > 1 else 1):
+        for name, task in tasks.items():
+            gc.collect()
+            start = time.perf_counter()
+            result = task()
+            spent = time.perf_counter() - start
+            del result
+            if turn or rounds == 1:
+                seconds[name].append(spent)
+    return {name: Timing(tuple(values)) for name, values in seconds.items()}
+
+
+@dataclass(frozen=True, slots=True)
+class Peak:
+    """Bytes above what was in use before the task.
+
+    Attributes
+    ----------
+    traced : int
+        Peak of what Python and numpy allocated.
+    resident : int or None
+        Peak growth of the memory that the process held, which also sees compiled libraries; None where the system does
+        not report it (it takes Linux).
+    """
+
+    traced: int
+    resident: int | None
+
+
+def peak(prepare: Callable[[int], Callable[[], object]], units: int) -> Peak:
+    """Measure the peak memory of ``prepare(units)()`` in two processes of its own.
+
+    Neither the preparation counts nor what a first small run loads and leaves behind.
+    """
+    context = multiprocessing.get_context("spawn")
+    found = []
+    for how in (_traced, _resident):
+        receiver, sender = context.Pipe(duplex=False)
+        process = context.Process(target=how, args=(sender, prepare, units))
+        process.start()
+        sender.close()
+        try:
+            found.append(receiver.recv())
+        except EOFError:
+            process.join()
+            raise RuntimeError(
+                f"the process that measures memory ended with status {process.exitcode}."
+            ) from None
+        process.join()
+    return Peak(*found)
+
+
+def _traced(sender, prepare, units) -> None:
+    prepare(SMALL)()
+    task = prepare(units)
+    gc.collect()
+    tracemalloc.start()
+    before = tracemalloc.get_traced_memory()[0]
+    kept = task()
+    sender.send(tracemalloc.get_traced_memory()[1] - before)
+    del kept
+
+
+def _resident(sender, prepare, units) -> None:
+    prepare(SMALL)()
+    task = prepare(units)
+    gc.collect()
+    if not (RESET.exists() and STATUS.exists()):
+        sender.send(None)
+        return
+    # memory that the preparation freed goes back first, or the task would use it unseen
+    trim = getattr(ctypes.CDLL(None), "malloc_trim", None)
+    if trim is not None:
+        trim(0)
+    RESET.write_text("5")  # the high-water mark starts again from here
+    before = _status("VmRSS")
+    kept = task()
+    sender.send(_status("VmHWM") - before)
+    del kept
+
+
+def _status(field: str) -> int:
+    for line in STATUS.read_text().splitlines():
+        if line.startswith(field + ":"):
+            return int(line.split()[1]) * 1024
+    raise KeyError(field)

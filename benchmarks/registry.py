@@ -1,0 +1,35 @@
+"""The benchmarks by name."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+from benchmarks import arrays, frames, growth, likelihood, memory
+from benchmarks.profiles import Profile
+from benchmarks.results import Result
+
+
+@dataclass(frozen=True, slots=True)
+class Problem:
+    """One benchmark.
+
+    Attributes
+    ----------
+    title : str
+    run : callable
+    """
+
+    title: str
+    run: Callable[[Profile], Result]
+
+
+PROBLEMS = {
+    "arrays": Problem("From arrays to every curve route", arrays.arrays),
+    "frames": Problem("From a frame and a formula to the ledger", frames.frames),
+    "memory": Problem("Peak extra memory", memory.memory),
+    "likelihood": Problem("REML with its certificate", likelihood.likelihood),
+    "rows": Problem("All routes after the moments, by number of rows", growth.rows),
+    "sizes": Problem("All routes after the moments, by number of distinct unit sizes", growth.sizes),
+}
+"""Add a function that takes a profile and returns a result, and a line here."""
