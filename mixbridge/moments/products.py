@@ -1,0 +1,394 @@
+"""`UnitProducts`: per unit its size, its means and the products of its rows; what cluster-robust figures need."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import zipfile
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pandas as pd
+from numpy.typing import ArrayLike, NDArray
+from scipy.linalg import solve_triangular
+from scipy.linalg.blas import dtrsm
+
+from mixbridge.errors import DataError
+from mixbridge.moments.closed import Moments, collect
+from mixbridge.moments.factors import upper_factor
+from mixbridge.moments.opened import Block, Blocks, OpenMoments, add_by_unit
+
+__all__ = ["UnitProducts", "collect_products"]
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.intp]
+
+FORMAT = "mixbridge-unit-products"
+DEPENDENT = 1e-10
+"""Share of a column that is left after the earlier ones, below which it stays unscaled in the frame."""
+CENTRED = 1e-12
+"""Root of size times squared distance from the mean that needs no correction: squared it is 1e-24 of the total."""
+SCATTER_ROWS = 1024
+"""Rows whose products are formed at once when units are scattered: they stay in the cache."""
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class UnitProducts:
+    """Per unit: the number of rows, the mean of z and the products of deviations from that mean.
+
+    ``z`` holds the design columns without an explicit constant, then the outcome, as in `Moments`; scaled,
+    ``(z - shift) / scale``. Deviations are kept in *framed* coordinates f with ``deviation of scaled z = f @ frame``,
+    where ``frame`` is the triangular factor of all within products: over all units the framed products add up to
+    the identity, so that neither nearly collinear columns nor a close fit cost digits.
+
+    Attributes
+    ----------
+    design, constant, outcome, shift, scale
+        As in `Moments`.
+    keys : pandas.Index
+        One key per unit.
+    sizes : ndarray of int, shape (N,)
+        Rows of each unit.
+    means : ndarray of shape (N, k)
+        Mean of the scaled z of each unit.
+    frame : ndarray of shape (k, k)
+        Upper triangular.
+    packed : ndarray of shape (N, k (k + 1) / 2)
+        Upper triangle, row by row, of ``sum_t f_it f_it'``.
+    """
+
+    design: tuple[str, ...]
+    constant: str | None
+    outcome: str
+    shift: FloatArray
+    scale: FloatArray
+    keys: pd.Index
+    sizes: NDArray[np.int64]
+    means: FloatArray
+    frame: FloatArray
+    packed: FloatArray
+
+    def __post_init__(self) -> None:
+        """Make the arrays read-only."""
+        for name in ("shift", "scale", "sizes", "means", "frame", "packed"):
+            getattr(self, name).setflags(write=False)
+
+    @property
+    def units(self) -> int:
+        """Number of units N."""
+        return int(self.sizes.size)
+
+    @property
+    def rows(self) -> int:
+        """Number of rows n."""
+        return int(self.sizes.sum())
+
+    @property
+    def columns(self) -> tuple[str, ...]:
+        """Names of the entries of z."""
+        return (*(name for name in self.design if name != self.constant), self.outcome)
+
+    def framed(self, at: slice | IntArray | None = None) -> FloatArray:
+        """Return the framed within products of the units at these positions as full matrices, shape (m, k, k)."""
+        packed = self.packed if at is None else self.packed[at]
+        return np.asarray(np.take(packed, _places(self.frame.shape[0]), axis=1))
+
+    def within(self, at: slice | IntArray | None = None) -> FloatArray:
+        """Return the within products of the scaled z, shape (m, k, k): over all units they add up to W."""
+        return np.asarray(self.frame.T @ self.framed(at) @ self.frame)
+
+    @classmethod
+    def from_arrays(
+        cls,
+        x: ArrayLike,
+        y: ArrayLike,
+        codes: ArrayLike,
+        names: Sequence[str] | None = None,
+        outcome: str = "y",
+    ) -> UnitProducts:
+        """Take the products of arrays in memory; arguments as for `Moments.from_arrays`, keys are the codes."""
+        rows, response = np.asarray(x, dtype=float), np.asarray(y, dtype=float)
+        unit = np.asarray(codes)
+        if rows.ndim != 2 or response.shape != (rows.shape[0],) or unit.shape != response.shape:
+            raise DataError(
+                f"x {rows.shape}, y {response.shape} and codes {unit.shape} do not describe the same rows."
+            )
+        if unit.size == 0 or not np.issubdtype(unit.dtype, np.integer) or unit.min() < 0:
+            raise DataError("codes must be non-negative integers, one per row, at least one row.")
+        unit = unit.astype(np.intp, copy=False)
+        labels = tuple(names) if names is not None else tuple(f"x{j}" for j in range(rows.shape[1]))
+
+        def blocks() -> Iterable[Block]:
+            for start in range(0, unit.size, 8192):
+                yield unit[start : start + 8192], rows[start : start + 8192], response[start : start + 8192]
+
+        keys = pd.RangeIndex(int(unit.max()) + 1)
+        opened, moments = collect(blocks, (*labels, outcome), keys)
+        return collect_products(blocks, opened, moments, keys)
+
+    def select(self, at: IntArray | NDArray[np.bool_]) -> UnitProducts:
+        """Keep the units at these positions, or where a mask is true."""
+        chosen = np.asarray(at)
+        if chosen.dtype == bool and chosen.shape != (self.units,):
+            raise DataError(f"the mask has {chosen.size} entries for {self.units} units.")
+        positions = np.flatnonzero(chosen) if chosen.dtype == bool else chosen.astype(np.intp)
+        if positions.size == 0:
+            raise DataError("no unit is left.")
+        if np.unique(positions).size != positions.size:
+            raise DataError("a unit is selected more than once.")
+        return self._with(
+            self.keys[positions], self.sizes[positions], self.means[positions], self.packed[positions]
+        )
+
+    def without_sizes(self, *sizes: int) -> UnitProducts:
+        """Leave out every unit of the given sizes (one-row units: ``without_sizes(1)``)."""
+        return self.select(~np.isin(self.sizes, sizes))
+
+    def __add__(self, other: UnitProducts) -> UnitProducts:
+        """Pool with the products of other units; coordinates become those of the left side."""
+        if (self.design, self.constant, self.outcome) != (other.design, other.constant, other.outcome):
+            raise DataError(
+                "unit products of different designs cannot be pooled: "
+                f"{list(self.design)} -> {self.outcome!r} against {list(other.design)} -> {other.outcome!r}."
+            )
+        shared = self.keys.intersection(other.keys)
+        if len(shared):
+            raise DataError(
+                f"{len(shared)} unit(s) lie in both parts, such as {shared[0]!r}: unit products cannot join the rows "
+                "of a split unit. Merge OpenMoments instead, or gather the products over both parts at once."
+            )
+        ratio = other.scale / self.scale
+        packed = other.packed
+        if not (np.array_equal(self.frame, other.frame) and (ratio == 1.0).all()):
+            k = self.frame.shape[0]
+            move = solve_triangular(self.frame, (other.frame * ratio).T, trans="T").T
+            full = np.matmul(move.T, np.matmul(other.framed(), move))
+            packed = full[(slice(None), *np.triu_indices(k))]
+        return self._with(
+            self.keys.append(other.keys),
+            np.concatenate([self.sizes, other.sizes]),
+            np.vstack([self.means, other.means * ratio + (other.shift - self.shift) / self.scale]),
+            np.vstack([self.packed, packed]),
+        )
+
+    def save(self, path: str | Path) -> None:
+        """Write the products as one uncompressed npz file: arrays, names and keys as JSON, a checksum; no pickle."""
+        arrays = {
+            name: getattr(self, name) for name in ("shift", "scale", "sizes", "means", "frame", "packed")
+        }
+        meta: dict[str, Any] = {
+            "format": FORMAT,
+            "version": 1,
+            "design": list(self.design),
+            "constant": self.constant,
+            "outcome": self.outcome,
+            "keys": _plain_keys(self.keys),
+        }
+        meta["checksum"] = _checksum(meta, arrays)
+        with Path(path).open("wb") as file:
+            np.savez(file, allow_pickle=False, meta=np.array(json.dumps(meta)), **arrays)
+
+    @classmethod
+    def load(cls, path: str | Path) -> UnitProducts:
+        """Read products written by `save`; refuses a file whose checksum does not fit."""
+        try:
+            with np.load(path, allow_pickle=False) as file:
+                meta = json.loads(str(file["meta"]))
+                arrays = {
+                    name: file[name] for name in ("shift", "scale", "sizes", "means", "frame", "packed")
+                }
+        except (KeyError, ValueError, EOFError, zipfile.BadZipFile) as error:
+            raise DataError(f"{path} is not a file of unit products, or it is damaged.") from error
+        if not isinstance(meta, dict) or meta.get("format") != FORMAT or meta.get("version") != 1:
+            raise DataError(f"{path} does not hold unit products of version 1.")
+        checksum = meta.pop("checksum", None)
+        if checksum != _checksum(meta, arrays):
+            raise DataError(
+                "the checksum of the unit products does not fit their content: the file was changed or damaged."
+            )
+        keys = meta["keys"]
+        index = pd.Index(keys["values"])
+        if keys["dtype"] != str(index.dtype):
+            index = index.astype(keys["dtype"])
+        return cls(tuple(meta["design"]), meta["constant"], meta["outcome"], keys=index, **arrays)
+
+    def _with(
+        self, keys: pd.Index, sizes: NDArray[np.int64], means: FloatArray, packed: FloatArray
+    ) -> UnitProducts:
+        return UnitProducts(
+            self.design,
+            self.constant,
+            self.outcome,
+            self.shift,
+            self.scale,
+            keys,
+            sizes,
+            means,
+            self.frame,
+            packed,
+        )
+
+
+def collect_products(
+    blocks: Blocks, opened: OpenMoments, moments: Moments, keys: pd.Index | None = None
+) -> UnitProducts:
+    """Take the products of every unit in one more pass over the rows.
+
+    Parameters
+    ----------
+    blocks : callable
+        Returns a fresh iterator of ``(codes, x, y)``, the same rows as before.
+    opened : OpenMoments
+        Gives the unit means that rows are measured from.
+    moments : Moments
+        Gives shift, scale and the frame.
+    keys : pandas.Index, optional
+        Unit keys by code; those of `opened` unless given (they differ when some key has no row).
+
+    Returns
+    -------
+    UnitProducts
+        Units in the order of ``opened.keys``.
+
+    Notes
+    -----
+    Rows are measured from a stored number next to their unit's mean, so no digits cancel afterwards; what remains
+    of the distance between that number and the mean is taken off, ``sum ff' - T fbar fbar'``. Where rows of a unit lie
+    together their products are one small matrix product per unit, batched by length; else rows are multiplied out and
+    added to their unit one by one.
+    """
+    place = None
+    if keys is not None and len(keys) != len(opened.keys):
+        place = np.full(len(keys), -1, dtype=np.intp)
+        place[keys.get_indexer(opened.keys)] = np.arange(len(opened.keys))
+    names = opened.columns
+    kept = np.array([j for j, name in enumerate(names) if name != moments.constant or j == len(names) - 1])
+    k = kept.size
+    frame = _frame(moments.within)
+    unscaled = frame * moments.scale  # exact: scales are powers of two
+    shift, means = opened.shift[kept], np.take(opened.means, kept, axis=1)
+    near = shift + means
+    columns = slice(kept[0], kept[-2] + 1) if k > 1 and kept[-2] - kept[0] == k - 2 else kept[:-1]
+    upper = np.ravel_multi_index(np.triu_indices(k), (k, k))
+    packed = np.zeros((len(opened.keys), upper.size))
+    counts = np.zeros(len(opened.keys), dtype=np.int64)
+    buffer = np.empty((0, k))
+    for given, x, y in blocks():
+        codes = given if place is None else place[given]
+        if codes.size == 0:
+            continue
+        if codes.min() < 0 or codes.max() >= counts.size:
+            raise DataError(
+                "a row has a unit that the moments do not know: the rows are not the same as in the first pass."
+            )
+        if buffer.shape[0] < codes.size:
+            buffer = np.empty((codes.size, k))
+        d = np.take(near, codes, axis=0, out=buffer[: codes.size], mode="clip")
+        np.subtract(x[:, columns], d[:, :-1], out=d[:, :-1])
+        np.subtract(y, d[:, -1], out=d[:, -1])
+        _add_products(packed, counts, codes, _framed(d, unscaled), upper)
+    if not np.array_equal(counts, opened.counts):
+        raise DataError(
+            "the number of rows per unit differs from the first pass: the source did not give the same rows again. "
+            "Spool it to a file first."
+        )
+    _centre(packed, counts, _framed(means - (near - shift), unscaled))
+    return UnitProducts(
+        moments.design,
+        moments.constant,
+        moments.outcome,
+        moments.shift,
+        moments.scale,
+        opened.keys,
+        counts,
+        (means - (moments.shift - shift)) / moments.scale,
+        frame,
+        packed,
+    )
+
+
+def _add_products(
+    packed: FloatArray, counts: NDArray[np.int64], codes: IntArray, f: FloatArray, upper: IntArray
+) -> None:
+    """Add the products of framed rows to their units, in place."""
+    k = f.shape[1]
+    step = np.diff(codes)
+    starts = np.concatenate([[0], np.flatnonzero(step) + 1])
+    if (
+        2 * starts.size > codes.size or (step < 0).any()
+    ):  # scattered: a unit may also have several runs in this block
+        buffer = np.empty((min(SCATTER_ROWS, codes.size), upper.size))
+        for start in range(0, codes.size, SCATTER_ROWS):
+            part = f[start : start + SCATTER_ROWS]
+            products, at = buffer[: part.shape[0]], 0
+            for j in range(k):
+                np.multiply(part[:, j : j + 1], part[:, j:], out=products[:, at : at + k - j])
+                at += k - j
+            add_by_unit(packed, codes[start : start + SCATTER_ROWS], products)
+        counts += np.bincount(codes, minlength=counts.size)
+        return
+    lengths = np.diff(np.append(starts, codes.size))
+    for length in np.unique(lengths):
+        first = starts[lengths == length]
+        run = (first[:, None] + np.arange(length)).ravel()
+        rows_of = (f if run.size == codes.size else f[run]).reshape(first.size, length, k)
+        unit = codes[first]
+        packed[unit] += np.matmul(rows_of.transpose(0, 2, 1), rows_of).reshape(first.size, k * k)[:, upper]
+        counts[unit] += length
+
+
+def _framed(d: FloatArray, frame: FloatArray) -> FloatArray:
+    """Return f with ``f frame = d`` by substitution, which unlike an inverse leaves rows their digits; spends d."""
+    return np.asarray(dtrsm(1.0, frame, d.T, trans_a=1, overwrite_b=1)).T
+
+
+def _centre(packed: FloatArray, counts: NDArray[np.int64], rest: FloatArray) -> None:
+    """Take off ``T fbar fbar'`` where the rows were not measured from the exact mean, in place."""
+    rest *= np.sqrt(counts)[:, None]
+    far = np.flatnonzero(np.abs(rest).max(axis=1) > CENTRED)
+    if far.size:
+        rows, columns = np.triu_indices(rest.shape[1])
+        packed[far] -= rest[far][:, rows] * rest[far][:, columns]
+
+
+def _frame(within: FloatArray) -> FloatArray:
+    """Return an invertible triangular R with ``R'R = W``; columns that depend on earlier ones get a row of I."""
+    k = within.shape[1]
+    length = np.sqrt((within**2).sum(axis=0))
+    safe = np.where(length > 0.0, length, 1.0)
+    upper = upper_factor(within / safe)
+    frame = np.zeros((k, k))
+    frame[: upper.shape[0]] = upper * safe
+    weak = ~(np.abs(np.diag(frame)) > DEPENDENT * length)
+    frame[weak] = np.eye(k)[weak]
+    return frame
+
+
+def _places(k: int) -> IntArray:
+    """Return for each entry of a (k, k) matrix its position in the packed upper triangle."""
+    places = np.zeros((k, k), dtype=np.intp)
+    rows, columns = np.triu_indices(k)
+    places[rows, columns] = places[columns, rows] = np.arange(rows.size)
+    return places
+
+
+def _plain_keys(keys: pd.Index) -> dict[str, Any]:
+    """Return keys as JSON values and the name of their type."""
+    values = keys.astype(str).tolist() if keys.dtype.kind in "mM" else keys.tolist()
+    if not all(isinstance(value, (str, int, float)) for value in values):
+        raise DataError(
+            "only units keyed by numbers, texts or dates can be saved; use such a column as the unit."
+        )
+    return {"dtype": str(keys.dtype) if keys.dtype.name != "category" else "object", "values": values}
+
+
+def _checksum(meta: dict[str, Any], arrays: dict[str, FloatArray]) -> str:
+    digest = hashlib.sha256(json.dumps(meta, sort_keys=True).encode())
+    for name in sorted(arrays):
+        array = np.ascontiguousarray(arrays[name])
+        digest.update(f"{name} {array.dtype.str} {array.shape}".encode())
+        digest.update(array.tobytes())
+    return digest.hexdigest()
