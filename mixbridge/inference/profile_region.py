@@ -95,13 +95,18 @@ def profile_region(curve: Curve, kind: Kind, certificate: Certificate, confidenc
 
 def scale_factors(excess: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Return the roots ``u <= 1 <= U`` of ``log u + 1/u - 1 = excess``, excess >= 0."""
-    near = excess < 1e-10  # at the branch point of W: a series, right to the order of excess^(3/2)
+    # Lambert's W loses half its digits at its branch point: a series there, for v = 1/u, v - 1 - log v = s^2 / 2
+    near = excess < 1e-4
     argument = -np.exp(-1.0 - np.where(near, 1.0, excess))
     step = np.sqrt(2.0 * np.where(near, excess, 0.0))
-    bow = 1.0 + step**2 * (2.0 / 3.0)
-    down = np.where(near, bow - step, -1.0 / lambertw(argument, -1).real)
-    up = np.where(near, bow + step, -1.0 / lambertw(argument, 0).real)
+    down = 1.0 / np.where(near, 1.0 + _series(step), -lambertw(argument, -1).real)
+    up = 1.0 / np.where(near, 1.0 + _series(-step), -lambertw(argument, 0).real)
     return down, up
+
+
+def _series(s: FloatArray) -> FloatArray:
+    """Return x with ``x - log(1 + x) = s^2 / 2`` and the sign of s; the next term is ``s^6 / 17010``."""
+    return s * (1.0 + s * (1.0 / 3.0 + s * (1.0 / 36.0 + s * (-1.0 / 270.0 + s / 4320.0))))
 
 
 def _pieces(
@@ -115,7 +120,7 @@ def _pieces(
     knots.append(beyond)
     heights = [excess(knot) for knot in knots]
     crossings = [
-        float(brentq(excess, a, b, xtol=1e-15 * b, rtol=1e-14))
+        float(brentq(excess, a, b, xtol=1e-18 * b, rtol=1e-14))
         for a, b, left, right in zip(knots[:-1], knots[1:], heights[:-1], heights[1:], strict=True)
         if (left <= 0.0) != (right <= 0.0)
     ]

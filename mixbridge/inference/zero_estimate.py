@@ -105,7 +105,7 @@ def _probabilities(
             for between, within in draw_squares(spectrum, draws, np.random.default_rng(seed), psi)
         )
         share = zeros / draws
-        error = float(np.sqrt(share * (1.0 - share) / draws))
+        error = max(float(np.sqrt(share * (1.0 - share) / draws)), 1.0 / draws)
         yield share, error, True, f"simulated from the spectrum, {draws} draws, seed {seed}"
 
 
