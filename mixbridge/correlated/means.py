@@ -7,7 +7,7 @@ the column it came from: every product is already in the moments, and the means 
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from mixbridge.moments import Moments, dependency_text, noise, span_of
 
-__all__ = ["WithMeans", "with_unit_means"]
+__all__ = ["WithMeans", "varying_columns", "with_unit_means"]
 
 FloatArray = NDArray[np.float64]
 
@@ -39,8 +39,8 @@ class WithMeans:
     dropped: Mapping[str, str]
 
 
-def with_unit_means(moments: Moments) -> WithMeans:
-    """Add the unit mean of every column that varies within units.
+def with_unit_means(moments: Moments, means_of: Collection[str] | None = None) -> WithMeans:
+    """Add the unit mean of every column that varies within units, or of some of them.
 
     A mean that is a combination of the columns given and of means already added is left out; a given column
     never is.
@@ -48,14 +48,15 @@ def with_unit_means(moments: Moments) -> WithMeans:
     Parameters
     ----------
     moments : Moments
+    means_of : collection of str, optional
+        Design columns whose means are added; those among them that do not vary within units are passed over.
 
     Returns
     -------
     WithMeans
     """
-    columns, bound = moments.columns, noise(moments)
-    length = np.sqrt((moments.within**2).sum(axis=0))
-    varying = [j for j in range(len(columns) - 1) if length[j] > bound[j]]
+    columns = moments.columns
+    varying = [j for j in _varying(moments) if means_of is None or columns[j] in means_of]
     wide = _widened(moments, varying, _names(moments, varying))
     full, floor = _design_factor(wide)
     span = span_of(full, floor, 1e-7 if moments.note.startswith("ill-conditioned") else 1e-12)
@@ -73,6 +74,17 @@ def with_unit_means(moments: Moments) -> WithMeans:
     return WithMeans(
         _widened(moments, chosen, added), dict(zip(added, (columns[j] for j in chosen), strict=True)), dropped
     )
+
+
+def varying_columns(moments: Moments) -> tuple[str, ...]:
+    """Return the design columns that vary within units, beyond what rounding of the data can produce."""
+    return tuple(moments.columns[j] for j in _varying(moments))
+
+
+def _varying(moments: Moments) -> list[int]:
+    bound = noise(moments)
+    length = np.sqrt((moments.within**2).sum(axis=0))
+    return [j for j in range(len(moments.columns) - 1) if length[j] > bound[j]]
 
 
 def _names(moments: Moments, varying: list[int]) -> tuple[str, ...]:
