@@ -329,6 +329,39 @@ def test_two_way_that_is_not_a_covariance_says_so_and_mends_nothing():
     assert np.isnan(got.standard_errors["Intercept"])
 
 
+def test_two_way_refuses_rows_and_periods_it_cannot_place():
+    X, y, codes, period = made(seed=6, units=20, sizes=(4, 6))
+    curve, products = taken(X, y, codes)
+    with pytest.raises(DataError, match="number the periods"):
+        two_way_covariance(curve, products, 0.5, blocks_of(X, y, codes, period + 10**7))
+    with pytest.raises(DataError, match="integer from 0"):
+        two_way_covariance(curve, products, 0.5, blocks_of(X, y, codes, period - 1))
+    with pytest.raises(DataError, match="not those of the unit products"):
+        two_way_covariance(curve, products, 0.5, blocks_of(X[1:], y[1:], codes[1:], period[1:]))
+    with pytest.raises(DataError, match="do not know"):
+        two_way_covariance(curve, products, 0.5, blocks_of(X, y, codes + 1, period))
+    with pytest.raises(IdentificationError, match="at least two periods"):
+        two_way_covariance(curve, products, 0.5, blocks_of(X, y, codes, 0 * period))
+    dense_codes = two_way_covariance(curve, products, 0.5, blocks_of(X, y, codes, period))
+    gaps = two_way_covariance(curve, products, 0.5, blocks_of(X, y, codes, 7 * period + 3))
+    np.testing.assert_array_equal(gaps.covariance_array, dense_codes.covariance_array)
+    assert gaps.notes == dense_codes.notes
+
+
+def test_two_way_takes_the_units_of_the_products_by_key():
+    X, y, codes, period = made(seed=6, units=20, sizes=(1, 4, 6))
+    whole = UnitProducts.from_arrays(X, y, codes)
+    kept = whole.sizes > 1
+    curve, products = curve_of(Moments.from_arrays(X, y, codes).without_sizes(1)), whole.select(kept)
+    got = two_way_covariance(curve, products, 0.5, blocks_of(X, y, codes, period), keys=whole.keys)
+    here = kept[codes]
+    other = taken(X[here], y[here], codes[here])
+    expected = two_way_covariance(
+        *other, 0.5, blocks_of(X[here], y[here], np.unique(codes[here], return_inverse=True)[1], period[here])
+    )
+    assert distance(got.covariance_array, expected.covariance_array) < 1e-12
+
+
 def test_within_two_way_needs_no_unit_effect():
     X, y, codes, period = made(seed=6, units=20, sizes=(4, 6))
     curve, products = taken(X, y, codes)
@@ -507,13 +540,24 @@ def test_fits_give_their_ratio_and_convention():
         robust_covariance(curve, products, fitted("first_difference"))
     with pytest.raises(IdentificationError, match="gave no coefficients"):
         robust_covariance(curve, products, replace(reml, beta=np.full(4, np.nan), status="likelihood flat"))
-    dropped = products.without_sizes(2)
     with pytest.raises(DataError, match="not of the same rows"):
-        robust_covariance(curve, dropped, reml)
-    smaller = curve_of(curve.moments.without_sizes(2))
+        robust_covariance(curve, products.without_sizes(2), reml)
+    other = UnitProducts.from_arrays(X + np.array([0, 1e-3, 0, 0]) * X**2, y, codes)
+    with pytest.raises(DataError, match="not of the same rows"):
+        robust_covariance(curve, replace(other, shift=products.shift, scale=products.scale), reml)
+
+
+def test_one_row_units_left_out_in_all_three():
+    X, y, codes, _ = made(units=20, sizes=(1, 3, 5))
+    curve, products = taken(X, y, codes)
+    reml = fit_route(curve, "reml", {}, "no periods")
+    smaller, fewer = curve_of(curve.moments.without_sizes(1)), products.without_sizes(1)
     with pytest.raises(DataError, match="the fit uses"):
-        robust_covariance(smaller, dropped, reml)
-    assert robust_covariance(smaller, dropped, 1.0).status == "computed"
+        robust_covariance(smaller, fewer, reml)
+    here = (np.bincount(codes) > 1)[codes]
+    expected = robust_covariance(*taken(X[here], y[here], codes[here]), 1.0, kind="CR2")
+    got = robust_covariance(smaller, fewer, 1.0, kind="CR2")
+    assert distance(got.covariance_array, expected.covariance_array) < 1e-12
 
 
 def test_multipliers_are_named_and_have_their_value():

@@ -68,6 +68,7 @@ def test_units_add_up_to_the_moments(panel):
     length = np.sqrt(np.diag(w))
     # W comes from products of rows measured elsewhere or from QR of the rows: both lose up to the size of a unit
     assert (np.abs(products.within().sum(axis=0) - w) <= 1e-13 * np.outer(length, length) + 1e-300).all()
+    np.testing.assert_allclose(products.within_total(), products.within().sum(axis=0), atol=1e-13 * w.max())
     at = np.array([products.units - 1, 0])
     np.testing.assert_array_equal(products.within(at), products.within()[at])
 

@@ -22,7 +22,7 @@ from numpy.typing import NDArray
 from scipy.linalg import solve_triangular
 
 from mixbridge.errors import DataError, IdentificationError, OptionError
-from mixbridge.moments import Moments, upper_factor
+from mixbridge.moments import Moments, noise, upper_factor
 from mixbridge.moments.coordinates import model_coordinates
 from mixbridge.moments.products import UnitProducts
 from mixbridge.ratio import Curve
@@ -32,6 +32,10 @@ __all__ = ["Regression", "regression_of"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.intp]
+
+SAME = 1e-4
+"""Length, as a share of a column's own, by which within products may differ and still be of the same rows. Rounding
+leaves about 1e-7 (its square is 1e-14); other rows differ by far more."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -253,7 +257,12 @@ def _same_rows(curve: Curve, products: UnitProducts) -> None:
         and np.array_equal(moments.scale, products.scale)
     )
     sizes, counts = np.unique(products.sizes, return_counts=True)
-    if not (same and np.array_equal(sizes, moments.sizes) and np.array_equal(counts, moments.counts)):
+    same = same and np.array_equal(sizes, moments.sizes) and np.array_equal(counts, moments.counts)
+    if same:
+        w, total = moments.within.T @ moments.within, products.within_total()
+        length = SAME * np.sqrt(np.diag(w)) + noise(moments)
+        same = bool((np.abs(w - total) <= np.outer(length, length)).all())
+    if not same:
         raise DataError(
             f"the unit products ({products.rows} rows, {products.units} units) and the moments ({moments.rows} rows, "
             f"{moments.units} units) are not of the same rows and columns: gather both from the same source, and leave "

@@ -37,6 +37,8 @@ PeriodBlock = tuple[IntArray, FloatArray, FloatArray, IntArray]
 
 TWO_WAY_MULTIPLIERS = ("none", "units", "units_and_rows", "smallest", "smallest_and_rows")
 ROWS = ("quasi_demeaned", "weighted")
+LARGEST_CODE = 1_000_000
+"""Period codes up to here, or to the number of rows, may have gaps: one line of sums is kept for each."""
 NEGATIVE = 1e-12
 """Eigenvalue of the covariance, scaled to unit variances, that counts as negative: about a thousand roundings."""
 
@@ -186,6 +188,8 @@ def _period_sums(
     for codes, x, y, period in _located(blocks, place, products):
         scores = scored(codes, x, y)
         top = int(period.max(initial=-1)) + 1
+        if top > max(LARGEST_CODE, products.rows):
+            raise DataError(f"period code {top - 1} is too large: number the periods from 0 in their order.")
         if top > periods.shape[0]:
             periods = np.vstack([periods, np.zeros((top - periods.shape[0], p))])
         add_by_unit(periods, np.asarray(period, dtype=np.intp), scores)

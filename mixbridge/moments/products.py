@@ -100,6 +100,11 @@ class UnitProducts:
         """Return the within products of the scaled z, shape (m, k, k): over all units they add up to W."""
         return np.asarray(self.frame.T @ self.framed(at) @ self.frame)
 
+    def within_total(self) -> FloatArray:
+        """Return the within products of the scaled z summed over all units, shape (k, k): W of the moments."""
+        total = self.packed.sum(axis=0)[_places(self.frame.shape[0])]
+        return np.asarray(self.frame.T @ total @ self.frame)
+
     @classmethod
     def from_arrays(
         cls,
