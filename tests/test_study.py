@@ -11,7 +11,7 @@ import statsmodels.api as sm
 
 import mixbridge
 from mixbridge.reconcile.agreement import CLASSES, LEDGER_COLUMNS
-from mixbridge.routes import LEDGER_ROUTES, REFERENCE_ROUTES
+from mixbridge.routes import AXES, LEDGER_ROUTES, REFERENCE_ROUTES
 
 FORMULA = "honey ~ forage + feeding + altitude"
 
@@ -180,3 +180,27 @@ def test_the_caller_s_names_can_be_used_in_a_formula(study):
         metres * study.fit("reml").coefficients["altitude"],
         rtol=1e-12,
     )
+
+
+@pytest.mark.parametrize("route", [key for key in LEDGER_ROUTES if key != "first_difference"])
+@pytest.mark.parametrize("axis", ["covariance", "reference"])
+def test_conventions_of_inference_never_move_the_estimates(study, route, axis):
+    values = next(item for item in AXES if item.name == axis).values
+    base = study.fit(route)
+    for value in values[1:]:
+        if value == "kenward_roger" and route != "reml" or (value == "two_way" and route == "between"):
+            continue
+        fit = study.fit(route, **{axis: value})
+        np.testing.assert_array_equal(fit.beta, base.beta)
+        assert fit.ratio == base.ratio or np.isnan(base.ratio)
+        moved = not np.array_equal(fit.covariance_array, base.covariance_array, equal_nan=True)
+        assert moved == (axis == "covariance")
+
+
+def test_a_named_reference_is_used_for_intervals(study):
+    normal = study.intervals(study.fit("reml", reference="normal"))["feeding"]
+    np.testing.assert_allclose(normal.half_width / normal.standard_error, 1.959963984540054, rtol=1e-12)
+    few = study.intervals(study.fit("reml", reference="t_between"))["feeding"]
+    assert few.half_width > normal.half_width
+    adjusted = study.intervals(study.fit("reml", reference="kenward_roger"))["feeding"]
+    assert adjusted.standard_error > normal.standard_error

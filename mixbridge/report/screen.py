@@ -178,11 +178,6 @@ def _agreement(study: StudyView, most: int) -> list[str]:
         error = number(base["standard_error"], 3)
         rows.append([term, number(base["estimate"]), error, classes, shorten(widest, 24)])
     lines += _fitted(rows, right=(1, 2))
-    missing = [key for key in votes if not study.fits[key].estimated]
-    if missing:
-        lines.append(
-            f"  without coefficients: {_join([f'{key} ({study.fits[key].status})' for key in missing], 74)}"
-        )
     if beside:
         lines.append(f"Other questions on the same rows: estimate, and (gap in se of {primary})")
         rows = [["term", *(key.replace("_", " ") for key in beside)]]
@@ -242,15 +237,24 @@ def _components(study: StudyView) -> list[str]:
             number(row[name]) for name in ("unit_variance", "idiosyncratic_variance", "ratio", "icc")
         )
         errors = tuple(number(row[f"{name}_se"], 2) for name in ("unit_variance", "idiosyncratic_variance"))
-        status = str(row["status"]) + (" (zero used)" if row["unit_variance"] < 0 else "")
+        status = "truncated, zero used" if row["unit_variance"] < 0 else str(row["status"])
         merged.setdefault((*cells, *errors, status), []).append(str(row["route"]))
     rows = [["route", "unit variance", "(se)", "idiosyncratic", "(se)", "ratio ψ", "ICC", "status"]]
-    for (unit, idiosyncratic, ratio, icc, unit_se, idiosyncratic_se, status), names in merged.items():
-        name = _join(names, 34, " = ")
-        rows.append([name, unit, unit_se, idiosyncratic, idiosyncratic_se, ratio, icc, shorten(status, 28)])
+    without: list[str] = []
+    for (*cells, status), names in merged.items():
+        if set(cells) == {"-"}:
+            without.append(shorten(f"  {_join(names, 44)}: {status}", WIDTH))
+            continue
+        unit, idiosyncratic, ratio, icc, unit_se, idiosyncratic_se = cells
+        rows.append(
+            [_join(names, 34, " = "), unit, unit_se, idiosyncratic, idiosyncratic_se, ratio, icc, status]
+        )
+    room = WIDTH - 2 - sum(max(len(row[j]) for row in rows) + 2 for j in range(7))
+    rows = [[*row[:-1], shorten(row[-1], max(room, 12))] for row in rows]
     return [
         "Variance components (variances; sampling errors under normality)",
-        *columns(rows, right=range(1, 7)),
+        *(_fitted(rows, right=range(1, 7)) if len(rows) > 1 else []),
+        *without,
     ]
 
 

@@ -114,7 +114,9 @@ class StudyBase:
     @cached_property
     def _curve_without_singletons(self) -> Curve:
         if not (self.moments.sizes > 1).any():
-            raise IdentificationError("every unit has one row: nothing is left when one-row units are dropped.")
+            raise IdentificationError(
+                "every unit has one row: nothing is left when one-row units are dropped."
+            )
         return curve_of(self.moments.without_sizes(1))
 
     def _curve_for(self, conventions: Mapping[str, object]) -> Curve:

@@ -30,7 +30,11 @@ class StudyQuestions(StudyBase):
     """The part of a study that answers questions of inference."""
 
     def inference(
-        self, term: str, route: str | None = None, robust: tuple[str, ...] = ("CR1", "CR2"), **conventions: object
+        self,
+        term: str,
+        route: str | None = None,
+        robust: tuple[str, ...] = ("CR1", "CR2"),
+        **conventions: object,
     ) -> pd.DataFrame:
         """Put estimate, standard error, reference, interval and p value of one term under each rule.
 
@@ -52,8 +56,14 @@ class StudyQuestions(StudyBase):
             ``why`` gives the reason.
         """
         fit = self.fit(self.primary if route is None else route, **conventions)
-        found = {} if fit.route == "first_difference" else {kind: self._given(self.robust(fit, kind)) for kind in robust}
-        return inference_table(self._curve_for(fit.conventions), self.fits, fit, term, self.confidence, robust=found)
+        found = (
+            {}
+            if fit.route == "first_difference"
+            else {kind: self._given(self.robust(fit, kind)) for kind in robust}
+        )
+        return inference_table(
+            self._curve_for(fit.conventions), self.fits, fit, term, self.confidence, robust=found
+        )
 
     def hypothesis(
         self, text: str, route: str | None = None, *, rule: str | None = None, covariance: str = "model"
@@ -170,7 +180,9 @@ class StudyQuestions(StudyBase):
         DataFrame
             ``quantity, route, method, estimate, lower, upper, exact, note``.
         """
-        return component_intervals(self.curve, self.fits, self.confidence if confidence is None else confidence)
+        return component_intervals(
+            self.curve, self.fits, self.confidence if confidence is None else confidence
+        )
 
     def zero_probabilities(self) -> pd.DataFrame:
         """Give the probability of a unit variance estimated as zero, under each fit and under zero.
@@ -211,9 +223,13 @@ class StudyQuestions(StudyBase):
             raise OptionError.not_among("likelihood", likelihood, ("ml", "reml"))
         same = (self.panel.outcome, self.panel.n) == (other.panel.outcome, other.panel.n)
         if not same or not self.panel.row_labels.equals(other.panel.row_labels):
-            raise OptionError("likelihoods of different rows or outcomes cannot be compared: fit both on the same rows.")
+            raise OptionError(
+                "likelihoods of different rows or outcomes cannot be compared: fit both on the same rows."
+            )
         tables = [
-            criteria(study.curve, {key: study.fit(key) for key in ("ml", "reml")}).assign(formula=study.panel.formula)
+            criteria(study.curve, {key: study.fit(key) for key in ("ml", "reml")}).assign(
+                formula=study.panel.formula
+            )
             for study in (self, other)
         ]
         if likelihood == "reml" and not same_column_space(self.curve, other.curve):
@@ -244,7 +260,9 @@ class StudyQuestions(StudyBase):
     def _on_curve(self, route: str | None, conventions: Mapping[str, object]) -> Fit:
         fit = self.fit(self.primary if route is None else route, **conventions)
         if not (fit.estimated and np.isfinite(fit.ratio)):
-            raise OptionError(f"route {fit.route!r} gives no finite variance ratio here ({fit.status}); name one that does.")
+            raise OptionError(
+                f"route {fit.route!r} gives no finite variance ratio here ({fit.status}); name one that does."
+            )
         return fit
 
     def _given(self, found: RobustCovariance) -> Robust:

@@ -202,4 +202,3 @@ class Study(StudyQuestions):
             f"<Study {self.panel.formula!r}, unit {self.panel.unit_name!r}: {self.panel.n} rows, "
             f"{self.panel.N} units, primary {self.primary!r}; print it for the first screen>"
         )
-

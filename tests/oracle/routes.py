@@ -166,6 +166,8 @@ def nerlove(panel: Dense, k: Degrees, divisor: str) -> FirstStage:
 def pooled_minus_within(panel: Dense, k: Degrees) -> FirstStage:
     if reason := needs_within(panel, k):
         return none(reason)
+    if panel.N <= panel.K - panel.K_w:  # both residual forms are then one: no unit variance in their difference
+        return none("N = K_c")
     if panel.n - k.K < 1:
         return none("n - K < 1")
     one = panel.X.dtype.type(1)

@@ -110,6 +110,8 @@ def iterated_is_ml(setting: Setting) -> Compared | Unmet:
     path = [np.array([0.0, np.inf])]
     for _ in range(STEPS):
         path.append(step(path[-1]))
+        if not np.isfinite(path[-1]).all():
+            return Unmet("both ends defined: the between regression leaves no error")
         if (np.abs(path[-1] - path[-2]) <= NEAR * path[-1]).all():
             break
     low, high = path[-1]
