@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mixbridge.errors import OptionError
-from mixbridge.ratio import Curve
+from mixbridge.ratio import Curve, Point
 from mixbridge.routes.certificate import certify
 from mixbridge.routes.conventions import Value, resolve
 from mixbridge.routes.forms import value
@@ -21,7 +21,7 @@ from mixbridge.routes.least_squares import (
     pooled,
     within,
 )
-from mixbridge.routes.likelihood import Kind, Profile, log_likelihood
+from mixbridge.routes.likelihood import Kind, Profile, log_likelihood_at
 from mixbridge.routes.quadratic import (
     QUADRATIC,
     NotEstimableError,
@@ -222,7 +222,7 @@ def _quadratic(curve: Curve, route: str, conventions: Conventions, blank: Fit) -
     covariance = components.sampling_covariance(curve)
     method = "exact formula for quadratic forms under normality, estimates plugged in"
     fit = replace(fit, status=status, notes=notes, components_covariance=covariance, components_method=method)
-    return _on_curve(curve, fit, max(unit, 0.0) / idiosyncratic, conventions)
+    return _on_curve(curve, fit, curve.at(max(unit, 0.0) / idiosyncratic), conventions)
 
 
 def _likelihood(curve: Curve, route: Kind, conventions: Conventions, blank: Fit) -> Fit:
@@ -234,7 +234,8 @@ def _likelihood(curve: Curve, route: Kind, conventions: Conventions, blank: Fit)
     certificate = certify(Profile(curve, route), curve.within_residual, limit)
     psi = certificate.psi
     m = curve.n - (curve.rank if route == "reml" else 0)
-    idiosyncratic = curve.at(psi).residual / m
+    point = curve.at(psi)
+    idiosyncratic = point.residual / m
     information = _information(curve, route, psi, idiosyncratic)
     notes: tuple[str, ...] = ()
     if psi == 0.0:
@@ -253,9 +254,9 @@ def _likelihood(curve: Curve, route: Kind, conventions: Conventions, blank: Fit)
         components_covariance=information,
         components_method="inverse expected information",
         certificate=certificate,
-        log_likelihood=log_likelihood(curve, route, psi, conventions.get("reml_constant") != "omitted"),
+        log_likelihood=log_likelihood_at(curve, route, point, conventions.get("reml_constant") != "omitted"),
     )
-    return _on_curve(curve, fit, psi, conventions)
+    return _on_curve(curve, fit, point, conventions)
 
 
 def _flat(curve: Curve, route: Kind) -> tuple[str, str] | None:
@@ -302,9 +303,8 @@ def _information(curve: Curve, route: Kind, psi: float, idiosyncratic: float) ->
     return np.asarray(2.0 * idiosyncratic**2 * inverse[::-1, ::-1])
 
 
-def _on_curve(curve: Curve, fit: Fit, psi: float, conventions: Conventions) -> Fit:
-    """Take coefficients and their covariance from the curve at ψ."""
-    point = curve.at(psi)
+def _on_curve(curve: Curve, fit: Fit, point: Point, conventions: Conventions) -> Fit:
+    """Take coefficients and their covariance from a point of the curve."""
     df = curve.n - curve.rank
     scale = fit.idiosyncratic_variance
     if conventions.get("scale") == "gls_residuals":
@@ -315,7 +315,7 @@ def _on_curve(curve: Curve, fit: Fit, psi: float, conventions: Conventions) -> F
         fit,
         beta=point.beta,
         root=point.root,
-        ratio=psi,
+        ratio=point.psi,
         scale=scale,
         residual_df=float(df),
         rank=curve.rank,

@@ -61,14 +61,40 @@ class Form:
 
 
 @dataclass(frozen=True, slots=True)
-class _Tall:
-    """An n-by-c matrix ``QX a_w + sum_T P_T X a_T``, as ``F_w a_w`` and ``F_T a_T``.
+class _Rows:
+    """The n-by-c matrices of an estimator, as the few rows that have their products.
 
-    ``F_w`` and ``F_T`` are the factors of W and of the B_T.
+    The n rows of ``QX a`` stand as ``F_w a`` and those of ``P_T X a`` as ``sqrt(T) F_T a``, with the factors of W
+    and of the B_T, one below the other. ``XH = base gain'``.
     """
 
-    within: FloatArray
-    means: FloatArray
+    form: Form
+    base: FloatArray
+    gain: FloatArray
+
+
+def _rows(curve: Curve, form: Form) -> _Rows:
+    p, top = curve.rank, curve.within.shape[0]
+    flat = curve.between.reshape(-1, p + 1)
+    base = np.empty((top + flat.shape[0], form.basis.shape[1]))
+    gain = np.empty_like(base)
+    np.matmul(curve.within[:, :p], form.basis, out=base[:top])
+    np.matmul(flat[:, :p], form.basis, out=base[top:])
+    np.matmul(curve.within[:, :p], form.slope_within.T, out=gain[:top])
+    np.matmul(flat[:, :p], form.slope_between.T, out=gain[top:])
+    root = np.sqrt(curve.sizes)
+    base *= _spread(curve, 1.0, root)[:, None]
+    gain *= _spread(curve, 1.0, root * form.on_between)[:, None]
+    return _Rows(form, base, gain)
+
+
+def _spread(curve: Curve, on_within: float, on_means: FloatArray) -> FloatArray:
+    """Return weights on Q and on the P_T as one weight per row of `_Rows`."""
+    top, per_size = curve.within.shape[0], curve.between.shape[1]
+    weights = np.empty(top + on_means.size * per_size)
+    weights[:top] = on_within
+    weights[top:].reshape(-1, per_size)[:] = on_means[:, None]
+    return weights
 
 
 def value(curve: Curve, form: Form) -> float:
@@ -84,19 +110,13 @@ def value(curve: Curve, form: Form) -> float:
     float
         In squared units of the outcome.
     """
-    p = curve.rank
-    rows_w, rows_b = curve.within[:, :p], curve.between[:, :, :p]
-    tall = _Tall(rows_w @ form.basis, rows_b @ form.basis)
-    gains = _Tall(rows_w @ form.slope_within.T, rows_b @ form.slope_between.T)
-    weights = form.on_between * curve.sizes
-    left_w, left_b = curve.within[:, p], curve.between[:, :, p]
+    rows, p = _rows(curve, form), curve.rank
+    left = np.concatenate(
+        [curve.within[:, p], (np.sqrt(curve.sizes)[:, None] * curve.between[:, :, p]).ravel()]
+    )
     for _ in range(2):  # the second turn refines: H X H = H
-        step = gains.within.T @ left_w + ((weights[:, None] * left_b)[:, :, None] * gains.means).sum(
-            axis=(0, 1)
-        )
-        left_w, left_b = left_w - tall.within @ step, left_b - tall.means @ step
-    between = (form.on_means * curve.sizes) @ (left_b**2).sum(axis=1)
-    return curve.unit * float(form.on_within * (left_w @ left_w) + between)
+        left = left - rows.base @ (rows.gain.T @ left)
+    return curve.unit * float(_spread(curve, form.on_within, form.on_means) @ left**2)
 
 
 def expectations(curve: Curve, form: Form) -> tuple[float, float]:
@@ -111,8 +131,8 @@ def expectations(curve: Curve, form: Form) -> tuple[float, float]:
     -------
     float, float
     """
-    ones = np.ones_like(curve.sizes)
-    return _trace(curve, form, 1.0, ones), _trace(curve, form, 0.0, curve.sizes)
+    rows, ones = _rows(curve, form), np.ones_like(curve.sizes)
+    return _trace(curve, rows, 1.0, ones), _trace(curve, rows, 0.0, curve.sizes)
 
 
 def covariance(curve: Curve, forms: Sequence[Form], idiosyncratic: float, unit: float) -> FloatArray:
@@ -132,47 +152,13 @@ def covariance(curve: Curve, forms: Sequence[Form], idiosyncratic: float, unit: 
     """
     # in units of sigma_u^2, so that nothing depends on the scale of the outcome
     on_means = 1.0 + curve.sizes * (unit / idiosyncratic)
-    k = len(forms)
+    k, rows = len(forms), [_rows(curve, form) for form in forms]
     result = np.zeros((k, k))
     for a in range(k):
         for b in range(a, k):
-            result[a, b] = result[b, a] = 2.0 * _trace_pair(curve, forms[a], forms[b], 1.0, on_means)
+            trace = _trace_pair(curve, rows[a], rows[b], on_means)
+            result[a, b] = result[b, a] = 2.0 * trace
     return result * idiosyncratic**2
-
-
-def _cross(curve: Curve, left: _Tall, right: _Tall, on_within: float, on_means: FloatArray) -> FloatArray:
-    """Return ``left' D right`` for D with the given weights on Q and on the P_T."""
-    weighted = (on_means * curve.sizes)[:, None, None] * right.means
-    rows = left.means.shape[0] * left.means.shape[1]
-    between = left.means.reshape(rows, -1).T @ weighted.reshape(rows, -1)
-    return np.asarray(on_within * (left.within.T @ right.within) + between)
-
-
-def _outer(
-    curve: Curve, left: Form, right: Form, on_within: float, on_means: FloatArray
-) -> tuple[_Tall, _Tall]:
-    """Return tall matrices l and r with ``L_a V L_b' = V + l r'``."""
-    p, ones = curve.rank, np.ones(len(curve.sizes))
-    rows_w, rows_b = curve.within[:, :p], curve.between[:, :, :p]
-    base_a, base_b = (_Tall(rows_w @ form.basis, rows_b @ form.basis) for form in (left, right))
-    gain_a, gain_b = (
-        _Tall(rows_w @ form.slope_within.T, form.on_between[:, None, None] * (rows_b @ form.slope_between.T))
-        for form in (left, right)
-    )
-    spread_a, spread_b = (
-        _Tall(on_within * gain.within, on_means[:, None, None] * gain.means) for gain in (gain_a, gain_b)
-    )
-    middle = _cross(curve, gain_a, spread_b, 1.0, ones)  # H_a V H_b'
-    return (
-        _Tall(
-            np.hstack([base_a.within, -spread_b.within]),
-            np.concatenate([base_a.means, -spread_b.means], axis=2),
-        ),
-        _Tall(
-            np.hstack([base_b.within @ middle.T - spread_a.within, base_b.within]),
-            np.concatenate([base_b.means @ middle.T - spread_a.means, base_b.means], axis=2),
-        ),
-    )
 
 
 def _plain(curve: Curve, on_within: float, on_means: FloatArray) -> float:
@@ -180,19 +166,31 @@ def _plain(curve: Curve, on_within: float, on_means: FloatArray) -> float:
     return float((curve.n - curve.units) * on_within + curve.counts @ on_means)
 
 
-def _trace(curve: Curve, form: Form, on_within: float, on_means: FloatArray) -> float:
-    """Return ``tr(D L V L')``."""
-    left, right = _outer(curve, form, form, on_within, on_means)
+def _trace(curve: Curve, rows: _Rows, on_within: float, on_means: FloatArray) -> float:
+    """Return ``tr(D L V L')``: with ``M = H V H'``, ``L V L' = V + base (M base' - gain'V) - V gain base'``."""
+    form, base, gain = rows.form, rows.base, rows.gain
+    spread = _spread(curve, on_within, on_means)[:, None] * gain
+    turned = base @ (gain.T @ spread).T
+    correction = np.einsum("ij,ij->i", base, turned - 2.0 * spread)
     plain = _plain(curve, form.on_within * on_within, form.on_means * on_means)
-    return plain + float(np.trace(_cross(curve, right, left, form.on_within, form.on_means)))
+    return plain + float(_spread(curve, form.on_within, form.on_means) @ correction)
 
 
-def _trace_pair(curve: Curve, a: Form, b: Form, on_within: float, on_means: FloatArray) -> float:
-    """Return ``tr(D_a O D_b O')`` with ``O = L_a V L_b'``."""
-    left, right = _outer(curve, a, b, on_within, on_means)
-    both_within, both_means = a.on_within * b.on_within, a.on_means * b.on_means
-    plain = _plain(curve, both_within * on_within**2, both_means * on_means**2)
-    single = float(np.trace(_cross(curve, right, left, both_within * on_within, both_means * on_means)))
-    left_left = _cross(curve, left, left, a.on_within, a.on_means)
-    right_right = _cross(curve, right, right, b.on_within, b.on_means)
+def _trace_pair(curve: Curve, a: _Rows, b: _Rows, on_means: FloatArray) -> float:
+    """Return ``tr(D_a O D_b O')`` with ``O = L_a V L_b' = V + l r'``; V has weight one on Q."""
+    variance = _spread(curve, 1.0, on_means)
+    spread_a, spread_b = variance[:, None] * a.gain, variance[:, None] * b.gain
+    left = np.hstack([a.base, -spread_b])
+    middle = a.gain.T @ spread_b  # H_a V H_b'
+    right = np.hstack([b.base @ middle.T - spread_a, b.base])
+    on_a, on_b = (
+        _spread(curve, a.form.on_within, a.form.on_means),
+        _spread(curve, b.form.on_within, b.form.on_means),
+    )
+    plain = _plain(
+        curve, a.form.on_within * b.form.on_within, a.form.on_means * b.form.on_means * on_means**2
+    )
+    single = float((on_a * on_b * variance) @ np.einsum("ij,ij->i", left, right))
+    left_left = left.T @ (on_a[:, None] * left)
+    right_right = right.T @ (on_b[:, None] * right)
     return plain + 2.0 * single + float((left_left * right_right).sum())

@@ -25,9 +25,9 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
-from mixbridge.ratio import Curve
+from mixbridge.ratio import Curve, Point
 
-__all__ = ["Kind", "Profile", "Values", "log_likelihood"]
+__all__ = ["Kind", "Profile", "Values", "log_likelihood", "log_likelihood_at"]
 
 FloatArray = NDArray[np.float64]
 Kind = Literal["ml", "reml"]
@@ -103,43 +103,36 @@ class Profile:
         -------
         Values
         """
-        curve = self.curve
+        curve, count = self.curve, len(psi)
         p, g_count = curve.rank, len(curve.sizes)
         weight = curve.sizes / (1.0 + np.multiply.outer(psi, curve.sizes))
-        flat = curve.between_products.reshape(g_count, -1)
-        shape = (len(psi), p + 1, p + 1)
-        a = curve.within_products + (weight @ flat).reshape(shape)
-        s2 = ((weight**2) @ flat).reshape(shape)
-        s3 = ((weight**3) @ flat).reshape(shape)
+        powers = np.concatenate([weight, weight**2, weight**3]) @ curve.between_products.reshape(g_count, -1)
+        a, s2, s3 = powers.reshape(3, count, p + 1, p + 1)
+        a += curve.within_products
         length = np.sqrt(np.diagonal(a, axis1=1, axis2=2))
-        lower = np.linalg.cholesky(a / (length[:, :, None] * length[:, None, :]))
-        pivots = np.diagonal(lower, axis1=1, axis2=2) * length
+        scaled = a / (length[:, :, None] * length[:, None, :])
+        pivots = np.diagonal(np.linalg.cholesky(scaled), axis1=1, axis2=2) * length
         r = pivots[:, p] ** 2
-        axx = a[:, :p, :p]
-        joined = np.concatenate([a[:, :p, p:], s2[:, :p, :]], axis=2)
-        solved = (
-            np.linalg.solve(axx / (length[:, :p, None] * length[:, None, :p]), joined / length[:, :p, None])
-            / length[:, :p, None]
-        )
-        c = np.concatenate([-solved[:, :, 0], np.ones((len(psi), 1))], axis=1)
-        s2c = np.einsum("mij,mj->mi", s2, c)
-        r1 = -np.einsum("mi,mi->m", c, s2c)
-        solved_v = np.einsum("mij,mj->mi", solved[:, :, 1:], c)  # A_xx^-1 (S_2 c)_x
-        r2 = 2.0 * np.einsum("mi,mij,mj->m", c, s3, c) - 2.0 * np.einsum("mi,mi->m", s2c[:, :p], solved_v)
+        right = [a[:, :p, p:], s2[:, :p, :]]
+        if self.kind == "reml":
+            right.append(s3[:, :p, :p])
+        unit = length[:, :p, None]
+        solved = np.linalg.solve(scaled[:, :p, :p], np.concatenate(right, axis=2) / unit) / unit
+        c = np.concatenate([-solved[:, :, :1], np.ones((count, 1, 1))], axis=1)
+        row = c.transpose(0, 2, 1)
+        s2c = s2 @ c
+        r1 = -(row @ s2c)[:, 0, 0]
+        solved_v = solved[:, :, 1 : p + 2] @ c  # A_xx^-1 (S_2 c)_x
+        r2 = 2.0 * (row @ (s3 @ c) - s2c[:, :p].transpose(0, 2, 1) @ solved_v)[:, 0, 0]
         g = np.log1p(np.multiply.outer(psi, curve.sizes)) @ curve.counts
         g1 = weight @ curve.counts
         g2 = -(weight**2) @ curve.counts
         if self.kind == "reml":
             inner = solved[:, :, 1 : p + 1]  # A_xx^-1 S_2,xx
-            s3_solved = (
-                np.linalg.solve(
-                    axx / (length[:, :p, None] * length[:, None, :p]), s3[:, :p, :p] / length[:, :p, None]
-                )
-                / length[:, :p, None]
-            )
             g = g + 2.0 * np.log(pivots[:, :p]).sum(axis=1)
             g1 = g1 - np.trace(inner, axis1=1, axis2=2)
-            g2 = g2 + 2.0 * np.trace(s3_solved, axis1=1, axis2=2) - np.einsum("mij,mji->m", inner, inner)
+            g2 = g2 + 2.0 * np.trace(solved[:, :, p + 2 :], axis1=1, axis2=2)
+            g2 = g2 - (inner * inner.transpose(0, 2, 1)).sum(axis=(1, 2))
         return Values(psi, r, r1, np.maximum(r2, 0.0), g, g1, g2, a[:, p, p] / r, self.m)
 
 
@@ -160,9 +153,13 @@ def log_likelihood(curve: Curve, kind: Kind, psi: float, constant: bool = True) 
     -------
     float
     """
+    return log_likelihood_at(curve, kind, curve.at(psi), constant)
+
+
+def log_likelihood_at(curve: Curve, kind: Kind, point: Point, constant: bool = True) -> float:
+    """Return `log_likelihood` at a point of the curve that is known already."""
     m = curve.n - (curve.rank if kind == "reml" else 0)
-    point = curve.at(psi)
-    g = float(curve.counts @ np.log1p(curve.sizes * psi))
+    g = float(curve.counts @ np.log1p(curve.sizes * point.psi))
     value = -0.5 * (m * np.log(2.0 * np.pi * point.residual / m) + m + g)
     if kind == "reml":
         sign, root_det = np.linalg.slogdet(point.root)
