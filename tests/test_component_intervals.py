@@ -287,7 +287,7 @@ def test_estimate_on_the_boundary_is_said():
 
 def test_fit_without_one_row_units_gets_no_profile_of_the_whole_panel():
     c = curve("singletons_both")
-    dropped = curve_of(c.moments.without_sizes(1))
+    dropped = curve_of(c.moments.without_one_row_units())
     fit = fit_route(dropped, "reml", {}, "not needed")
     table = rows(component_intervals(c, {"reml": fit}), method="profile_likelihood")
     assert table["note"].str.contains("leaves out one-row units").all()

@@ -131,13 +131,8 @@ class Moments:
         keys = pd.RangeIndex(int(unit.max()) + 1)
         return collect(blocks, (*labels, outcome), keys)[1]
 
-    def without_sizes(self, *sizes: int) -> Moments:
-        """Leave out every unit of the given sizes.
-
-        Parameters
-        ----------
-        *sizes : int
-            Sizes to leave out; ``without_sizes(1)`` drops the one-row units.
+    def without_one_row_units(self) -> Moments:
+        """Leave out the units with one row, which have no part in W.
 
         Returns
         -------
@@ -148,9 +143,9 @@ class Moments:
         DataError
             If no unit is left.
         """
-        keep = ~np.isin(self.sizes, sizes)
+        keep = self.sizes > 1
         if not keep.any():
-            raise DataError(f"no unit is left without the sizes {sorted(sizes)}.")
+            raise DataError("every unit has one row: nothing is left when one-row units are dropped.")
         return _frozen(
             replace(self, sizes=self.sizes[keep], counts=self.counts[keep], between=self.between[keep])
         )

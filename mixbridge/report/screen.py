@@ -233,13 +233,14 @@ def _components(study: StudyView) -> list[str]:
     for _, row in table.iterrows():
         if row["route"] in REFERENCE_ROUTES:
             continue
-        cells = tuple(
-            number(row[name]) for name in ("unit_variance", "idiosyncratic_variance", "ratio", "icc")
+        cells = (
+            *(number(row[name]) for name in ("unit_variance", "idiosyncratic_variance", "ratio")),
+            number(row["icc"], 3),
         )
         errors = tuple(number(row[f"{name}_se"], 2) for name in ("unit_variance", "idiosyncratic_variance"))
         status = "truncated, zero used" if row["unit_variance"] < 0 else str(row["status"])
         merged.setdefault((*cells, *errors, status), []).append(str(row["route"]))
-    rows = [["route", "unit variance", "(se)", "idiosyncratic", "(se)", "ratio ψ", "ICC", "status"]]
+    rows = [["route", "unit", "(se)", "idiosyncratic", "(se)", "ratio ψ", "ICC", "status"]]
     without: list[str] = []
     for (*cells, status), names in merged.items():
         if set(cells) == {"-"}:

@@ -117,7 +117,7 @@ class StudyBase:
             raise IdentificationError(
                 "every unit has one row: nothing is left when one-row units are dropped."
             )
-        return curve_of(self.moments.without_sizes(1))
+        return curve_of(self.moments.without_one_row_units())
 
     def _curve_for(self, conventions: Mapping[str, object]) -> Curve:
         dropped = conventions.get("one_row_units") == "dropped"

@@ -10,7 +10,7 @@ from mixbridge.reconcile.identities.plain import largest, least_squares
 from mixbridge.reconcile.identities.registry import Compared, Unmet, identity
 from mixbridge.reconcile.identities.setting import Setting, multiple
 
-__all__ = ["SIZE", "within_bounds"]
+__all__ = ["ENDLESS", "SIZE", "within_bounds"]
 
 ENDLESS = 1e80
 """Size times ratio that stands for infinity: no between variation weighs anything beside within variation."""
@@ -49,7 +49,7 @@ def pooled_end(setting: Setting) -> Compared | Unmet:
         f"{name}: singular value decomposition of the total products",
         difference[at],
         tolerance[at],
-        f"32 (columns + 1) x 2.2e-16 x condition {solved.condition:.3g} x amplification in this "
+        f"64 (columns + 1) x 2.2e-16 x condition {solved.condition:.3g} x amplification in this "
         f"coefficient; {SIZE}",
     )
 
@@ -81,7 +81,7 @@ def one_row_units(setting: Setting) -> Compared | Unmet:
     if len(moments.sizes) == 1:
         return Unmet("units with two rows: there are none")
     try:
-        shorter = curve_of(moments.without_sizes(1))
+        shorter = curve_of(moments.without_one_row_units())
     except IdentificationError as error:
         return Unmet(f"estimable without one-row units: {error}")
     right = shorter.at(ENDLESS / shorter.sizes[0]).beta
@@ -102,7 +102,10 @@ def _slopes(setting: Setting, right: np.ndarray, what: str, condition: float = 1
     left = setting.fits["within"].beta
     free = np.flatnonzero(np.isfinite(left))
     size, amplified, inner = within_bounds(setting, free)
-    tolerance = multiple(setting.plain.rank) * max(condition, setting.curve.condition) * amplified
+    engine = max(condition, setting.curve.condition) * setting.engine_condition(
+        ENDLESS / setting.curve.sizes[0]
+    )
+    tolerance = multiple(setting.plain.rank) * engine * amplified
     at, difference = largest(left[free], right[free], size, tolerance)
     name = setting.curve.names[free[at]]
     return Compared(
@@ -113,9 +116,8 @@ def _slopes(setting: Setting, right: np.ndarray, what: str, condition: float = 1
         f"{name}: {what}",
         difference[at],
         tolerance[at],
-        f"32 (columns + 1) x 2.2e-16 x condition of X {max(condition, setting.curve.condition):.3g} x "
-        f"condition of QX "
-        f"{inner:.3g} x amplification in this coefficient; {SIZE}",
+        f"64 (columns + 1) x 2.2e-16 x condition for the engine {engine:.3g} x condition of QX {inner:.3g} "
+        f"x amplification in this coefficient; {SIZE}",
     )
 
 
