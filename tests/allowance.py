@@ -1,33 +1,40 @@
 """How far the engine may be from a reference: bounds by first-order perturbation theory, computed for each panel.
 
-Stored data are exact. What the engine rounds are sums over rows, so with unit roundoff ``u = eps / 2`` every cross-product
-carries a relative error of at most ``gamma = n u`` (worst case of a sum of n terms; Higham 2002, sec. 3.1, place from memory). A
-factor F of the products is then exact for columns perturbed, each relative to its own length, by
+Stored data are exact. What the engine rounds are sums over rows, so with unit roundoff ``u = eps / 2``
+every cross-product carries a relative error of at most ``gamma = n u`` (worst case of a sum of n terms;
+Higham 2002, sec. 3.1, place from memory). A factor F of the products is then exact for columns perturbed,
+each relative to its own length, by
 
     eta = gamma * kappa_z * T      from products by Cholesky
     eta = gamma * T                from rows by QR
 
-`kappa_z` is the condition of the unit-centred columns (x, y), scaled. Products are used while their smallest scaled eigenvalue is above
-`PRODUCT_FLOOR` (unit means are few here, so their factors come from rows). ``T`` is the largest unit size: rows are
-measured from the first of their unit, and subtracting its mean distance amplifies at most by T.
+`kappa_z` is the condition of the unit-centred columns (x, y), scaled. Products are used while their
+smallest scaled eigenvalue is above `PRODUCT_FLOOR` (unit means are few here, so their factors come from
+rows). ``T`` is the largest unit size: rows are measured from the first of their unit, and subtracting its
+mean distance amplifies at most by T.
 
-Least squares of f on F, residual r, column lengths d, columns and f perturbed by eta (Golub & Van Loan, *Matrix Computations*,
-sec. 5.3, place from memory), with ``s = |f| + sum d_j |b_j|``:
+Least squares of f on F, residual r, column lengths d, columns and f perturbed by eta (Golub & Van Loan,
+*Matrix Computations*, sec. 5.3, place from memory), with ``s = |y| + sum d_j |b_j|`` (f is a projection of
+y, rounded at the size of y):
 
     d_j |delta b_j|            <= eta (kappa s + kappa^2 |r|)
     |delta r'r|                <= 2 eta kappa |r| s + (eta kappa s)^2
     |delta (F'F)^-1|_ij        <= 2 eta kappa sqrt((F'F)^-1_ii (F'F)^-1_jj)
 
-The engine whitens by all rows first, so its kappa at any later step is at most the product of that of all rows and that of the step:
-`Conditions.combined`. With a constant in X everything is measured from grand means, and an intercept collects the bounds of the
-other coefficients times their means, plus the rounding of the level itself.
+The engine whitens by all rows first, so its kappa at any later step is at most the product of that of all
+rows and that of the step: `Conditions.combined`. With a constant in X everything is measured from grand
+means, and an intercept collects the bounds of the other coefficients times their means, plus the rounding
+of the level itself.
 
-A ratio psi that is off by delta moves points on the curve, since ``|dV_0^-1/dpsi| <= w V_0^-1`` with ``w = max T / (1 + T psi)``, by
+A ratio psi that is off by delta moves points on the curve: with ``w = max T / (1 + T psi)``, r the residual
+form and ``C = (X'V_0^-1 X)^-1``, since ``|dV_0^-1 / dpsi| <= w V_0^-1``,
 
-    |delta beta_j|  <= delta w sqrt(r C_jj),   |delta C_ij| <= delta w sqrt(C_ii C_jj),   C = (X'V_0^-1 X)^-1, r the residual form.
+    |delta beta_j|  <= delta w sqrt(r C_jj)
+    |delta C_ij|    <= delta w sqrt(C_ii C_jj)
 
-Components solve ``C theta = q``, so ``|delta theta| <= |C^-1| (|delta q| + |delta C| |theta|)``. A trace in C of a form with at least one
-degree of freedom is a difference of numbers at most n times as large: ``|delta C| <= 2 eta kappa n |C|``.
+Components solve ``C theta = q``, so ``|delta theta| <= |C^-1| (|delta q| + |delta C| |theta|)``. A trace in
+C of a form with at least one degree of freedom is a difference of numbers at most n times as large:
+``|delta C| <= 2 eta kappa n |C|``.
 """
 
 from __future__ import annotations
@@ -151,7 +158,7 @@ def least_squares(c: Conditions, rows: np.ndarray, f: np.ndarray, beta: np.ndarr
     best = np.linalg.lstsq(rows / np.where(length > 0, length, 1.0), f, rcond=NEGLIGIBLE)[0]
     left = f - rows @ (best / np.where(length > 0, length, 1.0))
     r = float(np.sqrt(left @ left))
-    s = float(np.sqrt(f @ f)) + float(np.abs(best).sum())
+    s = float(np.sqrt(c.y @ c.y)) + float(np.abs(best).sum())
     condition = c.total * step
     bound = c.eta * (condition * s + condition**2 * r) / np.where(length > 0, length, np.inf)
     beta_bound = c.to_data(bound)

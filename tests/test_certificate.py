@@ -57,7 +57,7 @@ def random_panels(seed: int, count: int):
                 yield X, y, units, curve
 
 
-# -- bounds ------------------------------------------------------------------------------------------------------------
+# -- bounds ----------------------------------------------------------------------------------------
 
 
 def bounds_on(v: Values) -> dict[str, float]:
@@ -156,11 +156,12 @@ def test_monotone_parts(kind):
 def test_limit_is_the_limit():
     for *_, curve in random_panels(24, 20):
         v = Profile(curve, "ml").values(np.array([1e7]))
-        # psi^2 |r'| -> L with relative error of order 1 / (T psi) <= 1e-7 times the spread of sizes (at most 20)
+        # psi^2 |r'| -> L with relative error of order 1 / (T psi) <= 1e-7 times the spread of sizes (at
+        # most 20)
         assert -(v.psi[0] ** 2) * v.r1[0] == pytest.approx(limit_of(curve), rel=1e-4)
 
 
-# -- two minima --------------------------------------------------------------------------------------------------------
+# -- two minima ------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("kind", KINDS)
@@ -175,7 +176,8 @@ def test_two_minima(panel, kind):
     assert len(minima) == 2 or f"{kind}_two" not in panel.tags
     assert found.psi == minima[0].psi
     for point, (psi, deviance) in zip(minima, best.minima, strict=True):
-        # an optimum is located to the square root of rounding by values, to rounding over curvature by slopes: here 1e-9
+        # an optimum is located to the square root of rounding by values, to rounding over curvature by
+        # slopes: here 1e-9
         assert point.psi == pytest.approx(psi, rel=1e-9, abs=0.0)
         assert point.deviance == pytest.approx(deviance - best.deviance, abs=found.epsilon)
     interior = [point.psi for point in found.stationary if point.kind != "boundary minimum"]
@@ -218,7 +220,7 @@ def test_nothing_on_a_fine_grid_is_better(kind):
         assert set(changes) <= set(at)  # every sign change seen was listed
 
 
-# -- epsilon -----------------------------------------------------------------------------------------------------------
+# -- epsilon ---------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("kind", KINDS)
@@ -252,7 +254,7 @@ def test_epsilon_grows_with_cancellation():
     assert f"{wide.epsilon:.1g}" in wide.lines()[0]
 
 
-# -- edges -------------------------------------------------------------------------------------------------------------
+# -- edges -----------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("kind", KINDS)
@@ -282,7 +284,8 @@ def test_huge_ratio(kind, size):
     within = ((y - means[units]) ** 2).sum() / 36
     between = 5 * ((means - means.mean()) ** 2).sum() / (8 if kind == "reml" else 9)
     found = certified(curve_of_arrays(np.ones((45, 1)), y, units), kind)
-    # the within mean square is formed from rows of size `size` rounded to eps: relative error size * eps * few
+    # the within mean square is formed from rows of size `size` rounded to eps: relative error size * eps *
+    # few
     assert found.psi == pytest.approx((between / within - 1) / 5, rel=max(1e-12, 64 * EPS * size))
     assert found.excluded
     assert found.tail_from > 0.0
@@ -297,7 +300,7 @@ def test_closed_form_balanced():
     assert len(panel.y) == 32
 
 
-# -- it cannot be fooled -----------------------------------------------------------------------------------------------
+# -- it cannot be fooled ---------------------------------------------------------------------------
 
 
 def coarse_certify(monkeypatch, curve: Curve, kind: str, points: int) -> Certificate:

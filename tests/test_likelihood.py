@@ -33,7 +33,7 @@ def fit_for(name: str, kind: str) -> Fit:
     return fit_route(curve_for(name), kind, {}, "not asked for")
 
 
-# -- derivatives -------------------------------------------------------------------------------------------------------
+# -- derivatives -----------------------------------------------------------------------------------
 
 DERIVATIVE_PANELS = (
     "balanced_both",
@@ -79,9 +79,10 @@ def derivatives_at(name: str, psi: float, kind: str) -> dict[str, float]:
 def derivative_scales(curve: Curve, psi: float) -> tuple[dict[str, float], float]:
     """Size of the terms that each quantity is summed from, and the condition of the system that is solved.
 
-    r = c'Ac, r1 = -c'S_2c, r2 = 2c'S_3c - 2v'A^-1v <= 2c'S_3c with c = (-b, 1), so a relative error in the entries of A,
-    S_2, S_3 (and of c, once more the condition) is relative to ``sqrt(c'Sc) sqrt(sum c_j^2 S_jj)``; g and its
-    derivatives are sums of at most one log, weight or squared weight per unit and column.
+    r = c'Ac, r1 = -c'S_2c, r2 = 2c'S_3c - 2v'A^-1v <= 2c'S_3c with c = (-b, 1), so a relative error in the
+    entries of A, S_2, S_3 (and of c, once more the condition) is relative to ``sqrt(c'Sc) sqrt(sum c_j^2
+    S_jj)``; g and its derivatives are sums of at most one log, weight or squared weight per unit and
+    column.
     """
     p = curve.rank
     weight = curve.sizes / (1 + curve.sizes * psi)
@@ -115,13 +116,16 @@ def test_profile_and_its_derivatives(name):
         for i, psi in enumerate(RATIOS):
             exact = derivatives_at(name, psi, kind)
             scales, solved = derivative_scales(curve, psi)
-            # eta per entry of the whitened products, amplified by the whitening and by the solve (see allowance.py)
+            # eta per entry of the whitened products, amplified by the whitening and by the solve (see
+            # allowance.py)
             relative = 2 * c.eta * c.total * solved
             for what, value in exact.items():
                 error = abs(float(getattr(values, what)[i]) - value)
                 limit = relative * scales[what] + 2 * EPS * abs(value)
                 assert error <= limit, f"{kind} {what} at {psi}: off by {error:.1e}, allowed {limit:.1e}"
-                assert limit <= 1e-8 * scales[what] + 2 * EPS * abs(value), "an allowance that allows everything tests nothing"
+                assert limit <= 1e-8 * scales[what] + 2 * EPS * abs(value), (
+                    "an allowance that allows everything tests nothing"
+                )
         # the parts make up the deviance
         assert values.deviance == pytest.approx(
             Profile(curve, kind).m * np.log(values.r) + values.g, rel=4 * EPS
@@ -150,11 +154,12 @@ def test_values_do_not_depend_on_what_else_is_evaluated(kind):
     for i, psi in enumerate(grid):
         alone = profile.values(np.array([psi]))
         for what in ("r", "r1", "r2", "g", "g1", "g2"):
-            # the same sums by another blocking of the matrix product: rounding of at most one term per size and column
+            # the same sums by another blocking of the matrix product: rounding of at most one term per size
+            # and column
             assert getattr(alone, what)[0] == pytest.approx(getattr(together, what)[i], rel=1e3 * EPS)
 
 
-# -- optima ------------------------------------------------------------------------------------------------------------
+# -- optima ----------------------------------------------------------------------------------------
 
 
 def relative_in_deviance(name: str, kind: str, psi: float) -> tuple[float, float]:
@@ -187,7 +192,8 @@ def test_optimum_against_fifty_digits(panel, kind):
     error = np.sqrt(np.diag(best.cov))
     sizes = np.bincount(np.unique(panel.units, return_inverse=True)[1])
     m = len(panel.y) - (panel.X.shape[1] if kind == "reml" else 0)
-    # log L holds m log r / 2, log-determinants of at most N + 2p pivots, and constants: relative errors become absolute
+    # log L holds m log r / 2, log-determinants of at most N + 2p pivots, and constants: relative errors
+    # become absolute
     likelihood = m * (scale + EPS * abs(np.log(best.idiosyncratic_variance))) + (
         len(sizes) + 2 * panel.X.shape[1]
     ) * (c.eta * c.combined + 8 * EPS * np.log1p(sizes.max() * (1 + best.psi)))
@@ -260,7 +266,8 @@ def test_first_order_conditions_of_reml(panel):
         panel.X, panel.y, panel.units, unit, idiosyncratic, exact=True
     )
     off, relative = (0.0, 0.0) if fit.ratio == 0 else relative_in_deviance(panel.name, "reml", fit.ratio)
-    # both sides move with the ratio at most in proportion, quadratic ones twice; the dense side carries 19 digits
+    # both sides move with the ratio at most in proportion, quadratic ones twice; the dense side carries 19
+    # digits
     allowed = 3 * (off / fit.ratio if fit.ratio else 0.0) + 2 * relative + PLAIN
     c = conditions(panel.X, panel.y, panel.units)
     moved = max(allowed, 4 * c.eta * c.combined)
@@ -281,7 +288,8 @@ def test_component_information(panel, kind):
     c = conditions(panel.X, panel.y, panel.units)
     size = np.sqrt(np.diag(exact))
     outer = np.outer(size, size)
-    # traces of at least N - K_c = 1 out of at most n terms; the 2 x 2 inverse has the condition of their correlation
+    # traces of at least N - K_c = 1 out of at most n terms; the 2 x 2 inverse has the condition of their
+    # correlation
     condition = 1 / (1 - (exact[0, 1] / (size[0] * size[1])) ** 2)
     allowed = 4 * c.eta * c.combined * c.n * condition
     wrong = np.abs(fit.components_covariance - exact) / outer
@@ -290,7 +298,7 @@ def test_component_information(panel, kind):
         assert (wrong <= PLAIN).all()
 
 
-# -- another program ---------------------------------------------------------------------------------------------------
+# -- another program -------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("kind", KINDS)
@@ -312,7 +320,8 @@ def test_statsmodels(name, kind):
     assert -rounding <= deficit <= 1e-6, (
         "never worse; and its optimiser stops where the gradient falls below 1e-5"
     )
-    # a deficit in log L is a step in the ratio: D'' step^2 / 2 = 2 deficit; the coefficients move along the curve
+    # a deficit in log L is a step in the ratio: D'' step^2 / 2 = 2 deficit; the coefficients move along the
+    # curve
     bend = float(Profile(curve, kind).values(np.array([fit.ratio])).bend[0])
     step = np.sqrt(4 * (max(deficit, 0.0) + rounding) / bend)
     ratio = float(np.asarray(result.cov_re)[0, 0]) / result.scale
@@ -328,7 +337,7 @@ def test_statsmodels(name, kind):
     )
 
 
-# -- likelihoods without a maximum -------------------------------------------------------------------------------------
+# -- likelihoods without a maximum -----------------------------------------------------------------
 
 
 def fit_arrays(X, y, units, kind: str) -> Fit:

@@ -21,7 +21,7 @@ from mixbridge.ratio import curve_of
 EPS = float(np.finfo(float).eps)
 
 
-# -- adversarial panels ------------------------------------------------------------------------------------------------
+# -- adversarial panels ----------------------------------------------------------------------------
 
 
 def spread_sizes(rng):
@@ -118,10 +118,11 @@ def exact_products(X, y, units, columns=(1, 2)):
 def check_against_exact(moments: Moments, X, y, units, loss: float) -> None:
     """Compare W and every B_T with exact ones.
 
-    W: sums of n terms, each product amplified by `loss` (at most the largest size; one where rows were centred first):
-    relative to sqrt(W_ii W_jj) the worst case is ``n u loss`` with ``u = eps / 2``, and 4 k eps for the factor.
-    B_T: a unit mean is the first row plus a mean difference, so it is off by at most ``(T + 4) u`` times the range of z
-    (not of its distance from zero: offsets cancel before anything is rounded, see `gather`).
+    W: sums of n terms, each product amplified by `loss` (at most the largest size; one where rows were
+    centred first): relative to sqrt(W_ii W_jj) the worst case is ``n u loss`` with ``u = eps / 2``, and 4 k
+    eps for the factor. B_T: a unit mean is the first row plus a mean difference, so it is off by at most
+    ``(T + 4) u`` times the range of z (not of its distance from zero: offsets cancel before anything is
+    rounded, see `gather`).
     """
     n, k = len(y), len(moments.columns)
     W, means = exact_products(X, y, units)
@@ -195,7 +196,8 @@ def test_second_pass_where_columns_are_ill_conditioned_within():
         codes = np.unique(panel.units, return_inverse=True)[1]
         moments = Moments.from_arrays(panel.X, panel.y, codes, panel.names)
         assert "QR" in moments.note
-        # products alone would leave 1 - correlation^2 = 1e-10 to an error of 1e-16 * n: six digits. QR leaves eleven.
+        # products alone would leave 1 - correlation^2 = 1e-10 to an error of 1e-16 * n: six digits. QR
+        # leaves eleven.
         z = np.column_stack([panel.X, panel.y]).astype(np.longdouble)
         means = np.array([z[codes == i].mean(axis=0) for i in range(codes.max() + 1)])
         exact = (z - means[codes])[:, 1:] / moments.scale
@@ -221,7 +223,7 @@ def test_within_factor_keeps_constant_columns_at_zero():
     )
 
 
-# -- merging -----------------------------------------------------------------------------------------------------------
+# -- merging ---------------------------------------------------------------------------------------
 
 
 def same_moments(one: Moments, other: Moments, steps: int, n: int, reach: np.ndarray, loss: float) -> None:
@@ -233,7 +235,8 @@ def same_moments(one: Moments, other: Moments, steps: int, n: int, reach: np.nda
     F, G = one.within * one.scale, other.within * other.scale
     length = np.sqrt((F**2).sum(axis=0))
     allowed = (n * loss + 8 * steps + 16) * EPS * np.outer(length, length)
-    # the means of a split unit are moved to one origin: each merge rounds the gap between them at the size of the range
+    # the means of a split unit are moved to one origin: each merge rounds the gap between them at the size
+    # of the range
     gap = 4 * steps * EPS * reach * np.sqrt(n)
     allowed += np.outer(length, gap) + np.outer(gap, length) + np.outer(gap, gap)
     assert (np.abs(F.T @ F - G.T @ G) <= allowed).all()
@@ -362,7 +365,7 @@ def test_units_without_a_row_are_left_out():
     assert whole.units == 10
 
 
-# -- records -----------------------------------------------------------------------------------------------------------
+# -- records ---------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("panel", PANELS[::6], ids=lambda panel: panel.name)
@@ -410,7 +413,7 @@ def test_moments_cannot_be_changed():
     for moments in (
         Moments.from_arrays(X, y, units),
         Moments.from_record(Moments.from_arrays(X, y, units).to_record()),
-        Moments.from_arrays(X, y, units).without_sizes(1),
+        Moments.from_arrays(X, y, units).without_one_row_units(),
         Moments.from_arrays(X, y, units) + Moments.from_arrays(X, y, units),
     ):
         for field in dataclasses.fields(Moments):
@@ -431,19 +434,19 @@ def test_the_callers_arrays_are_not_touched():
         assert array.flags.writeable
 
 
-def test_without_sizes():
+def test_without_one_row_units():
     X, y, units = adversarial("ordinary", 0)
     count = np.bincount(units)[units]
-    one = Moments.from_arrays(X, y, units).without_sizes(1)
+    one = Moments.from_arrays(X, y, units).without_one_row_units()
     other = Moments.from_arrays(
         X[count > 1], y[count > 1], np.unique(units[count > 1], return_inverse=True)[1]
     )
     same_moments(one, other, 1, len(y), np.ptp(np.column_stack([X[:, 1:], y]), axis=0), 700.0)
-    with pytest.raises(DataError, match="no unit is left"):
-        one.without_sizes(*one.sizes.tolist())
+    with pytest.raises(DataError, match="every unit has one row"):
+        Moments.from_arrays(X, y, np.arange(len(y))).without_one_row_units()
 
 
-# -- what columns are --------------------------------------------------------------------------------------------------
+# -- what columns are ------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("kind", MAKERS)
@@ -572,7 +575,7 @@ def test_near_collinearity_is_not_refused():
     assert 1e7 < curve.condition < 1e10
 
 
-# -- what is refused ---------------------------------------------------------------------------------------------------
+# -- what is refused -------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("bad", [np.inf, -np.inf, np.nan, 1e300])

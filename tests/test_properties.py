@@ -76,7 +76,8 @@ def ratio_error(fit: Fit, data: Data) -> float:
     """How far the ratio may be off for relative errors of size `error` in what it is computed from."""
     error = data.error
     if fit.certificate is None:
-        # sigma_a^2 = difference of forms of the size of sigma_u^2 + T sigma_a^2, over at least one row of 1 + T psi
+        # sigma_a^2 = difference of forms of the size of sigma_u^2 + T sigma_a^2, over at least one row of 1
+        # + T psi
         return error * (1.0 + fit.ratio) * (1.0 + abs(fit.unit_variance_raw) / fit.idiosyncratic_variance)
     if fit.ratio == 0.0:
         return 0.0
@@ -88,8 +89,9 @@ def ratio_error(fit: Fit, data: Data) -> float:
 def assert_same(one: Fit, other: Fit, data: Data, *, c: float = 1.0, to_beta=None, shift=None) -> None:
     """Compare `other`, a fit to transformed data, with `one`.
 
-    Expected: beta -> c R beta + shift with R = to_beta; variances -> c^2; the ratio as it is. A ratio that is off by
-    delta moves beta_j by at most ``delta T_max / (1 + T_max psi) sqrt(n) se_j`` and its covariance by that relative factor.
+    Expected: beta -> c R beta + shift with R = to_beta; variances -> c^2; the ratio as it is. A ratio that
+    is off by delta moves beta_j by at most ``delta T_max / (1 + T_max psi) sqrt(n) se_j`` and its
+    covariance by that relative factor.
     """
     error = data.error
     assert same_sign_or_rounding(one, other, error), f"{one.route}: {one.status} against {other.status}"

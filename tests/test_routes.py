@@ -71,7 +71,7 @@ def curve_for(name: str, dropped: bool) -> Curve:
     codes = np.unique(panel.units, return_inverse=True)[1]
     moments = Moments.from_arrays(panel.X, panel.y, codes, panel.names)
     if dropped and moments.sizes[0] == 1:
-        moments = moments.without_sizes(1)
+        moments = moments.without_one_row_units()
     return curve_of(moments)
 
 
@@ -236,7 +236,13 @@ def engine_status(fit: Fit) -> str:
 
 
 def compare(panel: Panel, route: str, kw: dict) -> list[Difference]:
-    """Fit both ways, check the statuses, return every figure."""
+    """Fit both ways, check the statuses, return every figure; remembered, the reference is slow."""
+    return compared(panel.name, route, tuple(kw.items()))
+
+
+@cache
+def compared(name: str, route: str, conventions: tuple) -> list[Difference]:
+    panel, kw = BY_NAME[name], dict(conventions)
     dropped = kw.get("one_row_units") == "dropped"
     curve = curve_for(panel.name, dropped)
     fit = fit_route(curve, route, kw, "not asked for")
