@@ -97,8 +97,7 @@ def _unmet(setting: Setting) -> str | None:
     number=14,
     name="iterated generalised least squares",
     statement="balanced: iterated from the within and from the between end with likelihood divisors, the "
-    "weight of unit means moves one "
-    "way only; where both ends meet at a ratio >= 0 it is that of ML",
+    "weight of unit means moves one way only; where both ends meet at a ratio >= 0 it is that of ML",
     source="Breusch 1987",
 )
 def iterated_is_ml(setting: Setting) -> Compared | Unmet:
@@ -141,8 +140,7 @@ def iterated_is_ml(setting: Setting) -> Compared | Unmet:
         "weight of unit means: ML",
         max(away, wrong_way),
         multiple(curve.rank) * rounding + last / (1.0 - rate),
-        f"32 (columns + 1) x 2.2e-16 x {rounding:.3g} (condition of X x what residuals lose by "
-        f"subtraction / (1 - rate)), plus what is "
-        f"left of the iteration at rate {rate:.3g}; relative to the weight; a step the wrong way counts "
-        f"as distance",
+        f"64 (columns + 1) x 2.2e-16 x {rounding:.3g} (condition of X x what residuals lose by subtraction "
+        f"/ (1 - rate)), plus what is left of the iteration at rate {rate:.3g}; relative to the weight; a "
+        "step the wrong way counts as distance",
     )

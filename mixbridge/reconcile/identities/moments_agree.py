@@ -39,6 +39,8 @@ class _Closed:
         The larger of the conditions of QX and PX.
     stored : float
         Share of the sums of squares that rounding of the stored columns can make.
+    carried : float
+        Length of the within fit carried to the unit means, over that of what is left of them, twice.
     """
 
     components: FloatArray
@@ -48,6 +50,7 @@ class _Closed:
     coefficient: float
     condition: float
     stored: float
+    carried: float
 
 
 def _anova(setting: Setting, weighted: bool = True) -> _Closed | Unmet:
@@ -70,10 +73,10 @@ def _anova(setting: Setting, weighted: bool = True) -> _Closed | Unmet:
     within, between = inner.residual * plain.unit**2, outer.residual * plain.unit**2
     first = within / df_w
     second = (between - on_idiosyncratic * first) / coefficient
-    slopes = np.abs(plain.beta(plain.at(0.0).slope))
-    if "within" in setting.fits:
-        slopes = slopes + np.abs(np.nan_to_num(setting.fits["within"].beta))
-    moved = setting.stored @ slopes
+    inner_slope, pooled = np.zeros(plain.rank), plain.at(0.0).slope
+    inner_slope[kept_w] = inner.slope
+    moved = setting.hidden_length(np.abs(pooled) + np.abs(inner_slope)) * plain.unit
+    lengths = np.sqrt(plain.sizes @ (plain.between[:, :, :-1] ** 2).sum(axis=1))
     return _Closed(
         np.array([first, second]),
         np.array([first, abs(second) + on_idiosyncratic * first / coefficient]),
@@ -82,23 +85,25 @@ def _anova(setting: Setting, weighted: bool = True) -> _Closed | Unmet:
         float(coefficient),
         max(inner.condition, outer.condition),
         float(2.0 * moved * (within**-0.5 + between**-0.5)),
+        float(2.0 * (np.abs(inner_slope) @ lengths) * plain.unit * between**-0.5),
     )
 
 
 def _solved_rounding(setting: Setting, fit: Fit) -> FloatArray:
     """Return the rounding of solved components, per unit rounding: ``|C^-1| (|dC| theta + dq)``.
 
-    dC: rounding of traces, relative to their row (a trace of T-fold weights being up to T times as large),
-    amplified by n over the
-    degrees of freedom. dq: twice the root of the form times the length of what the engine squares, the
-    pooled residual.
+    dC: rounding of traces, relative to what projections are subtracted from (T-fold weights make it up to T times as
+    large), amplified by n over the degrees of freedom. dq: twice the root of the form times the length of what the
+    engine squares, the pooled residual.
     """
     curve, largest_size = setting.curve, float(setting.curve.sizes[-1])
     _, values, first, second = zip(*fit.forms_table, strict=True)
     system, q = np.column_stack([first, second]), np.abs(np.array(values))
     theta = np.abs([fit.idiosyncratic_variance, fit.unit_variance_raw])
     loss = curve.n / max(curve.df_within, 1) + curve.units / max(curve.units - curve.rank_constant, 1)
-    row = np.maximum(np.abs(system[:, 0]), np.abs(system[:, 1]) / largest_size) * loss
+    prior = float(str(fit.conventions.get("prior", 0.0)))
+    whole = np.array([float(curve.n), float(curve.counts @ (curve.sizes / (1.0 + curve.sizes * prior) ** 2))])
+    row = np.maximum(np.maximum(np.abs(system[:, 0]), np.abs(system[:, 1]) / largest_size), whole) * loss
     traces = row[:, None] * np.array([1.0, largest_size])
     forms = 2.0 * np.sqrt(q * np.maximum(q, curve.unit * np.maximum(1.0, row / curve.n)))
     return np.asarray(np.abs(np.linalg.inv(system)) @ (traces @ theta + forms))
@@ -121,7 +126,9 @@ def _against(setting: Setting, closed: _Closed, routes: Iterable[str], condition
             step = scoring_step(setting, max(components_ratio(fit), 0.0))
             ours = step.amplified * np.maximum(closed.sizes, step.errors) * (m / curve.df_within + m / df_b)
         reason = max(closed.condition, curve.condition)
-        tolerance = multiple(curve.rank) * reason * (ours + own) / closed.sizes + closed.stored
+        tolerance = (
+            multiple(curve.rank) * reason * ((ours + own) / closed.sizes + closed.carried) + closed.stored
+        )
         at, difference = largest(left, closed.components, closed.sizes, tolerance)
         outcome = Compared(
             condition,
@@ -131,11 +138,10 @@ def _against(setting: Setting, closed: _Closed, routes: Iterable[str], condition
             f"{WHAT[at]}: {what}",
             difference[at],
             tolerance[at],
-            f"32 (columns + 1) x 2.2e-16 x condition {reason:.3g} x rounding of forms and traces carried "
-            f"through the "
-            f"route's own equations, plus {closed.stored:.1g} for the rounding of the stored columns; "
-            f"relative to the "
-            "component (for the unit variance, plus what is subtracted for it)",
+            f"64 (columns + 1) x 2.2e-16 x condition {reason:.3g} x rounding of forms and traces carried "
+            "through the route's own equations, and of the within fit carried to unit means "
+            f"{closed.carried:.3g}, plus {closed.stored:.1g} for the rounding of the stored columns; "
+            "relative to the component (for the unit variance, plus what is subtracted for it)",
         )
         found.append((difference[at] / tolerance[at], outcome))
     return max(found, key=lambda pair: np.inf if np.isnan(pair[0]) else pair[0])[1]
@@ -161,8 +167,8 @@ def _unbiased(
     number=12,
     name="one analysis of variance",
     statement="balanced, column space closed under unit averaging: every unbiased quadratic route, the "
-    "minimum-norm ones at any "
-    "prior, and REML away from zero give the components of the analysis of variance",
+    "minimum-norm ones at any prior, and REML away from zero give the components of the analysis of "
+    "variance",
     source="Searle, Casella & McCulloch 1992, ch. 4 (place from memory)",
 )
 def balanced_components(setting: Setting) -> Compared | Unmet:
@@ -215,6 +221,7 @@ def balanced_ml(setting: Setting) -> Compared | Unmet:
         closed.coefficient,
         closed.condition,
         closed.stored,
+        closed.carried,
     )
     return _against(
         setting, form, ["ml"], "balanced; closed under unit averaging; unit variance positive", "closed form"
@@ -225,8 +232,7 @@ def balanced_ml(setting: Setting) -> Compared | Unmet:
     number=13,
     name="four quadratic routes are one",
     statement="unbalanced, column space closed under unit averaging: swamy_arora, wallace_hussain, "
-    "wansbeek_kapteyn and "
-    "fitting_constants still agree",
+    "wansbeek_kapteyn and fitting_constants still agree",
     source="each residual maker splits into a within and a between part",
 )
 def closed_components(setting: Setting) -> Compared | Unmet:
@@ -265,7 +271,10 @@ def wallace_hussain_is_minque_zero(setting: Setting) -> Compared | Unmet:
     errors = np.sqrt(np.maximum(np.diag(other.components_covariance), 0.0))[::-1]
     size = np.fmax(np.fmax(np.abs(right), errors), setting.curve.unit * EPS)
     rounding = _solved_rounding(setting, one) + _solved_rounding(setting, other)
-    tolerance = multiple(setting.curve.rank) * setting.curve.condition * rounding / size
+    stored = setting.snapped * setting.stored_length(setting.plain.beta(setting.plain.at(0.0).slope))
+    _, values, first, second = zip(*other.forms_table, strict=True)
+    moved = np.abs(np.linalg.inv(np.column_stack([first, second]))) @ (2.0 * stored * np.sqrt(np.abs(values)))
+    tolerance = (multiple(setting.curve.rank) * setting.curve.condition * rounding + moved) / size
     at, difference = largest(left, right, size, tolerance)
     return Compared(
         "balanced",
@@ -275,10 +284,9 @@ def wallace_hussain_is_minque_zero(setting: Setting) -> Compared | Unmet:
         f"{WHAT[at]}: {pair[1]}",
         difference[at],
         tolerance[at],
-        f"32 (columns + 1) x 2.2e-16 x condition of X {setting.curve.condition:.3g} x rounding of forms "
-        f"and traces carried "
-        "through both pairs of equations; relative to the component or its standard error, whichever is "
-        "larger",
+        f"64 (columns + 1) x 2.2e-16 x condition of X {setting.curve.condition:.3g} x rounding of forms and "
+        "traces carried through both pairs of equations; relative to the component or its standard error, "
+        "whichever is larger",
     )
 
 
@@ -335,7 +343,7 @@ def differences_are_within(setting: Setting) -> Compared | Unmet:
         f"{name}: within",
         difference[at],
         tolerance[at],
-        f"32 (columns + 1) x 2.2e-16 x (condition of X {setting.curve.condition:.3g} + root of n x "
-        f"condition of QX "
-        f"{inner:.3g}, for moments taken from rows) x amplification in this coefficient; {SIZE}",
+        f"64 (columns + 1) x 2.2e-16 x (condition of X {setting.curve.condition:.3g} + root of n x "
+        f"condition of QX {inner:.3g}, for moments taken from rows) x amplification in this coefficient; "
+        f"{SIZE}",
     )

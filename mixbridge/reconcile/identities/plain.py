@@ -95,6 +95,8 @@ class Plain:
     offset : ndarray of shape (p,)
     unit : float
         Unit of the scaled outcome.
+    scale : ndarray of shape (p,)
+        Units of the scaled design columns (1 for the constant).
     origin : ndarray of shape (p + 1,)
         Where the columns, and the outcome, were centred, in the units of the data (0 for the constant, or
         without one).
@@ -111,6 +113,7 @@ class Plain:
     back: FloatArray
     offset: FloatArray
     unit: float
+    scale: FloatArray
     origin: FloatArray
     log_det_back: float
 
@@ -198,7 +201,9 @@ def plain_of(moments: Moments) -> Plain:
         offset[place] = origin[p]
     log_det_back = float(-np.log(scale[:p]).sum())
     sizes, counts = moments.sizes.astype(float), moments.counts.astype(float)
-    return Plain(names, sizes, counts, within, between, back, offset, float(scale[p]), origin, log_det_back)
+    return Plain(
+        names, sizes, counts, within, between, back, offset, float(scale[p]), scale[:p], origin, log_det_back
+    )
 
 
 def largest(

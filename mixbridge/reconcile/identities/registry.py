@@ -26,7 +26,7 @@ __all__ = [
 ]
 
 TELLING = 1e-2
-"""Tolerance above which agreement says nothing: the columns leave too few digits."""
+"""Tolerance above which neither agreement nor difference says anything: the columns leave too few digits."""
 
 HOLDS, DOES_NOT_APPLY, FAILS = "holds", "does not apply", "FAILS"
 
@@ -134,13 +134,12 @@ def result(rule: Rule, setting: Setting) -> Identity:
     about = (rule.key, rule.number, rule.name, rule.statement, rule.source)
     if isinstance(outcome, Unmet):
         return Identity(*about, DOES_NOT_APPLY, outcome.condition)
-    agrees = outcome.difference <= outcome.tolerance
-    if agrees and outcome.tolerance > TELLING:
+    if outcome.tolerance > TELLING:
         few = f"digits left to compare: rounding alone could make a difference of {outcome.tolerance:.2g}"
         return Identity(*about, DOES_NOT_APPLY, few)
     return Identity(
         *about,
-        HOLDS if agrees else FAILS,
+        HOLDS if outcome.difference <= outcome.tolerance else FAILS,
         outcome.condition,
         float(outcome.left),
         float(outcome.right),

@@ -94,11 +94,9 @@ def _step_compared(
         f"{what}: {names[1]}",
         difference[at],
         multiple(setting.curve.rank) * step.amplified,
-        f"32 (columns + 1) x 2.2e-16 x {step.amplified:.3g}: conditions of the information and of the "
-        f"weighted covariates, what "
-        "is lost in traces and residuals by subtraction, and the square root of n - K; relative to the "
-        "component or its "
-        "standard error, whichever is larger",
+        f"64 (columns + 1) x 2.2e-16 x {step.amplified:.3g}: conditions of the information and of the "
+        "weighted covariates, what is lost in traces and residuals by subtraction, and the square root of "
+        "n - K; relative to the component or its standard error, whichever is larger",
     )
 
 
@@ -193,6 +191,7 @@ def _equations(setting: Setting, fit: Fit) -> tuple[FloatArray, FloatArray, floa
         solved.condition * (np.sqrt(rough / forms).max() + np.sqrt(total) + (whole / traces).max())
     )
     stored = setting.snapped * setting.stored_length(fit.beta) / plain.unit / np.sqrt(solved.residual)
+    amplified += setting.engine_condition(psi) ** 2  # the optimum was found from products
     return forms / sigma**2, traces / sigma, amplified * np.sqrt(total) + 2.0 * stored / multiple(p)
 
 
@@ -234,9 +233,8 @@ def _equation(setting: Setting, at: int, names: tuple[str, str]) -> Compared | U
         f"{names[1]} at the REML components",
         max(gap, 0.0) if boundary and at == 0 else abs(gap),
         multiple(setting.plain.rank) * amplified,
-        f"32 (columns + 1) x 2.2e-16 x {amplified:.3g}: condition of the weighted covariates x what is "
-        f"lost in residuals and "
-        "traces by subtraction; relative to the trace"
+        f"64 (columns + 1) x 2.2e-16 x {amplified:.3g}: condition of the weighted covariates x what is lost "
+        "in residuals and traces by subtraction; relative to the trace"
         + ("; only an excess counts" if boundary and at == 0 else ""),
     )
 
@@ -290,9 +288,8 @@ def reml_constant(setting: Setting) -> Compared | Unmet:
         "REML log-likelihood in recombined columns, brought back",
         abs(fit.log_likelihood - right) / size,
         multiple(setting.plain.rank) * max(rounding / size, 1.0),
-        f"32 (columns + 1) x 2.2e-16 x {rounding:.3g}: n - K times the relative rounding of the residual "
-        f"sum of squares, and the "
-        "condition of X for each column; relative to the log-likelihood, or to one",
+        f"64 (columns + 1) x 2.2e-16 x {rounding:.3g}: n - K times the relative rounding of the residual "
+        "sum of squares, and the condition of X for each column; relative to the log-likelihood, or to one",
     )
 
 
@@ -321,5 +318,5 @@ def reml_shift(setting: Setting) -> Compared | Unmet:
         abs(left - right) / size,
         multiple(setting.plain.rank) * max(rounding / size, 1.0),
         f"as for the constant of REML ({rounding:.3g} x rounding); relative to the log-likelihood or the "
-        f"shift, or to one",
+        "shift, or to one",
     )

@@ -106,6 +106,20 @@ class Setting:
                 bound[j] = floor[moments.columns.index(name)]
         return bound
 
+    def hidden_length(self, slope: FloatArray) -> float:
+        """Return how long a residual the combinations that count as zero, within or on unit means, can leave.
+
+        Where QXv or PXv is zero but for rounding, it is at most as long as ``|v|`` times the rounding of the stored
+        columns, and its coefficient at most the largest ``|b_j / v_j|``. All in scaled units.
+        """
+        noise_scaled = self.stored / np.abs(self.plain.scale)
+        total = 0.0
+        for null in (self.curve.within_span.null, self.curve.between_span.null):
+            for v in np.abs(null.T):
+                used = v > 1e-9 * v.max()
+                total += float(v @ noise_scaled) * float((np.abs(slope)[used] / v[used]).max())
+        return total
+
     @property
     def snapped(self) -> bool:
         """Whether the engine took as zero what the stored rows leave of a column or of a combination within units."""
@@ -114,8 +128,16 @@ class Setting:
         return nonzero > curve.columns_within or any(found.others for found in curve.within_span.dependencies)
 
     def stored_length(self, beta: FloatArray) -> float:
-        """Return how long a residual the stored rounding of the columns can leave at these coefficients, in data units."""
+        """Return how long a residual the stored rounding of columns can leave at these coefficients, in data units."""
         return float(self.stored @ np.abs(beta))
+
+    def engine_condition(self, psi: float) -> float:
+        """Return the condition of the weighted covariates as the engine holds them, combined so that ``X'X = I``."""
+        p, weights = self.curve.rank, self.curve.sizes / (1.0 + self.curve.sizes * psi)
+        products = (self.curve.within_products + self.curve.weighted_between(weights))[:p, :p]
+        length = np.sqrt(np.diag(products))
+        values = np.linalg.eigvalsh(products / np.outer(length, length))
+        return float(np.sqrt(values[-1] / max(values[0], EPS)))
 
     def engine_total(self, psi: float) -> float:
         """Return the weighted sum of squares of the pooled residual, the engine's outcome, scaled."""
@@ -139,12 +161,12 @@ def components_ratio(fit: Fit) -> float:
 
 
 def multiple(columns: int) -> float:
-    """Return the rounding allowed per unit of condition: 32 units for each column of the matrix factored.
+    """Return the rounding allowed per unit of condition: 64 units for each column of the matrix factored.
 
-    The textbook constant of a QR with c columns is of the order of c; 32 leaves room for the two sides and
+    The textbook constant of a QR with c columns is of the order of c; 64 leaves room for the two sides and
     the maps between units.
     """
-    return 32.0 * (columns + 1) * EPS
+    return 64.0 * (columns + 1) * EPS
 
 
 def setting_of(

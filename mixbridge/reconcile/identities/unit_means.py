@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from mixbridge.reconcile.identities.ends import within_bounds
+from mixbridge.reconcile.identities.ends import ENDLESS, within_bounds
 from mixbridge.reconcile.identities.plain import Solved, largest
 from mixbridge.reconcile.identities.registry import Compared, Unmet, identity
 from mixbridge.reconcile.identities.setting import Setting, components_ratio, multiple
@@ -24,7 +24,7 @@ def _estimable(setting: Setting) -> NDArray[np.intp] | Unmet:
     if setting.with_means.rank >= setting.curve.n:
         return Unmet(
             f"more rows than columns with unit means: {setting.curve.n} rows, {setting.with_means.rank} "
-            f"columns"
+            "columns"
         )
     return np.flatnonzero(np.isfinite(setting.fits["within"].beta))
 
@@ -37,18 +37,18 @@ def _tolerance(
     wide = setting.with_means
     reach = wide.reach(solved)[free]
     ours = np.maximum(solved.condition * reach * np.sqrt(solved.total) / size, 1.0)
-    tolerance = multiple(wide.rank) * (ours + setting.curve.condition * amplified)
+    engine = setting.curve.condition * setting.engine_condition(ENDLESS / setting.curve.sizes[0])
+    tolerance = multiple(wide.rank) * (ours + engine * amplified)
     stored = ""
     if setting.curve.columns_within > len(setting.source):
         p = setting.plain.rank
         coefficients = np.abs(wide.beta(solved.slope)[:p])
-        tolerance = tolerance + reach * (setting.stored @ coefficients) / wide.unit / size
+        tolerance = tolerance + solved.condition * reach * (setting.stored @ coefficients) / wide.unit / size
         stored = " and, a mean being left out as a combination of columns, the rounding of the stored columns"
     reason = (
-        f"32 (columns + 1) x 2.2e-16 x (condition with means {solved.condition:.3g} x its amplification + "
-        f"condition of X "
-        f"{setting.curve.condition:.3g} x condition of QX {inner:.3g} x its amplification in this "
-        f"coefficient){stored}; {SIZE}"
+        f"64 (columns + 1) x 2.2e-16 x (condition with means {solved.condition:.3g} x its amplification + "
+        f"condition of X {setting.curve.condition:.3g} x condition of QX {inner:.3g} x its amplification in "
+        f"this coefficient){stored}; {SIZE}"
     )
     return size, tolerance, reason
 
@@ -114,7 +114,9 @@ def contextual_decomposition(setting: Setting) -> Compared | Unmet:
         left, right = fit.beta[free], setting.fits["within"].beta[free] + moved[free]
         size, tolerance, reason = _tolerance(setting, solved, free)
         own, amplified = setting.plain.bounds(fit.beta, short, setting.curve.n - p)
-        tolerance = tolerance + multiple(wide.rank) * short.condition * (amplified * own)[free] / size
+        length = np.sqrt(((full[:, p : wide.rank] @ solved.slope[p:]) ** 2).sum())
+        carried = short.condition * setting.plain.reach(short) * length
+        tolerance += multiple(wide.rank) * short.condition * (amplified * own + carried)[free] / size
         at, difference = largest(left, right, size, tolerance)
         name = setting.curve.names[free[at]]
         outcome = Compared(

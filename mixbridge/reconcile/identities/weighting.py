@@ -121,7 +121,8 @@ def _worst(
         total = setting.engine_total(components_ratio(setting.fits[key]))
         size, amplified = setting.plain.bounds(right, solved, df, total)
         more = loss.get(key, 1.0)
-        tolerance = multiple(setting.plain.rank) * more * amplified
+        engine = setting.engine_condition(components_ratio(setting.fits[key]))
+        tolerance = multiple(setting.plain.rank) * more * amplified * (1.0 + engine / solved.condition)
         if setting.snapped:
             stored = setting.stored_length(right) / setting.plain.unit
             tolerance = tolerance + solved.condition * setting.plain.reach(solved) * stored / size
@@ -137,9 +138,9 @@ def _worst(
                     f"{setting.curve.names[at]}: {what}",
                     difference[at],
                     tolerance[at],
-                    f"{reason}{more:.3g} x 32 (columns + 1) x 2.2e-16 x condition {solved.condition:.3g} x "
-                    "amplification in this coefficient; relative to the coefficient or its standard error, "
-                    "whichever is larger",
+                    f"{reason}{more:.3g} x 64 (columns + 1) x 2.2e-16 x (condition for the engine "
+                    f"{engine:.3g} + condition {solved.condition:.3g}) x amplification in this coefficient; "
+                    "relative to the coefficient or its standard error, whichever is larger",
                 ),
             )
         )
@@ -180,12 +181,12 @@ def _taking(setting: Setting) -> float:
     return float(np.sqrt(setting.curve.n)) * largest_condition
 
 
-def effects_first(plain: Plain, psi: float) -> FloatArray:
+def effects_first(plain: Plain, psi: float) -> tuple[FloatArray, float]:
     """Return predicted unit effects from the mixed-model equations with the fixed part eliminated first.
 
     ``(Z'MZ + I/psi) u = Z'My``, M the residual maker of X. Units of a size enter through the factor of their
     means: turning them
-    among themselves turns their effects alike.
+    among themselves turns their effects alike. Also returned: the length of what the effects take from the pooled fit.
     """
     p = plain.rank
     pooled = least_squares(plain.stacked(plain.sizes))
@@ -195,8 +196,11 @@ def effects_first(plain: Plain, psi: float) -> FloatArray:
     weighted = (plain.sizes * shrink)[:, None, None] * means
     rows = means.shape[0] * means.shape[1]
     flat, heavy = means.reshape(rows, p), weighted.reshape(rows, p)
-    shared = np.linalg.solve(np.eye(p) - flat.T @ heavy, heavy.T @ left.reshape(rows))
-    return np.asarray(shrink[:, None] * (left + means @ shared))
+    try:
+        shared = np.linalg.solve(np.eye(p) - flat.T @ heavy, heavy.T @ left.reshape(rows))
+    except np.linalg.LinAlgError:  # the ratio leaves nothing of a direction beside its effects
+        return np.full(left.shape, np.nan), np.inf
+    return np.asarray(shrink[:, None] * (left + means @ shared)), float(np.sqrt(shared @ shared))
 
 
 @identity(
@@ -214,21 +218,21 @@ def predicted_effects(setting: Setting) -> Compared | Unmet:
     key = "reml" if "reml" in keys else keys[0]
     fit, plain = setting.fits[key], setting.plain
     psi, solved = components_ratio(fit), setting.solved[key]
-    right, left = effects_first(plain, psi), _shrunken(plain, fit)
+    (right, taken), left = effects_first(plain, psi), _shrunken(plain, fit)
     length = float(np.sqrt((right**2).sum()))
     if not length > 0.0:
-        return Unmet("predicted effects: all are zero")
+        return Unmet(f"effects to compare: from the mixed-model equations they have length {length:.3g}")
     scale = plain.unit / np.sqrt(setting.curve.units)
     columns = np.sqrt((plain.between**2).sum(axis=(0, 1)))
     reach = np.sqrt((solved.root**2).sum(axis=1)) * np.sqrt(max(solved.total, setting.engine_total(psi)))
     strength = 1.0 + float(plain.sizes[-1]) * psi
     carried = solved.condition * float(columns[:-1] @ reach)
-    lost = strength * plain.at(0.0).condition * float(columns[-1])
+    lost = strength * plain.at(0.0).condition * (float(columns[-1]) + taken)
     origins = float(np.abs(plain.origin[:-1]) @ np.abs(fit.beta) + abs(plain.origin[-1])) / scale
     stored = (
         setting.snapped * solved.condition * np.sqrt(strength) * setting.stored_length(fit.beta) / plain.unit
     )
-    tolerance = multiple(plain.rank) * (carried + lost) + 4.0 * EPS * origins + stored
+    tolerance = multiple(plain.rank) * (carried + lost) + 4.0 * (plain.rank + 1) * EPS * origins + stored
     return Compared(
         "any panel, positive unit variance",
         float(np.sqrt((left**2).sum())) * scale,
@@ -237,11 +241,9 @@ def predicted_effects(setting: Setting) -> Compared | Unmet:
         "root mean square predicted effect: mixed-model equations",
         float(np.sqrt(((left - right) ** 2).sum())) / length,
         tolerance / length,
-        "distance of the two sets of effects relative to their length; 32 (columns + 1) x 2.2e-16 x "
-        "(rounding of "
-        f"coefficients in unit means {carried / length:.3g} + (1 + largest size x ratio) x condition of X "
-        f"x unit "
-        f"means {lost / length:.3g}), and the last place of coefficients times origins",
+        "distance of the two sets of effects relative to their length; 64 (columns + 1) x 2.2e-16 x "
+        f"(rounding of coefficients in unit means {carried / length:.3g} + (1 + largest size x ratio) x "
+        f"condition of X x unit means {lost / length:.3g}), and the last place of coefficients times origins",
     )
 
 
