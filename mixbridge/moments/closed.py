@@ -44,7 +44,8 @@ class Moments:
     shift, scale : ndarray of shape (k,)
         Origin and unit of each entry of z (scale: a power of two near its standard deviation).
     magnitude : ndarray of shape (k,)
-        Largest absolute unit mean, in the units of z; bounds the rounding of the stored data.
+        Root mean square of each column over all rows, in the units of z: rounding of the stored data is relative
+        to it.
     sizes : ndarray of int, shape (G,)
         Distinct unit sizes T, increasing.
     counts : ndarray of int, shape (G,)
@@ -171,7 +172,9 @@ class Moments:
         sizes = sorted(parts)
         pooled = replace(
             self,
-            magnitude=np.maximum(self.magnitude, other.magnitude),
+            magnitude=np.sqrt(
+                (self.rows * self.magnitude**2 + other.rows * other.magnitude**2) / (self.rows + other.rows)
+            ),
             sizes=np.array(sizes),
             counts=np.array([sum(count for count, _ in parts[size]) for size in sizes]),
             within=stack_factors(self.within, other.within * ratio),
@@ -354,7 +357,7 @@ def close(opened: OpenMoments) -> Moments:
             outcome=columns[-1],
             shift=shift[keep],
             scale=scale,
-            magnitude=np.maximum(np.abs(low + opened.shift), np.abs(high + opened.shift))[keep],
+            magnitude=opened.magnitude[keep],
             sizes=sizes,
             counts=counts,
             within=factor[:, keep] / scale,

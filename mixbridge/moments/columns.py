@@ -88,7 +88,7 @@ def dependency_text(
 
 
 def noise(moments: Moments) -> FloatArray:
-    """Bound what rounding of the stored data leaves in each scaled column.
+    """Bound what rounding leaves of a scaled column that does not vary, within units or between their means.
 
     Parameters
     ----------
@@ -97,9 +97,14 @@ def noise(moments: Moments) -> FloatArray:
     Returns
     -------
     ndarray of shape (k,)
-        Root sum of squares over all rows, in units of `Moments.scale`.
+        Root sum of squares over all rows, in units of `Moments.scale`: four roundings of the stored rows, or 1e-12 of
+        what the column varies in all (a column centred on its unit means before it came here has means of that kind),
+        whichever is larger.
     """
-    return np.asarray(4.0 * EPS * np.sqrt(moments.rows) * moments.magnitude / moments.scale)
+    stored = 4.0 * EPS * np.sqrt(moments.rows) * moments.magnitude / moments.scale
+    weights = moments.sizes.astype(float)
+    means = (weights[:, None, None] * moments.between[:, :, 1:] ** 2).sum(axis=(0, 1))
+    return np.asarray(np.maximum(stored, 1e-12 * np.sqrt((moments.within**2).sum(axis=0) + means)))
 
 
 def span_of(factor: FloatArray, floor: FloatArray, relative: float = 1e-12) -> Span:

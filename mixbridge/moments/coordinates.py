@@ -177,7 +177,7 @@ def refuse_collinear(model: ModelCoordinates, span: Span) -> None:
     """
     if not span.dependencies:
         return
-    null = model.to_model @ span.null
+    null = np.where(touched(model, span), model.to_model @ span.null, 0.0)
     lines = [
         dependency_text(dependency.column, null[:, at], model.names, model.typical)
         for at, dependency in enumerate(span.dependencies)

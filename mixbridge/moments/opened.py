@@ -8,6 +8,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
+from scipy.linalg.blas import dgemm
 
 try:  # scipy's compiled scatter-add; a public call would allocate all sums anew for each block
     from scipy.sparse._sparsetools import csc_matvecs
@@ -28,6 +29,10 @@ Block = tuple[IntArray, FloatArray, FloatArray]
 Blocks = Callable[[], Iterable[Block]]
 """Gives the blocks of all rows afresh each time it is called."""
 UNITS_AT_ONCE = 8192
+CACHED = 2**20
+"""Bytes of a table that stays in a processor's own cache."""
+SMALL = 12
+"""Number of columns up to which a general matrix product is faster than one that uses symmetry."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,7 +61,7 @@ class OpenMoments:
     factor : ndarray of shape (k, k) or None
         ``F'F = W`` taken from the rows, where a second pass was made.
     magnitude : ndarray of shape (k,)
-        Largest absolute unit mean of each column, a bound for the rounding of the stored data.
+        Root mean square of each column over all rows; rounding of the stored data is relative to it.
     """
 
     columns: tuple[str, ...]
@@ -70,9 +75,10 @@ class OpenMoments:
 
     @property
     def magnitude(self) -> FloatArray:
-        """Largest absolute unit mean per column."""
-        low, high = self.means.min(axis=0), self.means.max(axis=0)
-        return np.asarray(np.maximum(np.abs(low + self.shift), np.abs(high + self.shift)))
+        """Root mean square of each column over all rows, in the units of z."""
+        levels = self.means + self.shift
+        squares = np.einsum("i,ij,ij->j", self.counts.astype(float), levels, levels)
+        return np.asarray(np.sqrt((squares + np.diag(self.within)) / self.rows))
 
     @property
     def rows(self) -> int:
@@ -101,6 +107,10 @@ class OpenMoments:
         first, second = self.counts[at], other.counts[shared]
         total = first + second
         gap = moved[shared] - self.means[at]
+        # a column constant within units stays so: its two means differ by the rounding of the shifts only
+        fixed = (np.diag(self.within) == 0.0) & (np.diag(other.within) == 0.0)
+        reach = np.abs(self.means[at]) + np.abs(self.shift) + np.abs(other.shift)
+        gap[fixed & (np.abs(gap) <= 4.0 * np.finfo(float).eps * reach)] = 0.0
         extra = gap * np.sqrt(first * (second / total))[:, None]
         counts[at] = total
         means[at] += gap * (second / total)[:, None]
@@ -162,34 +172,34 @@ def gather(blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index) ->
     n_units, p = len(keys), len(columns) - 1
     # design and outcome apart: every step then runs over contiguous memory, without a copy of the rows
     anchors, anchors_y = np.zeros((n_units, p)), np.zeros(n_units)
-    sums, sums_y = np.zeros((n_units, p)), np.zeros((n_units, 1))
-    counts = np.zeros(n_units, dtype=np.int64)
+    sums, sums_y = np.zeros((n_units, p)), np.zeros((n_units, 2))  # of the outcome and of ones
     unseen = np.ones(n_units, dtype=bool)
     waiting = n_units > 0
     total = np.zeros((p + 1, p + 1))
-    buffer, buffer_y = np.empty((0, p)), np.empty(0)
+    buffer, buffer_y = np.empty((0, p)), np.empty((0, 2))
     for codes, x, y in blocks:
         size = codes.size
-        if buffer_y.size < size:
-            buffer, buffer_y = np.empty((size, p)), np.empty(size)
+        if buffer_y.shape[0] < size:
+            buffer, buffer_y = np.empty((size, p)), np.ones((size, 2))
         if waiting:
             # backwards, so that the first row of a unit is written last
             new = np.flatnonzero(np.take(unseen, codes, mode="clip"))[::-1]
             if new.size:
                 units = codes[new]
-                anchors[units], anchors_y[units] = x[new], y[new]
+                anchors[units], anchors_y[units] = np.take(x, new, axis=0), y[new]
                 unseen[units] = False
                 waiting = bool(unseen.any())
-        d, d_y = buffer[:size], buffer_y[:size]
+        d, tail = buffer[:size], buffer_y[:size]
         np.subtract(x, np.take(anchors, codes, axis=0, out=d, mode="clip"), out=d)
-        np.subtract(y, np.take(anchors_y, codes, out=d_y, mode="clip"), out=d_y)
-        total[:p, :p] += d.T @ d
+        d_y = y - np.take(anchors_y, codes, mode="clip")
+        tail[:, 0] = d_y
+        total[:p, :p] += _products(d)
         total[:p, p] += d_y @ d
         total[p, p] += d_y @ d_y
         add_by_unit(sums, codes, d)
-        add_by_unit(sums_y, codes, d_y[:, None])
-        np.add.at(counts, codes, 1)
+        add_by_unit(sums_y, codes, tail)
     total[p, :p] = total[:p, p]
+    counts = sums_y[:, 1].astype(np.int64)
     if waiting:
         seen = ~unseen
         keys, counts = keys[seen], counts[seen]
@@ -204,7 +214,7 @@ def gather(blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index) ->
     within = total.copy()
     for start in range(0, counts.size, UNITS_AT_ONCE):
         part = slice(start, start + UNITS_AT_ONCE)
-        dsum = np.column_stack([sums[part], sums_y[part]])
+        dsum = np.column_stack([sums[part], sums_y[part, 0]])
         dbar = dsum / counts[part, None]
         within -= dsum.T @ dbar
         means[part, :p], means[part, p] = anchors[part], anchors_y[part]
@@ -258,6 +268,10 @@ def add_by_unit(sums: FloatArray, codes: IntArray, rows: FloatArray) -> None:
     n_units, k = sums.shape
     size = codes.size
     if COMPILED:
+        if sums.nbytes > CACHED:
+            # Reads do not wait for each other as additions do: touch the lines that the additions will need.
+            lines = np.linspace(0, k - 1, -(-k // 8)).astype(codes.dtype)
+            np.take(sums.ravel(), codes[:, None] * k + lines, mode="clip")
         csc_matvecs(
             n_units,
             size,
@@ -271,6 +285,13 @@ def add_by_unit(sums: FloatArray, codes: IntArray, rows: FloatArray) -> None:
         return
     for j in range(k):
         sums[:, j] += np.bincount(codes, weights=rows[:, j], minlength=n_units)
+
+
+def _products(rows: FloatArray) -> FloatArray:
+    """Return ``rows'rows``."""
+    if rows.shape[1] < SMALL:
+        return np.asarray(dgemm(1.0, rows.T, rows.T, trans_b=True))
+    return rows.T @ rows
 
 
 def _refuse_non_finite(total: FloatArray, finite: NDArray[np.bool_], columns: tuple[str, ...]) -> None:

@@ -29,6 +29,7 @@ FloatArray = NDArray[np.float64]
 EPS = float(np.finfo(float).eps)
 ROUNDING = 32.0
 MAX_ROUNDS = 60
+MAX_EVALUATIONS = 20_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -142,6 +143,9 @@ def certify(profile: Profile, within_residual: float, limit: float) -> Certifica
         a, b = a[~narrow], b[~narrow]
         if a.size == 0:
             break
+        if evaluations + a.size > MAX_EVALUATIONS:
+            unresolved += list(zip(a.tolist(), b.tolist(), strict=True))
+            break
         middle = np.where(a > 0.0, np.sqrt(a * b), b / 16.0)
         seen = _join(seen, profile.values(middle))
         evaluations += middle.size
@@ -166,9 +170,9 @@ def certify(profile: Profile, within_residual: float, limit: float) -> Certifica
     )
     return Certificate(
         kind=profile.kind,
-        psi=best[0],
+        psi=float(best[0]),
         epsilon=epsilon,
-        stationary=tuple(StationaryPoint(psi, deviance - best[1], kind) for psi, deviance, kind in roots),
+        stationary=tuple(StationaryPoint(float(psi), float(deviance - best[1]), kind) for psi, deviance, kind in roots),
         slope_at_zero=float(slope[0]),
         excluded=excluded,
         unresolved=tuple(unresolved),

@@ -268,11 +268,12 @@ def _flat(curve: Curve, route: Kind) -> tuple[str, str] | None:
         used = f"N = {curve.units} units for K_c = {curve.rank_constant} unit-constant directions"
         return "likelihood flat", f"{used}: nothing is left between units"
     if curve.df_within < 1:
-        kind = "likelihood flat" if route == "reml" else "likelihood unbounded"
-        return kind, (
-            f"n - N - K_w = {curve.df_within}: the within regression leaves no error, "
-            "the likelihood has no maximum at a finite ratio"
-        )
+        where = f"n - N - K_w = {curve.df_within}: the within regression leaves no error"
+        if route == "ml":
+            return "likelihood unbounded", f"{where}, and the likelihood grows without bound as the ratio grows"
+        if len(curve.sizes) == 1:
+            return "likelihood flat", f"{where}, and with one unit size the restricted likelihood is flat"
+        raise NotEstimableError(f"{where}, so nothing bounds the restricted likelihood from above")
     if not curve.within_residual > 0.0:
         return (
             "likelihood unbounded",
