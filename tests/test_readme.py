@@ -8,6 +8,7 @@ from pathlib import Path
 import pytest
 
 import mixbridge
+import renew
 from mixbridge import cli, demo
 
 TEXT = (Path(__file__).parents[1] / "README.md").read_text(encoding="utf-8")
@@ -34,6 +35,11 @@ def test_the_script_runs_and_has_ten_lines(capsys):
     assert isinstance(study, mixbridge.Study)
     assert str(study) in shown
     assert str(study.ledger) in shown
+
+
+def test_the_screen_is_the_one_that_is_printed():
+    assert renew.renewed(TEXT) == TEXT
+    assert blocks("text") == [renew.screen()]
 
 
 @pytest.mark.usefixtures("honey")
