@@ -62,6 +62,22 @@ class HypothesisResult:
     scaling: float
     notes: tuple[str, ...]
 
+    def __str__(self) -> str:
+        """Return the test in words and numbers."""
+        law = (
+            f"F({self.df1}, {self.df2:.6g})"
+            if np.isfinite(self.df2)
+            else f"chi-square({self.df1}) / {self.df1}"
+        )
+        scaled = f", scaled by {self.scaling:.4g}" if self.scaling != 1.0 else ""
+        lines = [
+            f"{self.text}   [{self.route}, covariance {self.covariance}, reference {self.rule}]",
+            f"  F = {self.statistic:.6g} against {law}{scaled}: p = {self.p_value:.4g}",
+        ]
+        for estimate, error in zip(self.estimate, self.standard_error, strict=True):
+            lines.append(f"  left minus right: {estimate:.6g} (standard error {error:.4g})")
+        return "\n".join([*lines, *(f"  note: {note}" for note in self.notes)])
+
 
 def test_hypothesis(  # the name is the user's word; no test of this project is collected from here
     curve: Curve,

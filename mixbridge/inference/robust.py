@@ -294,7 +294,8 @@ def _refuse_undetermined(terms: tuple[str, ...], regression: Regression, weights
 
 def _notes(products: UnitProducts, regression: Regression, multiplier: str, factor: float) -> tuple[str, ...]:
     units, rank = products.units, regression.rank
-    notes: tuple[str, ...] = (f"multiplier {multiplier} = {MULTIPLIERS[multiplier][0]} = {factor:.6g}",)
+    named = f"multiplier {multiplier} = {MULTIPLIERS[multiplier][0]} = {factor:.6g}"
+    notes: tuple[str, ...] = ("no multiplier" if multiplier == "none" else named,)
     if regression.correlated:
         notes += ("the variance ratio counts as known",)
     if regression.side == "within":

@@ -196,3 +196,24 @@ class Fit:
             f"<Fit {self.route}: {self.status}; unit variance {self.unit_variance:.6g}, "
             f"idiosyncratic variance {self.idiosyncratic_variance:.6g}, ratio {self.ratio:.6g}>"
         )
+
+    def __str__(self) -> str:
+        """Return coefficients, components, conventions that differ from the defaults, notes and certificate as text."""
+        table = pd.DataFrame({"estimate": self.coefficients, "standard error": self.standard_errors})
+        lines = [f"{self.route}: {self.status}; {self.rows} rows, {self.units} units"]
+        lines += [
+            f"  {line}" for line in table.to_string(float_format=lambda value: f"{value:.6g}").splitlines()
+        ]
+        if np.isfinite(self.idiosyncratic_variance):
+            lines.append(
+                f"  unit variance {self.unit_variance_raw:.6g}, idiosyncratic variance {self.idiosyncratic_variance:.6g}, "
+                f"ratio {self.ratio:.6g}, ICC {self.icc:.6g}"
+            )
+        chosen = ", ".join(
+            f"{name}={value}" for name, value in self.conventions.items() if value != "default"
+        )
+        lines.append(f"  conventions: {chosen or 'none'}")
+        lines += [f"  {term}: {reason}" for term, reason in self.not_estimable.items() if self.estimated]
+        lines += [f"  note: {note}" for note in self.notes]
+        lines += [f"  {line}" for line in (self.certificate.lines() if self.certificate is not None else [])]
+        return "\n".join(lines)
