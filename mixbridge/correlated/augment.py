@@ -128,7 +128,9 @@ def augment(
     if not varying:
         raise IdentificationError("no column varies within units: there are no unit means to add.")
     chosen = (
-        varying if means_of is None else chosen_columns("means_of", means_of, varying, panel.terms, panel.names)
+        varying
+        if means_of is None
+        else chosen_columns("means_of", means_of, varying, panel.terms, panel.names)
     )
     wide = with_unit_means(closed, chosen)
     left_out = tuple(name for name in varying if name not in chosen)
@@ -172,9 +174,9 @@ def widen_products(products: UnitProducts, augmented: Augmented) -> UnitProducts
     if (products.design, products.constant, products.outcome) != expected:
         raise DataError("the unit products have other columns than the panel that the means were added to.")
     picks = [products.columns.index(column) for column in augmented.source.values()]
-    means = (products.means[:, picks] * products.scale[picks] + products.shift[picks] - moments.shift[p:-1]) / (
-        moments.scale[p:-1]
-    )
+    means = (
+        products.means[:, picks] * products.scale[picks] + products.shift[picks] - moments.shift[p:-1]
+    ) / (moments.scale[p:-1])
     frame = np.eye(p + q + 1)
     old = np.r_[np.arange(p), p + q]
     frame[np.ix_(old, old)] = products.frame
@@ -253,14 +255,15 @@ def _statement(
         parts.append(f"Not added, being combinations of other columns: {'; '.join(dropped.values())}.")
     if left_out:
         parts.append(
-            f"Partial form, without the means of {', '.join(left_out)}: it assumes that, given the columns in the "
-            f"model, the {unit} effect is unrelated to these means. Where that is false all slopes can be off, also "
-            "those of columns whose means were added; they need not equal the within slopes."
+            f"Partial form, without the means of {', '.join(left_out)}: it assumes that, given the columns "
+            f"in the model, the {unit} effect is unrelated to these means. Where that is false all slopes "
+            "can be off, also those of columns whose means were added; they need not equal the within slopes."
         )
     else:
         parts.append(
-            f"The {unit} effect may be related to all columns through their unit means. Slopes of columns that vary "
-            "within units then equal the within slopes at every variance ratio. Unit means do not cure confounding that "
-            "varies over time, reverse causality or measurement error, and contextual coefficients are not causal."
+            f"The {unit} effect may be related to all columns through their unit means. Slopes of columns "
+            "that vary within units then equal the within slopes at every variance ratio. Unit means do not "
+            "cure confounding that varies over time, reverse causality or measurement error, and contextual "
+            "coefficients are not causal."
         )
     return " ".join(parts)

@@ -48,7 +48,9 @@ def chosen_columns(
         meant = [name] if name in columns else list(design[known[name]]) if name in known else []
         usable = [column for column in meant if column in columns]
         if not usable:
-            options = dict.fromkeys([*columns, *(t for t, at in known.items() if set(design[at]) & set(columns))])
+            options = dict.fromkeys(
+                [*columns, *(t for t, at in known.items() if set(design[at]) & set(columns))]
+            )
             raise OptionError.not_among(option, name, options)
         found.update(usable)
     return tuple(column for column in columns if column in found)

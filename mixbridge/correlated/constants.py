@@ -116,7 +116,7 @@ def unit_constant_table(
                     change,
                     change / before[1],
                     left,
-                    _meaning(augmented, key, term, before, after, left),
+                    _meaning(augmented, key, term, before=before, after=after, left=left),
                 ]
             )
     return pd.DataFrame(rows, columns=COLUMNS)
@@ -140,8 +140,8 @@ def _identified(key: str, unit: str, fit: Fit, term: str) -> str:
     if key == "between":
         return f"variation between {unit} means, net of the means of the other columns"
     return (
-        f"variation between {unit} units, net of the other columns at their slopes in this fit, which mix within and "
-        "between variation"
+        f"variation between {unit} units, net of the other columns at their slopes in this fit, which mix "
+        "within and between variation"
     )
 
 
@@ -158,6 +158,7 @@ def _meaning(
     augmented: Augmented,
     key: str,
     term: str,
+    *,
     before: tuple[float, float],
     after: tuple[float, float],
     left: float,
@@ -165,10 +166,15 @@ def _meaning(
     unit = augmented.panel.unit_name
     if not (np.isfinite(before[0]) and np.isfinite(after[0])):
         return (
-            f"{term} does not change within a {unit}; {key} removes all differences between units and with them every "
-            f"trace of {term}. Unit means do not bring it back."
+            f"{term} does not change within units; {key} removes all differences between units and with them "
+            f"every trace of {term}. Unit means do not bring it back."
             if key in ("within", "first_difference")
             else f"{key} gives no coefficient of {term}."
+        )
+    if key == "between":
+        return (
+            f"A regression on unit means compares averages already: unit means change nothing. {term} must "
+            f"be unrelated to the {unit} effect, given the averages of the other columns."
         )
     shared = 100.0 * (1.0 - left)
     others = ", ".join(augmented.source.values())
@@ -176,10 +182,11 @@ def _meaning(
     move = after[0] - before[0]
     in_se = f", {abs(move) / before[1]:.2g} standard errors" if before[1] > 0.0 else ""
     return (
-        f"Without unit means, {before[0]:.4g} (standard error {before[1]:.3g}) compares rows of units that differ in {term} "
-        f"and have {same}; with them, {after[0]:.4g} ({after[1]:.3g}) compares units that have the same averages of "
-        f"{others} too: a move of {move:.3g}{in_se}. The averages share {shared:.3g}% of what {term} varies between units "
-        f"beside the other unit-constant columns; {100.0 * left:.3g}% is left to identify it. Unit means free the slopes "
-        f"of columns that vary within units, not {term}: it must still be unrelated to what is left of the {unit} effect. "
-        f"If {term} itself moves these averages, that part of its effect is not in the coefficient with unit means."
+        f"Without unit means, {before[0]:.4g} (standard error {before[1]:.3g}) compares rows of units that "
+        f"differ in {term} and have {same}; with them, {after[0]:.4g} ({after[1]:.3g}) compares units that "
+        f"have the same averages of {others} too: a move of {move:.3g}{in_se}. The averages share "
+        f"{shared:.3g}% of what {term} varies between units beside the other unit-constant columns; "
+        f"{100.0 * left:.3g}% is left to identify it. Unit means free the slopes of columns that vary within "
+        f"units, not {term}: it must still be unrelated to what is left of the {unit} effect. If {term} "
+        "itself moves these averages, that part of its effect is not in the coefficient with unit means."
     )

@@ -1,8 +1,8 @@
 """One fit with unit means, in its two coordinates: within, contextual and between coefficients, jointly.
 
-With ``x beta + xbar delta`` (raw plus means) or ``(x - xbar) beta + xbar (beta + delta)`` (centred plus means)
-the fitted values are the same: ``beta`` is the within, ``delta`` the contextual and ``beta + delta`` the between
-coefficient of a column (Snijders & Bosker 2012, sec. 4.6, place from memory). One covariance of
+With ``x beta + xbar delta`` (raw plus means) or ``(x - xbar) beta + xbar (beta + delta)`` (centred plus
+means) the fitted values are the same: ``beta`` is the within, ``delta`` the contextual and ``beta + delta``
+the between coefficient of a column (Snijders & Bosker 2012, sec. 4.6, place from memory). One covariance of
 ``(beta, delta)`` gives that of all three.
 """
 
@@ -40,8 +40,9 @@ class Coordinates:
     terms : tuple of str
         Given columns that vary within units.
     rows : ndarray of shape (3 m, p)
-        Combinations of the coefficients of the fit: all within, then all between, then all contextual. For the
-        route `between` they refer to the fit without unit means, where the between coefficient is one of them.
+        Combinations of the coefficients of the fit: all within, then all between, then all contextual. For
+        the route `between` they refer to the fit without unit means, where the between coefficient is one of
+        them.
     estimates : ndarray of shape (3 m,)
         NaN where not determined.
     covariance_array : ndarray of shape (3 m, 3 m)
@@ -123,8 +124,9 @@ def coordinates(
     fit : Fit
         Any route on the latter.
     rule : str, optional
-        Key of `mixbridge.inference.references.RULES`. Default: that of the ledger; with a robust covariance its
-        own Satterthwaite rule where it has one, else ``t_units``. ``kenward_roger`` brings its own covariance.
+        Key of `mixbridge.inference.references.RULES`. Default: that of the ledger; with a robust covariance
+        its own Satterthwaite rule where it has one, else ``t_units``. ``kenward_roger`` brings its own
+        covariance.
     robust : Robust, optional
         A covariance from elsewhere in place of the model-based one.
     covariance : str
@@ -158,7 +160,9 @@ def coordinates(
     used = np.flatnonzero(known)
     name, chosen = "model", rule
     if used.size:
-        inside, df[used], name, chosen = _law(curve, fit, rows[used], rule, robust, covariance)
+        inside, df[used], name, chosen = _law(
+            curve, fit, rows[used], rule=rule, robust=robust, covariance=covariance
+        )
         joint[np.ix_(used, used)] = inside
     return Coordinates(fit.route, name, terms, rows, estimates, joint, df, chosen or "normal", reasons)
 
@@ -192,7 +196,7 @@ def _combinations(augmented: Augmented, fit: Fit) -> tuple[FloatArray, NDArray[n
 
 
 def _law(
-    curve: Curve, fit: Fit, rows: FloatArray, rule: str | None, robust: Robust | None, covariance: str
+    curve: Curve, fit: Fit, rows: FloatArray, *, rule: str | None, robust: Robust | None, covariance: str
 ) -> tuple[FloatArray, FloatArray, str, str]:
     """Return covariance and degrees of freedom of some combinations, and the names of both."""
     if robust is not None:
@@ -214,7 +218,11 @@ def _law(
         return inside, np.array([one.df for one in chosen]), covariance, chosen[0].name
     if rule == "kenward_roger":
         adjusted = kenward_roger(curve, fit)
-        half = np.linalg.cholesky(np.eye(adjusted.bend.shape[0]) + 2.0 * adjusted.bend).T @ adjusted.root.T @ rows.T
+        half = (
+            np.linalg.cholesky(np.eye(adjusted.bend.shape[0]) + 2.0 * adjusted.bend).T
+            @ adjusted.root.T
+            @ rows.T
+        )
         return adjusted.scale * (half.T @ half), adjusted.degrees(rows), "kenward_roger", rule
     chosen = pick_reference(curve, fit, rows, rule)
     half = np.sqrt(fit.scale) * (rows @ fit.root)

@@ -128,8 +128,9 @@ class Mundlak:
         DataFrame
             ``tested, columns, statistic, df1, df2, p_value, wald, contrast, note``: an F statistic with its
             degrees of freedom; ``wald`` without scaling, to be set beside ``contrast``, the within - GLS
-            contrast of the panel without means at the same ratio and idiosyncratic variance. With a model-based
-            covariance and all means these two are one number (Hausman & Taylor 1981; Arellano 1993).
+            contrast of the panel without means at the same ratio and idiosyncratic variance. With a
+            model-based covariance and all means these two are one number (Hausman & Taylor 1981; Arellano
+            1993).
         """
         source, terms = self.augmented.source, self.augmented.panel.terms
         design = self.augmented.panel.names
@@ -141,7 +142,9 @@ class Mundlak:
         rows: list[list[object]] = []
         for name, columns in groups.items():
             joint = name == "all unit means"
-            contrast = self._contrast(fit) if joint and robust is None and not self.augmented.partial else np.nan
+            contrast = (
+                self._contrast(fit) if joint and robust is None and not self.augmented.partial else np.nan
+            )
             try:
                 found = self.test_means(fit, columns, rule, robust, covariance)
             except IdentificationError as reason:

@@ -1,10 +1,10 @@
 """Whether the slopes beside their unit means are the within slopes, at several variance ratios.
 
-With the unit mean of every column that varies within units in the model, the column space is closed under unit
-averaging, ``span X = span QX + span PX``. In these coordinates ``X'V_0^-1 X`` is block diagonal at every ψ and
-the within block does not contain ψ (Mundlak 1978). So the ranks decide (`SlopeCertificate.closed`), and the
-numbers check the arithmetic: regression with the means at each ψ against the within regression of the panel
-without them.
+With the unit mean of every column that varies within units in the model, the column space is closed under
+unit averaging, ``span X = span QX + span PX``. In these coordinates ``X'V_0^-1 X`` is block diagonal at
+every ψ and the within block does not contain ψ (Mundlak 1978). So the ranks decide
+(`SlopeCertificate.closed`), and the numbers check the arithmetic: regression with the means at each ψ
+against the within regression of the panel without them.
 """
 
 from __future__ import annotations
@@ -29,9 +29,9 @@ RATIOS = (0.0, 0.01, 0.1, 1.0, 10.0, 1e3, 1e6, 1e9)
 """Ratios at which the slopes are compared: pooled, and up to where unit means have lost all weight."""
 
 REASON = (
-    "32 (columns + 1) x 2.2e-16 x condition x the largest change of the coefficient per unit length of the outcome x "
-    "length of the outcome, for both regressions{stored}; relative to the coefficient or its standard error, whichever "
-    "is larger"
+    "32 (columns + 1) x 2.2e-16 x condition x the largest change of the coefficient per unit length of the "
+    "outcome x length of the outcome, for both regressions{stored}; relative to the coefficient or its "
+    "standard error, whichever is larger"
 )
 
 
@@ -108,7 +108,9 @@ def certify_slopes(
     """
     within = fit_route(raw, "within", {}, "rows are not at hand")
     closed = wide.rank_between + wide.rank_within == wide.rank
-    free = [j for j, name in enumerate(raw.names) if name in augmented.varying and np.isfinite(within.beta[j])]
+    free = [
+        j for j, name in enumerate(raw.names) if name in augmented.varying and np.isfinite(within.beta[j])
+    ]
     lost = tuple(
         (name, within.not_estimable.get(name, within.status))
         for j, name in enumerate(raw.names)
@@ -123,7 +125,9 @@ def certify_slopes(
         else ""
     )
     if not free:
-        return SlopeCertificate(False, closed, "no slope is determined by within variation.", (), lost, reason)
+        return SlopeCertificate(
+            False, closed, "no slope is determined by within variation.", (), lost, reason
+        )
     right = within.beta[free]
     error = np.sqrt(np.maximum(np.diag(within.covariance_array)[free], 0.0))
     size = np.fmax(np.abs(right), error)
@@ -156,7 +160,9 @@ def _cause(
     ratio, term, left, right, difference, tolerance = max(broken, key=lambda row: row[4] / row[5])
     worst = f"largest for {term} at ratio {ratio:g}: {left:.10g} against {right:.10g}"
     if augmented.left_out:
-        return f"the unit means of {', '.join(augmented.left_out)} are not in the model (partial form); {worst}."
+        return (
+            f"the unit means of {', '.join(augmented.left_out)} are not in the model (partial form); {worst}."
+        )
     if not closed:
         return (
             f"the columns are not closed under unit averaging: rank PX + rank QX = {wide.rank_between} + "
@@ -164,8 +170,8 @@ def _cause(
         )
     near = f" ({wide.near_dependency})" if wide.near_dependency else ""
     return (
-        f"rounding beyond its bound: condition number {wide.condition:.3g}{near}, relative difference {difference:.3g} "
-        f"with tolerance {tolerance:.3g}; {worst}."
+        f"rounding beyond its bound: condition number {wide.condition:.3g}{near}, relative difference "
+        f"{difference:.3g} with tolerance {tolerance:.3g}; {worst}."
     )
 
 
