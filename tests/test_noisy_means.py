@@ -220,3 +220,19 @@ def test_period_indicators_carry_no_noise():
     expected = float(rest @ rest) / df
     within = found.reliability.set_index("column").loc["forage", "within_variance"].iloc[0]
     np.testing.assert_allclose(within, expected, rtol=ROUNDING)
+
+
+def test_offsets_and_units_move_the_constant_alone():
+    """Covariates around a million, outcome in other units: an offset of 1e6 costs six of sixteen digits, no more."""
+    frame = two_covariates(np.random.default_rng(5), 60)
+    moved = frame.assign(x1=frame["x1"] + 1e6, x2=64.0 * frame["x2"] - 1e6, y=frame["y"] * 2.0**-26)
+    tables = []
+    for data in (frame, moved):
+        _, wide, fit = prepared("y ~ x1 + x2 + z", data)
+        tables.append(noisy_means(wide, fit).correction)
+    slopes = tables[0]["term"] != "Intercept"
+    factor = 2.0**26 * np.where(tables[0]["term"] == "x2", 64.0, 1.0)[slopes]
+    for column in ("corrected", "corrected_se"):
+        np.testing.assert_allclose(
+            tables[1].loc[slopes, column] * factor, tables[0].loc[slopes, column], rtol=1e-8
+        )

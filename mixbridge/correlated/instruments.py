@@ -9,11 +9,10 @@ is estimated in four steps (Hausman & Taylor 1981):
 
 1. within regression: ``b_w`` and ``sigma_u^2 = RSS_w/(n - N - K_w)``;
 2. unit remainders ``d_i = ybar_i - xbar_i'b_w`` on Z by two-stage least squares with ``x1`` and ``z1`` as
-instruments; 3. with its residuals r_i, ``sigma_a^2 = mean(r_i^2) - sigma_u^2 mean(1/T_i)``: consistent,
-without a correction for
-   the coefficients of step 2;
-4. two-stage least squares on quasi-demeaned rows, ``theta_i = 1 - (1 + T_i psi)^(-1/2)``, with the
-instruments
+   instruments;
+3. with its residuals r_i, ``sigma_a^2 = mean(r_i^2) - sigma_u^2 mean(1/T_i)``: consistent, without a correction
+   for the coefficients of step 2;
+4. two-stage least squares on quasi-demeaned rows, ``theta_i = 1 - (1 + T_i psi)^(-1/2)``, with the instruments
 
        Qx (all columns),   (1 - theta_i) x1bar_i,   (1 - theta_i) z1_i
 

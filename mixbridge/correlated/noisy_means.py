@@ -3,10 +3,9 @@
 Let ``xbar_i = xi_i + vbar_i`` with ``Var(vbar_i) = S_w/T_i``, and let the outcome depend on the values
 ``xi_i``:
 
-    ybar_i = xbar_i'b_w + xi_i'd + z_i'g + alpha_i + ubar_i        (d contextual, b_w + d between
-    coefficients)
+    ybar_i = xbar_i'b_w + xi_i'd + z_i'g + alpha_i + ubar_i
 
-Regression on ``xbar_i`` in place of ``xi_i`` attenuates d. With weights ``w_i = T_i/(1 + T_i psi)``, Z the
+with contextual coefficients d and between coefficients ``b_w + d``. Regression on ``xbar_i`` in place of ``xi_i`` attenuates d. With weights ``w_i = T_i/(1 + T_i psi)``, Z the
 unit-constant columns with the means of columns that are not sampled, leverages ``h_i`` of the weighted
 regression on Z, and S the weighted products of ``xbar`` net of Z,
 
@@ -16,8 +15,8 @@ regression on Z, and S the weighted products of ``xbar`` net of Z,
 covariate, equal sizes and no further columns this is ``d_hat`` over the reliability ``tau^2/(tau^2 +
 s^2/T)`` with both variances from the analysis of variance (Lüdtke et al. 2008; Grilli & Rampichini 2011,
 where the correction is for equal sizes; the form with unequal sizes and weights is the errors-in-variables
-estimator of moments, Fuller 1987, and its use here ours). Coefficients of Z become ``g_hat - M_zz^-1 M_zx (d
-- d_hat)``.
+estimator of moments, Fuller 1987, and its use here ours). Coefficients of Z
+become ``g_hat - M_zz^-1 M_zx (d - d_hat)``.
 """
 
 from __future__ import annotations
