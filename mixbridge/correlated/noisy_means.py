@@ -5,9 +5,10 @@ Let ``xbar_i = xi_i + vbar_i`` with ``Var(vbar_i) = S_w/T_i``, and let the outco
 
     ybar_i = xbar_i'b_w + xi_i'd + z_i'g + alpha_i + ubar_i
 
-with contextual coefficients d and between coefficients ``b_w + d``. Regression on ``xbar_i`` in place of ``xi_i`` attenuates d. With weights ``w_i = T_i/(1 + T_i psi)``, Z the
-unit-constant columns with the means of columns that are not sampled, leverages ``h_i`` of the weighted
-regression on Z, and S the weighted products of ``xbar`` net of Z,
+with contextual coefficients d and between coefficients ``b_w + d``. Regression on ``xbar_i`` in place of
+``xi_i`` attenuates d. With weights ``w_i = T_i/(1 + T_i psi)``, Z the unit-constant columns with the means of
+columns that are not sampled, leverages ``h_i`` of the weighted regression on Z, and S the weighted products of
+``xbar`` net of Z,
 
     E S = S_xi + N,     N = S_w sum_i w_i (1 - h_i) (1/T_i - 1/M),      d = (S - N)^-1 S d_hat
 
