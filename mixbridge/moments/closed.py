@@ -315,9 +315,11 @@ def close(opened: OpenMoments) -> Moments:
     DataError
         If the outcome has the same value in every row.
     """
-    low, high = opened.means.min(axis=0), opened.means.max(axis=0)
-    level = (high == low) & (np.diag(opened.within) == 0.0)
-    candidates = np.flatnonzero(level[:-1] & (low + opened.shift != 0.0)[:-1])
+    first = opened.means[0]
+    level = np.diag(opened.within) == 0.0
+    for j in np.flatnonzero(level):
+        level[j] = (opened.means[:, j] == first[j]).all()
+    candidates = np.flatnonzero(level[:-1] & (first + opened.shift != 0.0)[:-1])
     constant = int(candidates[0]) if candidates.size else None
     if level[-1]:
         raise DataError(
@@ -357,7 +359,7 @@ def close(opened: OpenMoments) -> Moments:
             outcome=columns[-1],
             shift=shift[keep],
             scale=scale,
-            magnitude=opened.magnitude[keep],
+            magnitude=np.hypot(spread, shift[keep]),
             sizes=sizes,
             counts=counts,
             within=factor[:, keep] / scale,

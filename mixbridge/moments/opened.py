@@ -29,10 +29,10 @@ Block = tuple[IntArray, FloatArray, FloatArray]
 Blocks = Callable[[], Iterable[Block]]
 """Gives the blocks of all rows afresh each time it is called."""
 UNITS_AT_ONCE = 8192
-CACHED = 2**20
-"""Bytes of a table that stays in a processor's own cache."""
+CACHED = 2**22
+"""Bytes of a table that may stay in a processor's own cache."""
 SMALL = 12
-"""Number of columns up to which a general matrix product is faster than one that uses symmetry."""
+"""Number of columns below which the library's own call is faster than the operator, which uses symmetry."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -172,59 +172,62 @@ def gather(blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index) ->
     n_units, p = len(keys), len(columns) - 1
     # design and outcome apart: every step then runs over contiguous memory, without a copy of the rows
     anchors, anchors_y = np.zeros((n_units, p)), np.zeros(n_units)
-    sums, sums_y = np.zeros((n_units, p)), np.zeros((n_units, 2))  # of the outcome and of ones
+    sums, sums_y = np.zeros((n_units, p)), np.zeros(n_units)
+    counts = np.zeros(n_units, dtype=np.int64)
     unseen = np.ones(n_units, dtype=bool)
     waiting = n_units > 0
     total = np.zeros((p + 1, p + 1))
-    buffer, buffer_y = np.empty((0, p)), np.empty((0, 2))
+    buffer = np.empty((0, p))
     for codes, x, y in blocks:
-        size = codes.size
-        if buffer_y.shape[0] < size:
-            buffer, buffer_y = np.empty((size, p)), np.ones((size, 2))
+        if buffer.shape[0] < codes.size:
+            buffer = np.empty((codes.size, p))
         if waiting:
+            fresh = np.take(unseen, codes, mode="clip")
+            fresh[1:] &= codes[1:] != codes[:-1]
             # backwards, so that the first row of a unit is written last
-            new = np.flatnonzero(np.take(unseen, codes, mode="clip"))[::-1]
+            new = np.flatnonzero(fresh)[::-1]
             if new.size:
                 units = codes[new]
                 anchors[units], anchors_y[units] = np.take(x, new, axis=0), y[new]
                 unseen[units] = False
                 waiting = bool(unseen.any())
-        d, tail = buffer[:size], buffer_y[:size]
+        d = buffer[: codes.size]
         np.subtract(x, np.take(anchors, codes, axis=0, out=d, mode="clip"), out=d)
         d_y = y - np.take(anchors_y, codes, mode="clip")
-        tail[:, 0] = d_y
-        total[:p, :p] += _products(d)
-        total[:p, p] += d_y @ d
+        total[:p, :p] += _products(d, d)
+        total[:p, p:] += _products(d, d_y[:, None])
         total[p, p] += d_y @ d_y
         add_by_unit(sums, codes, d)
-        add_by_unit(sums_y, codes, tail)
+        np.add.at(sums_y, codes, d_y)
+        np.add.at(counts, codes, 1)
     total[p, :p] = total[:p, p]
-    counts = sums_y[:, 1].astype(np.int64)
     if waiting:
         seen = ~unseen
         keys, counts = keys[seen], counts[seen]
         anchors, anchors_y, sums, sums_y = anchors[seen], anchors_y[seen], sums[seen], sums_y[seen]
     if counts.size == 0:
         raise DataError("there are no rows to take moments of.")
-    _refuse_non_finite(
-        total, np.append(np.isfinite(anchors).all(axis=0), np.isfinite(anchors_y).all()), columns
-    )
+    _refuse_non_finite(total, columns)
     shift = np.append(anchors[0], anchors_y[0])
     means = np.empty((counts.size, p + 1))
     within = total.copy()
     for start in range(0, counts.size, UNITS_AT_ONCE):
         part = slice(start, start + UNITS_AT_ONCE)
-        dsum = np.column_stack([sums[part], sums_y[part, 0]])
+        dsum = np.column_stack([sums[part], sums_y[part]])
         dbar = dsum / counts[part, None]
         within -= dsum.T @ dbar
         means[part, :p], means[part, p] = anchors[part], anchors_y[part]
         means[part] -= shift
         means[part] += dbar
     within = (within + within.T) / 2.0
-    spread, kept = np.diag(total), np.diag(within)
-    loss = np.divide(spread, kept, out=np.ones(p + 1), where=kept > 0.0)
+    return OpenMoments(columns, keys, counts, shift, means, within, _loss(np.diag(total), np.diag(within)))
+
+
+def _loss(spread: FloatArray, kept: FloatArray) -> FloatArray:
+    """Return by how much the subtraction of means may have amplified rounding."""
+    loss = np.divide(spread, kept, out=np.ones(spread.size), where=kept > 0.0)
     loss[(spread > 0.0) & (kept <= 0.0)] = np.inf
-    return OpenMoments(columns, keys, counts, shift, means, within, loss)
+    return loss
 
 
 def within_factor(blocks: Iterable[Block], opened: OpenMoments) -> FloatArray:
@@ -268,10 +271,11 @@ def add_by_unit(sums: FloatArray, codes: IntArray, rows: FloatArray) -> None:
     n_units, k = sums.shape
     size = codes.size
     if COMPILED:
-        if sums.nbytes > CACHED:
+        if sums.nbytes > CACHED and (codes[1:] < codes[:-1]).any():
             # Reads do not wait for each other as additions do: touch the lines that the additions will need.
-            lines = np.linspace(0, k - 1, -(-k // 8)).astype(codes.dtype)
-            np.take(sums.ravel(), codes[:, None] * k + lines, mode="clip")
+            start, flat = codes * k, sums.ravel()
+            for entry in np.linspace(0, k - 1, -(-k // 8)).astype(int):
+                np.take(flat, start + entry, mode="clip")
         csc_matvecs(
             n_units,
             size,
@@ -287,15 +291,15 @@ def add_by_unit(sums: FloatArray, codes: IntArray, rows: FloatArray) -> None:
         sums[:, j] += np.bincount(codes, weights=rows[:, j], minlength=n_units)
 
 
-def _products(rows: FloatArray) -> FloatArray:
-    """Return ``rows'rows``."""
-    if rows.shape[1] < SMALL:
-        return np.asarray(dgemm(1.0, rows.T, rows.T, trans_b=True))
-    return rows.T @ rows
+def _products(left: FloatArray, right: FloatArray) -> FloatArray:
+    """Return ``left'right``."""
+    if left.shape[1] < SMALL:
+        return np.asarray(dgemm(1.0, left.T, right.T, trans_b=True))
+    return left.T @ right
 
 
-def _refuse_non_finite(total: FloatArray, finite: NDArray[np.bool_], columns: tuple[str, ...]) -> None:
-    bad = ~(np.isfinite(np.diag(total)) & finite)
+def _refuse_non_finite(total: FloatArray, columns: tuple[str, ...]) -> None:
+    bad = ~np.isfinite(np.diag(total))  # a bad value is bad minus its anchor too, itself included
     if bad.any():
         names = ", ".join(repr(columns[j]) for j in np.flatnonzero(bad))
         raise DataError(
