@@ -26,6 +26,12 @@ def _estimable(setting: Setting) -> NDArray[np.intp] | Unmet:
             f"more rows than columns with unit means: {setting.curve.n} rows, {setting.with_means.rank} "
             "columns"
         )
+    curve, wide = setting.curve, setting.with_means.rank
+    if wide < curve.rank_within + curve.rank_between:
+        return Unmet(
+            f"unit means told apart from their columns: rank with means {wide}, rank QX + rank PX = "
+            f"{curve.rank_within + curve.rank_between}"
+        )
     return np.flatnonzero(np.isfinite(setting.fits["within"].beta))
 
 
@@ -42,7 +48,7 @@ def _tolerance(
     stored = ""
     if setting.curve.columns_within > len(setting.source):
         p = setting.plain.rank
-        coefficients = np.abs(wide.beta(solved.slope)[:p])
+        coefficients = (np.abs(wide.beta(solved.slope)) + wide.reach(solved) * np.sqrt(solved.total))[:p]
         tolerance = tolerance + solved.condition * reach * (setting.stored @ coefficients) / wide.unit / size
         stored = " and, a mean being left out as a combination of columns, the rounding of the stored columns"
     reason = (

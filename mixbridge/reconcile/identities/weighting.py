@@ -116,12 +116,16 @@ def _worst(
         return Unmet(NONE)
     found: list[tuple[float, Compared]] = []
     df = setting.curve.n - setting.curve.rank
+    engines = {
+        ratio: setting.engine_condition(ratio)
+        for ratio in {components_ratio(setting.fits[key]) for key in sides}
+    }
     for key, right in sides.items():
         left, solved = setting.fits[key].beta, setting.solved[key]
         total = setting.engine_total(components_ratio(setting.fits[key]))
         size, amplified = setting.plain.bounds(right, solved, df, total)
         more = loss.get(key, 1.0)
-        engine = setting.engine_condition(components_ratio(setting.fits[key]))
+        engine = engines[components_ratio(setting.fits[key])]
         tolerance = multiple(setting.plain.rank) * more * amplified * (1.0 + engine / solved.condition)
         if setting.snapped:
             stored = setting.stored_length(right) / setting.plain.unit
@@ -181,7 +185,7 @@ def _taking(setting: Setting) -> float:
     return float(np.sqrt(setting.curve.n)) * largest_condition
 
 
-def effects_first(plain: Plain, psi: float) -> tuple[FloatArray, float]:
+def effects_first(plain: Plain, pooled: Solved, psi: float) -> tuple[FloatArray, float]:
     """Return predicted unit effects from the mixed-model equations with the fixed part eliminated first.
 
     ``(Z'MZ + I/psi) u = Z'My``, M the residual maker of X. Units of a size enter through the factor of their
@@ -189,7 +193,6 @@ def effects_first(plain: Plain, psi: float) -> tuple[FloatArray, float]:
     among themselves turns their effects alike. Also returned: the length of what the effects take from the pooled fit.
     """
     p = plain.rank
-    pooled = least_squares(plain.stacked(plain.sizes))
     shrink = plain.sizes / (plain.sizes + 1.0 / psi)
     means = plain.between[:, :, :p] @ pooled.root
     left = plain.between @ np.append(-pooled.slope, 1.0)
@@ -217,8 +220,8 @@ def predicted_effects(setting: Setting) -> Compared | Unmet:
         return Unmet("positive unit variance: no route on these rows has one")
     key = "reml" if "reml" in keys else keys[0]
     fit, plain = setting.fits[key], setting.plain
-    psi, solved = components_ratio(fit), setting.solved[key]
-    (right, taken), left = effects_first(plain, psi), _shrunken(plain, fit)
+    psi, solved, pooled = components_ratio(fit), setting.solved[key], plain.at(0.0)
+    (right, taken), left = effects_first(plain, pooled, psi), _shrunken(plain, fit)
     length = float(np.sqrt((right**2).sum()))
     if not length > 0.0:
         return Unmet(f"effects to compare: from the mixed-model equations they have length {length:.3g}")
@@ -227,7 +230,7 @@ def predicted_effects(setting: Setting) -> Compared | Unmet:
     reach = np.sqrt((solved.root**2).sum(axis=1)) * np.sqrt(max(solved.total, setting.engine_total(psi)))
     strength = 1.0 + float(plain.sizes[-1]) * psi
     carried = solved.condition * float(columns[:-1] @ reach)
-    lost = strength * plain.at(0.0).condition * (float(columns[-1]) + taken)
+    lost = strength * pooled.condition * (float(columns[-1]) + taken)
     origins = float(np.abs(plain.origin[:-1]) @ np.abs(fit.beta) + abs(plain.origin[-1])) / scale
     stored = (
         setting.snapped * solved.condition * np.sqrt(strength) * setting.stored_length(fit.beta) / plain.unit
