@@ -54,6 +54,8 @@ class Setting:
         Plain generalised least squares at the components of each random-effects fit, pooled included.
     with_means : Plain
         The same panel with unit means added.
+    wide : mapping of float to Solved
+        Its generalised least squares at ratio 0, one, and that of REML; none where rows are too few.
     source : mapping of str to str
         Column of `with_means` that is a mean -> the column it is the mean of.
     """
@@ -64,6 +66,7 @@ class Setting:
     plain: Plain
     solved: Mapping[str, Solved]
     with_means: Plain
+    wide: Mapping[float, Solved]
     source: Mapping[str, str]
 
     def on_curve(self) -> Iterator[tuple[str, Fit]]:
@@ -145,15 +148,6 @@ class Setting:
         whole = self.curve.within_products[p, p] + weights @ self.curve.between_products[:, p, p]
         return float(whole) * self.curve.unit / self.plain.unit**2
 
-    def focus(self) -> float:
-        """Return the ratio at which the curve is looked at: of `reml`, else of another route, else one."""
-        keys = [
-            key
-            for key in ("reml", *self.solved)
-            if key in self.solved and components_ratio(self.fits[key]) > 0.0
-        ]
-        return components_ratio(self.fits[keys[0]]) if keys else 1.0
-
 
 def components_ratio(fit: Fit) -> float:
     """Return the ratio of the two components that a fit states."""
@@ -202,4 +196,6 @@ def setting_of(
     if with_means is None:
         own = with_unit_means(curve.moments)
         with_means = own.moments, own.source
-    return Setting(curve, usable, rows, plain, solved, plain_of(with_means[0]), with_means[1])
+    means, looked_at = plain_of(with_means[0]), sorted({0.0, 1.0, ratios.get("reml", 1.0)})
+    wide = dict(zip(looked_at, means.at_each(looked_at), strict=True)) if means.rank < curve.n else {}
+    return Setting(curve, usable, rows, plain, solved, means, wide, with_means[1])

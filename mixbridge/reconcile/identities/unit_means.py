@@ -72,8 +72,7 @@ def slopes_with_means(setting: Setting) -> Compared | Unmet:
     if isinstance(free, Unmet):
         return free
     right, found = setting.fits["within"].beta[free], []
-    ratios = sorted({0.0, setting.focus(), 1.0})
-    for psi, solved in zip(ratios, setting.with_means.at_each(ratios), strict=True):
+    for psi, solved in setting.wide.items():
         left = setting.with_means.beta(solved.slope)[free]
         size, tolerance, reason = _tolerance(setting, solved, free)
         at, difference = largest(left, right, size, tolerance)
@@ -112,7 +111,7 @@ def contextual_decomposition(setting: Setting) -> Compared | Unmet:
         fit = setting.fits[key]
         psi = components_ratio(fit)
         full = wide.stacked(wide.sizes / (1.0 + wide.sizes * psi))
-        solved, short = wide.at(psi), setting.solved[key]
+        solved, short = setting.wide.get(psi) or wide.at(psi), setting.solved[key]
         # the means regressed on the columns of X, both in scaled columns; the slopes of X brought to units
         # of the outcome
         weights = short.root @ (short.root.T @ (full[:, :p].T @ full[:, p : wide.rank]))
