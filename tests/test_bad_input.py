@@ -39,7 +39,7 @@ def test_exact_collinearity_names_columns_and_dependency(frame):
 @pytest.mark.parametrize("value", [0.0, 3.0])
 def test_a_column_of_one_value_is_collinear_with_the_intercept(frame, value):
     frame["z"] = value
-    with pytest.raises(mixbridge.IdentificationError, match="z = (0|3·Intercept)"):
+    with pytest.raises(mixbridge.IdentificationError, match=r"z = (0|3·Intercept)"):
         mixbridge.crosscheck("y ~ x + z", frame, unit="unit")
 
 

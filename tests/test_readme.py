@@ -6,9 +6,9 @@ import shutil
 from pathlib import Path
 
 import pytest
+import renew
 
 import mixbridge
-import renew
 from mixbridge import cli, demo
 
 TEXT = (Path(__file__).parents[1] / "README.md").read_text(encoding="utf-8")

@@ -188,7 +188,7 @@ def test_conventions_of_inference_never_move_the_estimates(study, route, axis):
     values = next(item for item in AXES if item.name == axis).values
     base = study.fit(route)
     for value in values[1:]:
-        if value == "kenward_roger" and route != "reml" or (value == "two_way" and route == "between"):
+        if (value == "kenward_roger" and route != "reml") or (value == "two_way" and route == "between"):
             continue
         fit = study.fit(route, **{axis: value})
         np.testing.assert_array_equal(fit.beta, base.beta)

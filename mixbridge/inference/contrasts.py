@@ -95,7 +95,7 @@ class _Side:
 
 
 def shared_directions(curve: Curve) -> FloatArray:
-    """Return L, an orthonormal basis of the combinations that both kinds of variation determine: shape (p, K_p - K_c)."""
+    """Return L, an orthonormal basis of what both kinds of variation determine: shape (p, K_p - K_c)."""
     lost = np.hstack([curve.constant_white, curve.between_null])
     if lost.shape[1] == 0:
         return np.eye(curve.rank)
@@ -135,14 +135,14 @@ def contrasts(curve: Curve, fit: Fit, products: UnitProducts | None = None) -> t
             )
             if weights == "T / (1 + T psi)":
                 found.append(
-                    _contrast("within - gls", variance, "none", inside.values - gls.values, v_w - v_g, v_w)
+                    _contrast(("within - gls", variance, "none"), inside.values - gls.values, v_w - v_g, v_w)
                 )
             found.append(
-                _contrast("gls - between", variance, weights, gls.values - between.values, v_b - v_g, v_w)
+                _contrast(("gls - between", variance, weights), gls.values - between.values, v_b - v_g, v_w)
             )
             found.append(
                 _contrast(
-                    "within - between", variance, weights, inside.values - between.values, v_w + v_b, v_w
+                    ("within - between", variance, weights), inside.values - between.values, v_w + v_b, v_w
                 )
             )
             if weights == "T / (1 + T psi)":
@@ -155,9 +155,9 @@ def contrasts(curve: Curve, fit: Fit, products: UnitProducts | None = None) -> t
 def _robust(curve: Curve, fit: Fit, products: UnitProducts, directions: FloatArray) -> list[Contrast]:
     """Test the contrasts with a covariance robust to any dependence within units.
 
-    ``b_w`` and ``b_b``, weights ``T / (1 + T psi)``, are the two halves of the regression with unit means; with its residuals and one
-    multiplier N / (N - 1) the within - between, within - GLS and unit-means forms are one statistic, since the three contrasts
-    are linear images of one another (Arellano 1993).
+    ``b_w`` and ``b_b``, weights ``T / (1 + T psi)``, are the two halves of the regression with unit means; with
+    its residuals and one multiplier N / (N - 1) the within - between, within - GLS and unit-means forms are one
+    statistic, since the three contrasts are linear images of one another (Arellano 1993).
     """
     inside = regression_of(curve, products, np.inf)
     between = regression_of(curve, products, "between", curve.sizes / (1.0 + curve.sizes * fit.ratio))
@@ -172,7 +172,7 @@ def _robust(curve: Curve, fit: Fit, products: UnitProducts, directions: FloatArr
     if units <= d:
         reason = f"{units} units for {d} directions: a cluster-robust covariance of this rank does not exist"
         return [Contrast("unit means", name, "T / (1 + T psi)", np.nan, d, np.nan, np.nan, np.nan, reason)]
-    item = _contrast("unit means", name, "T / (1 + T psi)", gap, covariance, measure)
+    item = _contrast(("unit means", name, "T / (1 + T psi)"), gap, covariance, measure)
     return [item, replace(item, name="within - between"), replace(item, name="within - gls", weights="none")]
 
 
@@ -302,14 +302,15 @@ def _unit_means(curve: Curve, fit: Fit, inside: _Side, between: _Side, own: bool
     gap = between.values - inside.values
     variance /= curve.unit
     return _contrast(
-        "unit means", name, "T / (1 + T psi)", gap, variance * spread, variance * between.under_model
+        ("unit means", name, "T / (1 + T psi)"), gap, variance * spread, variance * between.under_model
     )
 
 
 def _contrast(
-    name: str, variance: str, weights: str, gap: FloatArray, covariance: FloatArray, measure: FloatArray
+    label: tuple[str, str, str], gap: FloatArray, covariance: FloatArray, measure: FloatArray
 ) -> Contrast:
     """Form the statistic if the covariance of the contrast is positive definite; say so if it is not."""
+    name, variance, weights = label
     df = gap.size
     if not np.isfinite(covariance).all():
         reason = "a route has no variance of its own here: no degrees of freedom"
@@ -322,7 +323,8 @@ def _contrast(
     if smallest <= 16.0 * df * EPS * max(1.0, largest):
         below = int((eigenvalues <= 0.0).sum())
         reason = (
-            f"the difference of the two covariances is not positive definite ({below} of {df} eigenvalues not above zero), "
+            f"the difference of the two covariances is not positive definite ({below} of {df} eigenvalues not above "
+            "zero), "
             "so it is no covariance and there is no statistic"
         )
         return Contrast(name, variance, weights, np.nan, df, np.nan, smallest, largest, reason)

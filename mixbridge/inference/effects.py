@@ -1,5 +1,4 @@
-"""Predicted unit effects, their prediction errors, and three quantities that are all called variance of the
-effects.
+"""Predicted unit effects, their errors, and three quantities that are all called variance of the effects.
 
 At ratio ψ, with ``s_i = T_i psi / (1 + T_i psi)`` (Henderson 1975; Robinson 1991)
 
@@ -93,13 +92,14 @@ def effect_variances(curve: Curve, opened: OpenMoments, fit: Fit) -> pd.DataFram
         [
             "intercepts as parameters",
             float(np.var(intercepts, ddof=1)),
-            "sample variance (divisor N - 1) of unit intercepts estimated as parameters: sampling noise and unit-constant covariates "
-            "included, so too large for the unit variance",
+            "sample variance (divisor N - 1) of unit intercepts estimated as parameters: sampling noise and "
+            "unit-constant covariates included, so too large for the unit variance",
         ],
         [
             "predicted effects",
             float(np.var(effects, ddof=1)),
-            "sample variance (divisor N - 1) of predicted effects: shrunk towards zero, so too small for the unit variance",
+            "sample variance (divisor N - 1) of predicted effects: shrunk towards zero, so too small for the unit "
+            "variance",
         ],
         ["unit variance", fit.unit_variance, "the variance component of the model"],
     ]

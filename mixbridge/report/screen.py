@@ -155,8 +155,10 @@ def _agreement(study: StudyView, most: int) -> list[str]:
     votes = [key for key in study.fits if key not in REFERENCE_ROUTES and key != primary]
     thresholds = Thresholds()
     lines = [
-        f"Do {len(votes)} other random-effects routes agree with {primary}? Immaterial: gap below {thresholds.gap:g} standard",
-        f"errors (se) of {primary} and half-widths within {thresholds.width:.0%}. {study.confidence:.0%} intervals: {study.reference}.",
+        f"Do {len(votes)} other random-effects routes agree with {primary}? "
+        f"Immaterial: gap below {thresholds.gap:g} standard",
+        f"errors (se) of {primary} and half-widths within {thresholds.width:.0%}. "
+        f"{study.confidence:.0%} intervals: {study.reference}.",
     ]
     beside = [key for key in REFERENCE_ROUTES if key in study.fits and key != primary]
     terms = [str(term) for term in dict.fromkeys(table["term"])]
@@ -209,7 +211,8 @@ def _row(part: pd.DataFrame, route: str) -> pd.Series:
 def _beside(row: pd.Series) -> str:
     if np.isnan(row["estimate"]):
         return "-"
-    gap = "" if np.isnan(row["gap_in_se"]) else f" ({signed(row['gap_in_se'])})"
+    size = row["gap_in_se"]
+    gap = "" if np.isnan(size) else f" ({signed(size) if abs(size) > Thresholds().rounding else '0'})"
     return f"{number(row['estimate'])}{gap}"
 
 
@@ -242,7 +245,8 @@ def _components(study: StudyView) -> list[str]:
         merged.setdefault((*cells, *errors, status), []).append(str(row["route"]))
     rows = [["route", "unit", "(se)", "idiosyncratic", "(se)", "ratio ψ", "ICC", "status"]]
     without: list[str] = []
-    for (*cells, status), names in merged.items():
+    for (*shown, status), names in merged.items():
+        cells = list(shown)
         if set(cells) == {"-"}:
             without.append(shorten(f"  {_join(names, 44)}: {status}", WIDTH))
             continue

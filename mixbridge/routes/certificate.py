@@ -172,7 +172,9 @@ def certify(profile: Profile, within_residual: float, limit: float) -> Certifica
         kind=profile.kind,
         psi=float(best[0]),
         epsilon=epsilon,
-        stationary=tuple(StationaryPoint(float(psi), float(deviance - best[1]), kind) for psi, deviance, kind in roots),
+        stationary=tuple(
+            StationaryPoint(float(psi), float(deviance - best[1]), kind) for psi, deviance, kind in roots
+        ),
         slope_at_zero=float(slope[0]),
         excluded=excluded,
         unresolved=tuple(unresolved),

@@ -140,7 +140,8 @@ AXES: tuple[Axis, ...] = (
         "covariance",
         ("model", "CR0", "CR1", "CR2", "CR3", "two_way"),
         tuple(route for route in ALL_ROUTES if route != "first_difference"),
-        "covariance of the coefficients: of the model, or robust to dependence within units (sum of score products; with a "
+        "covariance of the coefficients: of the model, or robust to dependence within units "
+        "(sum of score products; with a "
         "multiplier; with leverage adjustment of order 1/2; of order 1), or within units and within periods",
         "Liang & Zeger 1986; Bell & McCaffrey 2002; Pustejovsky & Tipton 2018; Cameron, Gelbach & Miller 2011",
     ),
@@ -178,7 +179,8 @@ AXES: tuple[Axis, ...] = (
             "kenward_roger",
         ),
         ALL_ROUTES,
-        "reference distribution of intervals: Satterthwaite on the curve and the classical t elsewhere, unless named; with "
+        "reference distribution of intervals: Satterthwaite on the curve and the classical t elsewhere, "
+        "unless named; with "
         "Kenward-Roger the adjusted covariance too",
         "Satterthwaite 1946; Kenward & Roger 1997; common practice",
     ),

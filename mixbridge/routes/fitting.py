@@ -270,7 +270,10 @@ def _flat(curve: Curve, route: Kind) -> tuple[str, str] | None:
     if curve.df_within < 1:
         where = f"n - N - K_w = {curve.df_within}: the within regression leaves no error"
         if route == "ml":
-            return "likelihood unbounded", f"{where}, and the likelihood grows without bound as the ratio grows"
+            return (
+                "likelihood unbounded",
+                f"{where}, and the likelihood grows without bound as the ratio grows",
+            )
         if len(curve.sizes) == 1:
             return "likelihood flat", f"{where}, and with one unit size the restricted likelihood is flat"
         raise NotEstimableError(f"{where}, so nothing bounds the restricted likelihood from above")

@@ -206,7 +206,8 @@ class Fit:
         ]
         if np.isfinite(self.idiosyncratic_variance):
             lines.append(
-                f"  unit variance {self.unit_variance_raw:.6g}, idiosyncratic variance {self.idiosyncratic_variance:.6g}, "
+                f"  unit variance {self.unit_variance_raw:.6g}, "
+                f"idiosyncratic variance {self.idiosyncratic_variance:.6g}, "
                 f"ratio {self.ratio:.6g}, ICC {self.icc:.6g}"
             )
         chosen = ", ".join(

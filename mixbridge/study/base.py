@@ -9,6 +9,7 @@ from types import MappingProxyType
 
 import numpy as np
 
+from mixbridge.correlated import Mundlak
 from mixbridge.errors import IdentificationError, OptionError
 from mixbridge.inference.kenward_roger import kenward_roger
 from mixbridge.inference.references import default_rule, pick_reference
@@ -34,6 +35,7 @@ class StudyBase:
     primary: str = "reml"
     routes: tuple[str, ...] = LEDGER_ROUTES
     confidence: float = 0.95
+    unit_means: Mundlak | None = field(default=None, repr=False)
 
     @cached_property
     def curve(self) -> Curve:
@@ -130,8 +132,8 @@ class StudyBase:
         ----------
         fit : Fit
         rule : str, optional
-            Reference distribution; the one in the conventions of the fit unless given, whose default is Satterthwaite on the
-            curve and the classical t elsewhere; robust covariances take t with N - 1 there.
+            Reference distribution; the one in the conventions of the fit unless given, whose default is
+            Satterthwaite on the curve and the classical t elsewhere; robust covariances take t with N - 1 there.
 
         Returns
         -------

@@ -233,9 +233,10 @@ class StudyQuestions(StudyBase):
             for study in (self, other)
         ]
         if likelihood == "reml" and not same_column_space(self.curve, other.curve):
-            figures = [float(table.loc[0, "log_likelihood"]) for table in tables]
+            figures = [float(table["log_likelihood"].to_numpy()[0]) for table in tables]
             raise IdentificationError(
-                "restricted likelihoods of different fixed parts are densities of different data and cannot be compared. "
+                "restricted likelihoods of different fixed parts are densities of different data and cannot be "
+                "compared. "
                 f"ML log-likelihoods instead: {figures[0]:.6g} for {self.panel.formula!r} and {figures[1]:.6g} for "
                 f"{other.panel.formula!r}; ask with likelihood='ml'."
             )

@@ -17,7 +17,7 @@ from mixbridge.reconcile.identities import Identity, check_identities, identity_
 from mixbridge.report.record import study_record
 from mixbridge.report.screen import study_screen
 from mixbridge.routes import iterate
-from mixbridge.study.questions import StudyQuestions
+from mixbridge.study.correlated import StudyCorrelated
 
 __all__ = ["Study"]
 
@@ -25,7 +25,7 @@ COMPONENT_COLUMNS = ["unit_variance", "idiosyncratic_variance", "ratio", "icc"]
 
 
 @dataclass(frozen=True, eq=False, repr=False)
-class Study(StudyQuestions):
+class Study(StudyCorrelated):
     """A cross-check: what `crosscheck` returns.
 
     Attributes
@@ -42,6 +42,8 @@ class Study(StudyQuestions):
         Routes shown side by side.
     confidence : float
         Level of every interval.
+    unit_means : Mundlak or None
+        Where unit means were added: what was added, and what follows.
     """
 
     @property

@@ -166,7 +166,9 @@ def nerlove(panel: Dense, k: Degrees, divisor: str) -> FirstStage:
 def pooled_minus_within(panel: Dense, k: Degrees) -> FirstStage:
     if reason := needs_within(panel, k):
         return none(reason)
-    if panel.N <= panel.K - panel.K_w:  # both residual forms are then one: no unit variance in their difference
+    if (
+        panel.K - panel.K_w >= panel.N
+    ):  # both residual forms are then one: no unit variance in their difference
         return none("N = K_c")
     if panel.n - k.K < 1:
         return none("n - K < 1")
