@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
-from benchmarks.measure import interleaved
+from benchmarks.measure import COLUMNS, described, interleaved
 from benchmarks.panels import Panel, panel
 from benchmarks.profiles import Profile
 from benchmarks.results import Agreement, Ratio, Result, Table
@@ -61,9 +61,9 @@ def arrays(profile: Profile) -> Result:
     difference = float(np.abs(fits["pooled"].beta - slope).max() / np.abs(slope).max())
     return Result(
         problem=f"{data.y.size:,} rows × {data.x.shape[1]} columns, {profile.units:,} units of 1 to 19 rows",
-        method=f"best of {profile.rounds} interleaved rounds (median beside it); ratios are of the best times",
+        method=described(profile.rounds),
         table=Table(
-            ("task", "best", "median", "ratio"),
+            ("task", *COLUMNS, "ratio"),
             tuple((name, *timing.cells(), f"{timing.best / base:.3f}") for name, timing in times.items()),
         ),
         ratios=(Ratio("moments and all curve routes / lstsq", times[all_routes].best / base, 0.6),),

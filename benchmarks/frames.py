@@ -6,7 +6,7 @@ import numpy as np
 import statsmodels.formula.api as smf
 
 from benchmarks.arrays import EPS
-from benchmarks.measure import interleaved
+from benchmarks.measure import COLUMNS, described, interleaved
 from benchmarks.panels import panel
 from benchmarks.profiles import Profile
 from benchmarks.results import Agreement, Ratio, Result, Table
@@ -41,9 +41,9 @@ def frames(profile: Profile) -> Result:
     return Result(
         problem=f"{data.y.size:,} rows, {data.x.shape[1] - 1} covariates and a constant, "
         f"{profile.units:,} units of 1 to 19 rows",
-        method=f"best of {profile.frame_rounds} interleaved rounds (median beside it); ratios are of the best times",
+        method=described(profile.frame_rounds),
         table=Table(
-            ("task", "best", "median", "ratio"),
+            ("task", *COLUMNS, "ratio"),
             tuple((name, *timing.cells(), f"{timing.best / base:.3f}") for name, timing in times.items()),
         ),
         ratios=(Ratio("crosscheck with ledger / formula OLS", times[ours].best / base, 0.5),),

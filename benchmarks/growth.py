@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from benchmarks.arrays import CURVE_ROUTES, routes_of
-from benchmarks.measure import interleaved, text
+from benchmarks.measure import COLUMNS, described, interleaved, text
 from benchmarks.panels import moments_of_sizes
 from benchmarks.profiles import Profile
 from benchmarks.results import Agreement, Ratio, Result, Table
@@ -29,8 +29,8 @@ def rows(profile: Profile) -> Result:
     return Result(
         problem=f"{len(CURVE_ROUTES)} routes with covariances, component covariances and certificates; 10 columns, "
         f"{SIZES} distinct unit sizes",
-        method=f"best of {rounds} interleaved rounds (median beside it)",
-        table=Table(("rows", "units", "distinct sizes", "best", "median"), table),
+        method=described(rounds),
+        table=Table(("rows", "units", "distinct sizes", *COLUMNS), table),
         ratios=(
             Ratio("slowest of these", 1e3 * max(best.values()), 20.0, unit="ms"),
             Ratio(
@@ -52,8 +52,8 @@ def sizes(profile: Profile) -> Result:
     return Result(
         problem=f"{len(CURVE_ROUTES)} routes as above; 10 columns, "
         "four units of each size from 1 to the number of distinct sizes",
-        method=f"best of {rounds} interleaved rounds (median beside it)",
-        table=Table(("distinct sizes", "rows", "best", "median"), table),
+        method=described(rounds),
+        table=Table(("distinct sizes", "rows", *COLUMNS), table),
         ratios=(
             Ratio(f"time at {most} sizes / at {least} sizes", times[str(most)].best / times[str(least)].best),
         ),

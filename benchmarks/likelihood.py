@@ -8,7 +8,7 @@ import numpy as np
 from statsmodels.regression.mixed_linear_model import MixedLM, MixedLMResults
 from statsmodels.tools.sm_exceptions import ModelWarning
 
-from benchmarks.measure import interleaved
+from benchmarks.measure import COLUMNS, described, interleaved
 from benchmarks.panels import Panel, panel
 from benchmarks.profiles import Profile
 from benchmarks.results import Agreement, Ratio, Result, Table
@@ -60,9 +60,9 @@ def likelihood(profile: Profile) -> Result:
     return Result(
         problem=f"{data.y.size:,} rows × {data.x.shape[1]} columns, {profile.likelihood_units:,} units of 1 to 19 "
         f"rows; deviances also on {profile.likelihood_panels} panels of 30 units",
-        method=f"rival: one round; ours: best of {profile.rounds} rounds in the same run (median beside it)",
+        method="rival: one round in the same run; ours: " + described(profile.rounds),
         table=Table(
-            ("task", "best", "median", "log-likelihood (REML, without ½ log|X'X|)"),
+            ("task", *COLUMNS, "log-likelihood (REML, without ½ log|X'X|)"),
             (
                 (rival, *times[rival].cells(), f"{theirs.llf:.6f}"),
                 (ours, *times[ours].cells(), f"{large.log_likelihood:.6f}"),

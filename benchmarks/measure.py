@@ -19,21 +19,43 @@ SMALL = 200
 
 @dataclass(frozen=True, slots=True)
 class Timing:
-    """Wall-clock seconds of one task over the rounds."""
+    """Seconds of one task over the rounds.
 
-    seconds: tuple[float, ...]
+    Attributes
+    ----------
+    processor : tuple of float
+        Processor time of the process. With one thread it is the time on the clock of an idle machine, and it does not
+        count the time that other programs take from a busy one.
+    clock : tuple of float
+        Time on the clock.
+    """
+
+    processor: tuple[float, ...]
+    clock: tuple[float, ...]
 
     @property
     def best(self) -> float:
-        return min(self.seconds)
+        return min(self.processor)
 
     @property
     def median(self) -> float:
-        return statistics.median(self.seconds)
+        return statistics.median(self.processor)
 
-    def cells(self) -> tuple[str, str]:
-        """Return best and median as text, with a unit."""
-        return text(self.best), text(self.median)
+    def cells(self) -> tuple[str, str, str]:
+        """Return best and median processor time and the best time on the clock, with units."""
+        return text(self.best), text(self.median), text(min(self.clock))
+
+
+COLUMNS = ("best", "median", "best on the clock")
+"""Headings of `Timing.cells`."""
+
+
+def described(rounds: int) -> str:
+    """Return how times of so many rounds are to be read."""
+    return (
+        f"processor time, best of {rounds} interleaved rounds, the median and the best time on the clock beside it; "
+        "ratios are of the best processor times"
+    )
 
 
 def text(seconds: float) -> str:
@@ -46,17 +68,17 @@ def interleaved(tasks: Mapping[str, Callable[[], object]], rounds: int) -> dict[
 
     The first round is run and not counted when there is more than one: it pays for imports and first-touched memory.
     """
-    seconds: dict[str, list[float]] = {name: [] for name in tasks}
+    spent: dict[str, list[tuple[float, float]]] = {name: [] for name in tasks}
     for turn in range(rounds + 1 if rounds > 1 else 1):
         for name, task in tasks.items():
             gc.collect()
-            start = time.perf_counter()
+            clock, processor = time.perf_counter(), time.process_time()
             result = task()
-            spent = time.perf_counter() - start
+            both = time.process_time() - processor, time.perf_counter() - clock
             del result
             if turn or rounds == 1:
-                seconds[name].append(spent)
-    return {name: Timing(tuple(values)) for name, values in seconds.items()}
+                spent[name].append(both)
+    return {name: Timing(*zip(*values, strict=True)) for name, values in spent.items()}
 
 
 @dataclass(frozen=True, slots=True)
