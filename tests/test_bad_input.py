@@ -150,3 +150,16 @@ def test_near_collinearity_is_said_on_the_screen(frame):
     assert study.curve.condition > 1e6
     assert "nearly collinear" in str(study)
     assert "x3" in str(study)
+
+
+def test_a_constant_column_of_another_value_keeps_its_unit(frame):
+    """Without an intercept a column of twos is a column like others: half the coefficient of a column of ones."""
+    frame["one"], frame["two"] = 1.0, 2.0
+    ones = mixbridge.crosscheck("y ~ 0 + one + x", frame, unit="unit")
+    twos = mixbridge.crosscheck("y ~ 0 + x + two", frame, unit="unit")
+    for key in ("pooled", "between", "swamy_arora", "reml"):
+        left, right = ones.fit(key), twos.fit(key)
+        np.testing.assert_allclose(right.coefficients["two"], left.coefficients["one"] / 2.0, rtol=1e-12)
+        np.testing.assert_allclose(right.coefficients["x"], left.coefficients["x"], rtol=1e-11)
+        assert right.ratio == pytest.approx(left.ratio, rel=1e-10, nan_ok=True)
+    np.testing.assert_allclose(twos.curve.log_det, ones.curve.log_det + np.log(4.0), rtol=1e-12)

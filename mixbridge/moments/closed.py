@@ -99,7 +99,7 @@ class Moments:
         Parameters
         ----------
         x : array_like of shape (n, p)
-            Design columns; a column of equal values is the constant.
+            Design columns; a column of ones is the constant.
         y : array_like of shape (n,)
             Outcome.
         codes : array_like of int, shape (n,)
@@ -319,7 +319,7 @@ def close(opened: OpenMoments) -> Moments:
     level = np.diag(opened.within) == 0.0
     for j in np.flatnonzero(level):
         level[j] = (opened.means[:, j] == first[j]).all()
-    candidates = np.flatnonzero(level[:-1] & (first + opened.shift != 0.0)[:-1])
+    candidates = np.flatnonzero(level[:-1] & (first + opened.shift == 1.0)[:-1])  # a column of ones
     constant = int(candidates[0]) if candidates.size else None
     if level[-1]:
         raise DataError(
