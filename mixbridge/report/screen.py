@@ -241,7 +241,7 @@ def _components(study: StudyView) -> list[str]:
             number(row["icc"], 3),
         )
         errors = tuple(number(row[f"{name}_se"], 2) for name in ("unit_variance", "idiosyncratic_variance"))
-        status = "truncated, zero used" if row["unit_variance"] < 0 else str(row["status"])
+        status = "zero used" if row["unit_variance"] < 0 else str(row["status"])
         merged.setdefault((*cells, *errors, status), []).append(str(row["route"]))
     rows = [["route", "unit", "(se)", "idiosyncratic", "(se)", "ratio ψ", "ICC", "status"]]
     without: list[str] = []
