@@ -1,6 +1,14 @@
 """What theory says must agree, checked on the data at hand: these check the arithmetic, not the model."""
 
-from mixbridge.reconcile.identities import ends, iteration, moments_agree, restricted, unit_means, weighting
+from mixbridge.reconcile.identities import (
+    ends,
+    iteration,
+    moments_agree,
+    restricted,
+    tests_agree,
+    unit_means,
+    weighting,
+)
 from mixbridge.reconcile.identities.registry import (
     DOES_NOT_APPLY,
     FAILS,
@@ -31,6 +39,7 @@ __all__ = [
     "iteration",
     "moments_agree",
     "restricted",
+    "tests_agree",
     "unit_means",
     "weighting",
 ]
