@@ -87,13 +87,11 @@ def width_factors(
     if not (here.half_width > 0.0 and there.half_width > 0.0):
         return ()
     at = a.terms.index(term)
-    orders = _orders(_Side(a, at), _Side(b, at), errors)
+    sides = _Side(a, at), _Side(b, at)
+    orders = _orders(*sides, errors)
     values = np.array([*orders]).T
     quantiles = [one.half_width / one.standard_error for one in intervals]
-    raised = [
-        one.standard_error / float(fit.standard_errors.iloc[at])
-        for one, fit in zip(intervals, (a, b), strict=True)
-    ]
+    raised = [one.standard_error / side.own for one, side in zip(intervals, sides, strict=True)]
     shown = [
         (f"{a.ratio:.6g}", f"{b.ratio:.6g}"),
         (f"{a.scale:.6g}", f"{b.scale:.6g}"),
@@ -130,7 +128,8 @@ class _Side:
 
     @property
     def own(self) -> float:
-        return float(self.fit.standard_errors.iloc[self.at])
+        robust = self.fit.robust
+        return self.model if robust is None else float(np.sqrt(robust[self.at, self.at]))
 
     def error(self, kind: str, errors: StandardErrors | None) -> float:
         """Return the standard error under a kind of covariance; NaN where it is not at hand."""
