@@ -383,7 +383,7 @@ def test_ml_without_within_error_is_unbounded():
     falling = [float(mp_profile(X, y, units, psi, "ml")) for psi in (1e3, 1e6, 1e9, 1e12)]
     # n log r + g = -(n - N) log psi + constant: at least 2 log 1000 lower each time
     assert (np.diff(falling) < -2 * np.log(1000.0) * 0.99).all()
-    assert fit_arrays(X, y, units, "reml").status == "likelihood flat"
+    assert "nothing bounds the restricted likelihood" in fit_arrays(X, y, units, "reml").status
 
 
 @pytest.mark.parametrize("kind", KINDS)
