@@ -21,7 +21,7 @@ def main() -> int:
     for variable in THREAD_VARIABLES:  # before numpy is imported, which reads them once
         os.environ[variable] = given.threads
 
-    from benchmarks.page import machine, page, section  # noqa: PLC0415
+    from benchmarks.page import load, machine, page, section  # noqa: PLC0415
     from benchmarks.profiles import PROFILES  # noqa: PLC0415
     from benchmarks.registry import PROBLEMS  # noqa: PLC0415
 
@@ -30,13 +30,16 @@ def main() -> int:
     if unknown:
         parser.error(f"no benchmark {unknown[0]!r}; there are: {', '.join(PROBLEMS)}")
     print("Measured on:", machine(given.threads))
+    before = load()
     results = {}
     for name in names:
         print(f"\n== {name}: {PROBLEMS[name].title}", flush=True)
         results[name] = PROBLEMS[name].run(PROFILES[given.profile])
         print(section(results[name]), flush=True)
     if given.write is not None:
-        given.write.write_text(page(results, given.profile, given.threads), encoding="utf-8")
+        given.write.write_text(
+            page(results, given.profile, given.threads, (before, load())), encoding="utf-8"
+        )
     broken = [name for name, result in results.items() if not all(each.holds for each in result.agreements)]
     if broken:
         print("\nNot the same numbers as the rival:", ", ".join(broken))

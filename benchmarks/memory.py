@@ -65,7 +65,7 @@ def memory(profile: Profile) -> Result:
     worst = {name: max(peaks[name].traced, peaks[name].resident or 0) / design for name in ours}
     return Result(
         problem=f"{rows:,} rows × 10 columns: the design matrix takes {design / 2**20:.3g} MiB",
-        method="peak above what was in use before the call, each task in a process of its own, once; "
+        method="Peak above what was in use before the call, each task in a process of its own, once; "
         "the larger of both measures counts",
         table=Table(
             ("task", "allocated (tracemalloc)", "per design matrix", "resident, per design matrix"),

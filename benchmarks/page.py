@@ -17,14 +17,20 @@ def machine(threads: str) -> str:
     """Describe the machine in general terms."""
     cores = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count()
     packages = ", ".join(f"{name} {version(name)}" for name in PACKAGES)
+    count = "1 thread" if threads == "1" else f"{threads} threads"
     return (
         f"{platform.machine()} with {cores} cores, {platform.system()}, Python {platform.python_version()}, "
-        f"{packages}; {threads} thread(s) for linear algebra, the same for every task."
+        f"{packages}; {count} for linear algebra, the same for every task."
     )
 
 
-def page(results: Mapping[str, Result], profile: str, threads: str) -> str:
-    """Return the documentation page."""
+def load() -> str:
+    """Return the load average of the last minute as text, where the system reports it."""
+    return f"{os.getloadavg()[0]:.1f}" if hasattr(os, "getloadavg") else "not reported"
+
+
+def page(results: Mapping[str, Result], profile: str, threads: str, loads: tuple[str, str]) -> str:
+    """Return the documentation page; `loads` are the load averages before and after the run."""
     parts = [
         "---\norphan: true\n---",
         "# Speed and memory",
@@ -32,6 +38,9 @@ def page(results: Mapping[str, Result], profile: str, threads: str) -> str:
         "process and the same rounds as the package, so that a busy spell of the machine meets "
         "both; a ratio carries over to other machines better than a time does.",
         "Measured on: " + machine(threads),
+        f"Load average of the machine {loads[0]} before the run and {loads[1]} after it, of which the run itself makes up 1. "
+        "Rows in random order are looked up in tables that a program running beside would push out of the shared cache: "
+        "the first ratio below is the one that suffers.",
         "## Summary",
         _markdown(_summary(results)),
     ]

@@ -35,7 +35,7 @@ def test_deviance_is_never_worse_than_the_rivals(results):
 
 
 def test_the_page_shows_every_figure_with_its_target(results):
-    text = page(results, "tiny", "1")
+    text = page(results, "tiny", "1", ("0.1", "1.0"))
     for name, result in results.items():
         assert f"## {PROBLEMS[name].title}\n" in text
         for ratio in result.ratios:
