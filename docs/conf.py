@@ -41,3 +41,22 @@ def conventions() -> str:
 
 
 myst_substitutions = {"conventions": conventions()}
+
+
+def formulas_as_literals(app, what, name, obj, options, lines):
+    """Show the indented formulas at the head of a module as they stand in the source."""
+    if what != "module":
+        return
+    shown: list[str] = []
+    for at, line in enumerate(lines):
+        opens = line.startswith("    ") and (at == 0 or not lines[at - 1].strip())
+        before = next((text for text in reversed(shown) if text.strip()), "")
+        if opens and not before.startswith("    ") and not before.rstrip().endswith("::"):
+            shown += ["::", ""]
+        shown.append(line)
+    lines[:] = shown
+
+
+def setup(app):
+    """Register what this file adds."""
+    app.connect("autodoc-process-docstring", formulas_as_literals, priority=900)
