@@ -34,7 +34,9 @@ GRADIENT = 1e-10
 EPS = float(np.finfo(float).eps)
 MAX_ROUNDS = 60
 FIELDS = ("psi", "r", "r1", "r2", "g", "g1", "g2")
-SPREAD = np.array([0.25, 0.5, 0.75, 1.0, 1.25, 1.5, 1.75, 2.0, 2.5, 3.0, 4.0, 6.0, 9.0, 14.0, 22.0])
+SPREAD = np.array(
+    [*np.arange(0.25, 2.25, 0.25), 2.5, 3.0, 4.0, 6.0, 9.0, 14.0, 22.0, 35.0, 55.0, 90.0, 140.0]
+)
 """Distances from the centre of the grid, in standard deviations of the optimum."""
 
 
@@ -225,7 +227,8 @@ def _grid(deviances: Deviances) -> FloatArray:
     if not (np.isfinite(spread) and spread > 0.0):
         return coarse
     fine = centre + spread * np.concatenate([-SPREAD, [0.0], SPREAD])
-    return np.unique(np.concatenate([coarse, fine[fine > coarse[1]]]))
+    near = (fine > coarse[1]) & (fine <= max(2.0 * centre, centre + 4.0 * spread))
+    return np.unique(np.concatenate([coarse, fine[near]]))
 
 
 def _tail(deviances: Deviances, last: _Pieces, lowest: FloatArray) -> tuple[_Pieces, BoolArray]:
