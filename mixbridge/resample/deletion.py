@@ -60,7 +60,9 @@ CROWDED = 0.9
 """Trace of a unit's leverage from which its eigenvalues are looked at."""
 
 
-def given_routes(curve: Curve, routes: tuple[str, ...], given: Conventions | None) -> dict[str, Mapping[str, object]]:
+def given_routes(
+    curve: Curve, routes: tuple[str, ...], given: Conventions | None
+) -> dict[str, Mapping[str, object]]:
     """Check routes and conventions.
 
     Parameters
@@ -88,9 +90,13 @@ def given_routes(curve: Curve, routes: tuple[str, ...], given: Conventions | Non
             raise OptionError(f"first_difference cannot be refitted here: {NO_ORDER}.")
         own = dict((given or {}).get(key, {}))
         if own.get("covariance", "model") != "model":
-            raise OptionError(f"{key}: covariance={own['covariance']!r} is not refitted; only the one of the model is.")
+            raise OptionError(
+                f"{key}: covariance={own['covariance']!r} is not refitted; only the one of the model is."
+            )
         if own.get("one_row_units") == "dropped" and (curve.sizes == 1.0).any():
-            raise OptionError(f"{key}: leave the one-row units out of the moments and of the unit products instead.")
+            raise OptionError(
+                f"{key}: leave the one-row units out of the moments and of the unit products instead."
+            )
         chosen[key] = resolve(route, {**implied, **own})
     return chosen
 
@@ -101,7 +107,10 @@ def fit_moments(moments: Moments, routes: Conventions) -> dict[str, Fit] | str:
         curve = curve_of(moments)
     except (IdentificationError, DataError) as error:
         return f"not estimable: {error}"
-    return {key: fit_route(curve, named_route(key)[0], conventions, NO_ORDER) for key, conventions in routes.items()}
+    return {
+        key: fit_route(curve, named_route(key)[0], conventions, NO_ORDER)
+        for key, conventions in routes.items()
+    }
 
 
 def centre_of(
@@ -127,7 +136,9 @@ def centre_of(
     ratios = [fits[key].ratio for key in (primary, *fits)]
     reference = next((ratio for ratio in ratios if np.isfinite(ratio)), curve.units / curve.n)
     axes = unit_axes(curve, products, float(reference))
-    whole = Batch(axes, axes.within[:, None], axes.between, curve.counts[:, None], None, np.zeros(0, dtype=np.intp))
+    whole = Batch(
+        axes, axes.within[:, None], axes.between, curve.counts[:, None], None, np.zeros(0, dtype=np.intp)
+    )
     optima = {
         key: (fits[key].ratio, float(fits[key].component_standard_errors["ratio"]))
         for key in routes
@@ -138,7 +149,10 @@ def centre_of(
         for key, (psi, _) in optima.items()
     }
     bare = Centre(optima, {}, {})
-    marks = {key: marks[:, 0] for key, (_, _, marks) in fit_batch(whole, routes, bare, np.zeros(1, dtype=bool)).items()}
+    marks = {
+        key: marks[:, 0]
+        for key, (_, _, marks) in fit_batch(whole, routes, bare, np.zeros(1, dtype=bool)).items()
+    }
     return axes, Centre(optima, near, marks)
 
 
@@ -218,7 +232,9 @@ def _leverage_maps(axes: UnitAxes) -> tuple[FloatArray, FloatArray, FloatArray]:
     return maps[0], maps[1], maps[2]
 
 
-def _lost(batch: Batch, own_within: FloatArray, leverages: tuple[FloatArray, FloatArray, FloatArray]) -> BoolArray:
+def _lost(
+    batch: Batch, own_within: FloatArray, leverages: tuple[FloatArray, FloatArray, FloatArray]
+) -> BoolArray:
     """Tell which panels lose a direction, or the digits of one, with their unit."""
     assert batch.own is not None
     sizes = batch.axes.curve.sizes[batch.own_class]
@@ -243,7 +259,11 @@ def _fit_alone(
     units = np.flatnonzero(np.any(list(doubt.values()), axis=0)) if doubt else np.zeros(0, dtype=np.intp)
     for turn, unit in enumerate(units):
         wanted = {key: routes[key] for key in routes if doubt[key][unit]}
-        made = fit_moments(without(products, unit), wanted) if turn < most else f"not fitted: {most} fits are done"
+        made = (
+            fit_moments(without(products, np.array([unit])), wanted)
+            if turn < most
+            else f"not fitted: {most} fits are done"
+        )
         for key in wanted:
             if isinstance(made, str):
                 blank = Refits.empty(1, found[key].coefficients.shape[1])

@@ -177,11 +177,9 @@ def _turn(curve: Curve, constants: int) -> tuple[FloatArray, int]:
 
 def _columns(moments: Moments) -> FloatArray:
     """Return the map from ``(1, scaled z)`` to the columns of the model and the outcome."""
-    k = moments.within.shape[1]
-    plain = replace(
-        moments, within=np.eye(k), between=np.eye(k + 1)[None], sizes=np.ones(1), counts=np.ones(1)
-    )
-    return model_coordinates(plain).between[0]
+    k, one = moments.within.shape[1], np.ones(1, dtype=np.int64)
+    plain = replace(moments, within=np.eye(k), between=np.eye(k + 1)[None], sizes=one, counts=one)
+    return np.asarray(model_coordinates(plain).between[0])
 
 
 def _basis(basis: FloatArray) -> FloatArray:

@@ -14,7 +14,17 @@ from numpy.typing import NDArray
 
 from mixbridge.resample.deletion_axes import UnitAxes, pack
 
-__all__ = ["Batch", "Solved", "deletions", "eliminate", "full", "quadratic", "solved", "trace", "trace_of_four"]
+__all__ = [
+    "Batch",
+    "Solved",
+    "deletions",
+    "eliminate",
+    "full",
+    "quadratic",
+    "solved",
+    "trace",
+    "trace_of_four",
+]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.intp]
@@ -50,7 +60,7 @@ class Batch:
     @property
     def size(self) -> int:
         """Number of panels m."""
-        return self.within.shape[1]
+        return int(self.within.shape[1])
 
     def sums(self, weights: FloatArray) -> FloatArray:
         """Return ``sum_T weights_T B_T``, packed.

@@ -85,7 +85,12 @@ class Neighbourhood:
     maps: FloatArray
 
     def excludes(
-        self, batch: Batch, own_within: FloatArray, m: FloatArray, within_residual: FloatArray, limit: FloatArray
+        self,
+        batch: Batch,
+        own_within: FloatArray,
+        m: FloatArray,
+        within_residual: FloatArray,
+        limit: FloatArray,
     ) -> BoolArray:
         """Tell for which panels D' is negative before ``[a, b]`` and positive after, and, if `plain`, D convex between.
 
@@ -182,7 +187,8 @@ def neighbourhood(axes: UnitAxes, kind: Kind, psi: float) -> Neighbourhood | Non
         more = values(np.where(left > 0.0, np.sqrt(left * right), right / 16.0))
         order = np.argsort(np.concatenate([grid.psi, more.psi]))
         grid = Values(
-            **{name: np.concatenate([getattr(grid, name), getattr(more, name)])[order] for name in FIELDS}, m=m
+            **{name: np.concatenate([getattr(grid, name), getattr(more, name)])[order] for name in FIELDS},
+            m=m,
         )
     else:
         return None

@@ -110,9 +110,7 @@ def _swamy_arora(sums: Sums, conventions: Conventions) -> Pairs:
 def _wansbeek_kapteyn(sums: Sums, conventions: Conventions) -> Pairs:
     df_w = within_df(sums, conventions)
     values = (sums.within.residual, sums.remainders(True))
-    return _pairs(
-        values, ((df_w, 0.0), sums.remainder_expectations()), (df_w >= 1) & _has_remainders(sums)
-    )
+    return _pairs(values, ((df_w, 0.0), sums.remainder_expectations()), (df_w >= 1) & _has_remainders(sums))
 
 
 def _amemiya(sums: Sums, conventions: Conventions) -> Pairs:

@@ -210,7 +210,9 @@ def _quadratic(
     result.ratio[lost] = np.nan
     result.coefficients[lost] = np.nan
     result.standard_errors[lost] = np.nan
-    residual = np.where(positive, line.residual, np.inf)  # without a positive variance there is nothing on the curve
+    residual = np.where(
+        positive, line.residual, np.inf
+    )  # without a positive variance there is nothing on the curve
     return doubt, np.vstack([pairs.values, residual])
 
 
