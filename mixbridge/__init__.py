@@ -10,6 +10,8 @@ from mixbridge.errors import (
     OptionError,
 )
 from mixbridge.moments import Moments, OpenMoments
+from mixbridge.moments.products import UnitProducts
+from mixbridge.reconcile.crosswalk import crosswalk
 from mixbridge.routes import Fit
 from mixbridge.study import Study, crosscheck
 
@@ -24,6 +26,8 @@ __all__ = [
     "OpenMoments",
     "OptionError",
     "Study",
+    "UnitProducts",
     "crosscheck",
+    "crosswalk",
     "demo",
 ]

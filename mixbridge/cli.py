@@ -10,7 +10,7 @@ from pathlib import Path
 
 from mixbridge.demo import apiaries
 from mixbridge.demo import path as demo_path
-from mixbridge.errors import MixbridgeError
+from mixbridge.errors import DisagreementError, MixbridgeError, OptionError
 from mixbridge.routes import LEDGER_ROUTES
 from mixbridge.study import Study, crosscheck
 
@@ -41,7 +41,9 @@ examples:
       --unit patient --primary ml
   mixbridge check honey.csv --formula 'honey ~ forage' --unit apiary --json > record.json
 
-exit status: 0 done; 2 the input cannot be used (the message says what, where, and what to do)."""
+exit status: 0 done, and every required agreement met; 1 a required agreement is missing (the
+message says which routes disagree and why); 2 the input cannot be used (the message says what,
+where, and what to do)."""
 
 
 def main(arguments: Sequence[str] | None = None) -> int:
@@ -55,7 +57,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     Returns
     -------
     int
-        Exit status: 0 done, 2 unusable input.
+        Exit status: 0 done, 1 a required agreement is missing, 2 unusable input.
     """
     options = _parser().parse_args(arguments)
     action: Callable[[argparse.Namespace], int] = options.action
@@ -104,6 +106,14 @@ def _parser() -> argparse.ArgumentParser:
         "(default: drop)",
     )
     check.add_argument(
+        "--require",
+        action="append",
+        default=[],
+        metavar="TERM=CLASS",
+        help="every random-effects route must agree with the primary one in this term: identical, immaterial, "
+        "or visible (no conflict); may be repeated",
+    )
+    check.add_argument(
         "--json", action="store_true", help="print the whole record, unrounded, instead of the screen"
     )
     check.set_defaults(action=_check)
@@ -135,8 +145,25 @@ def _check(options: argparse.Namespace) -> int:
         incomplete_rows=options.incomplete_rows,
         trusted=False,
     )
+    required = [_requirement(text) for text in options.require]
     _show(study, options.json)
-    return DONE
+    status = DONE
+    for term, agree in required:
+        try:
+            study.require(term, agree)  # type: ignore[arg-type]  # checked there
+        except DisagreementError as missing:
+            print(f"mixbridge: {missing}", file=sys.stderr)
+            status = DIFFERS
+    return status
+
+
+def _requirement(text: str) -> tuple[str, str]:
+    term, separator, agree = text.rpartition("=")
+    if not separator or not term:
+        raise OptionError(
+            f"--require {text!r} is not of the form TERM=CLASS, for example 'forage=immaterial'."
+        )
+    return term, agree
 
 
 def _demo(options: argparse.Namespace) -> int:

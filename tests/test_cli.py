@@ -79,6 +79,18 @@ def test_unusable_input_has_exit_status_two_and_says_what_to_do(file, capsys, ar
     assert message in captured.err
 
 
+def test_required_agreement_decides_the_exit_status(file, capsys):
+    assert check(file, "--require", "forage=immaterial") == 0
+    assert check(file, "--require", "forage=immaterial", "--require", "feeding=visible") == 1
+    captured = capsys.readouterr()
+    assert "swamy_arora: conflicting" in captured.err
+    assert "Cross-check of" in captured.out
+    assert check(file, "--require", "forage") == 2
+    assert "TERM=CLASS" in capsys.readouterr().err
+    assert check(file, "--require", "forage=perfect") == 2
+    assert "immaterial" in capsys.readouterr().err
+
+
 def test_a_missing_file_is_unusable_input(tmp_path, capsys):
     assert check(str(tmp_path / "none.csv")) == 2
     assert "none.csv" in capsys.readouterr().err

@@ -1,0 +1,124 @@
+"""Where a gap comes from, whether it matters, and what a coefficient could be: questions of reconciliation."""
+
+from __future__ import annotations
+
+from typing import Literal
+
+import pandas as pd
+
+from mixbridge.errors import DisagreementError, IdentificationError, OptionError
+from mixbridge.reconcile.attribution import Attribution, attribute
+from mixbridge.reconcile.crosswalk import crosswalk
+from mixbridge.reconcile.efficiency import relative_efficiency
+from mixbridge.reconcile.path import Path, coefficient_path
+from mixbridge.reconcile.require import require
+from mixbridge.routes import Fit
+from mixbridge.study.correlated import StudyCorrelated
+
+__all__ = ["StudyReconciliation"]
+
+
+class StudyReconciliation(StudyCorrelated):
+    """The part of a study that explains gaps."""
+
+    def attribution(self, term: str, a: str | Fit, b: str | Fit | None = None) -> Attribution:
+        """Split the gap between two routes in one coefficient into named changes that add up exactly.
+
+        Parameters
+        ----------
+        term : str
+        a : str or Fit
+            A route, or a fit with conventions of its own.
+        b : str or Fit, optional
+            What it is compared with; the primary route unless given.
+
+        Returns
+        -------
+        Attribution
+            Of the coefficient, all through the ratio, and of the interval's half-width; for routes off the curve the
+            contrast instead. Print it for sentences.
+        """
+        left = self._named(a)
+        right = self._named(self.primary if b is None else b)
+        intervals = (self.intervals(left), self.intervals(right))
+        return attribute(self.curve, self.fits, term, left, right, intervals=intervals)
+
+    def path(self, term: str, points: int = 101) -> Path:
+        """Follow one coefficient from pooled to within, with every route's place and the exact set of ratios on it.
+
+        Parameters
+        ----------
+        term : str
+        points : int
+            Ratios shown.
+
+        Returns
+        -------
+        Path
+        """
+        return coefficient_path(self.curve, self.fits, term, points=points, confidence=self.confidence)
+
+    def efficiency(self, route: str | None = None) -> pd.DataFrame:
+        """Set the exact sampling variance of each quadratic route's components against the REML bound.
+
+        Parameters
+        ----------
+        route : str, optional
+            The fit at which variances are taken; the primary one unless given.
+
+        Returns
+        -------
+        DataFrame
+            By route.
+        """
+        return relative_efficiency(self.curve, self.fits, self._on_curve(route, {}))
+
+    def require(
+        self, term: str, agree: Literal["identical", "immaterial", "visible"] = "immaterial"
+    ) -> pd.DataFrame:
+        """Require that every random-effects route agrees with the primary one in a term.
+
+        Parameters
+        ----------
+        term : str
+        agree : {"identical", "immaterial", "visible"}
+            Worst class allowed.
+
+        Returns
+        -------
+        DataFrame
+            The rows compared.
+
+        Raises
+        ------
+        DisagreementError
+            With the explanation, and all routes compared.
+        """
+        table = self.agreement()
+        return require(table, term, agree, explain=lambda route: self._explained(term, route))
+
+    def crosswalk(self, route: str | None = None) -> pd.DataFrame:
+        """Name every quantity of a fit as each field names it, with formula and value.
+
+        Parameters
+        ----------
+        route : str, optional
+            The primary route unless given.
+
+        Returns
+        -------
+        DataFrame
+        """
+        fit = self.fit(self.primary if route is None else route)
+        return crosswalk(fit, self.moments.counts)
+
+    def _named(self, route: str | Fit) -> Fit:
+        if isinstance(route, Fit):
+            return route
+        return self.fits.get(route) or self.fit(route)
+
+    def _explained(self, term: str, route: str) -> str:
+        try:
+            return str(self.attribution(term, route))
+        except (IdentificationError, OptionError, DisagreementError) as reason:
+            return str(reason)

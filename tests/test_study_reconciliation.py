@@ -1,0 +1,54 @@
+"""Reconciliation as a user meets it: attribution, path, efficiency, requirement, words."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+
+import mixbridge
+
+
+@pytest.fixture(scope="module")
+def study():
+    data = mixbridge.demo.apiaries()
+    return mixbridge.crosscheck("honey ~ forage + feeding + altitude", data, unit="apiary", period="season")
+
+
+def test_attribution_speaks_of_the_gap_in_the_ledger(study):
+    row = study.ledger.set_index(["term", "route"]).loc[("feeding", "swamy_arora")]
+    found = study.attribution("feeding", "swamy_arora")
+    assert f"{row['estimate']:.5g}" in str(found)
+    causes = found.causes
+    assert len(causes) > 1
+    harmonic = study.attribution("feeding", study.fit("swamy_arora", between="harmonic"), "swamy_arora")
+    assert "swamy_arora" in str(harmonic)
+
+
+def test_path_holds_every_route_and_ends_where_pooled_and_within_are(study):
+    path = study.path("feeding")
+    low, high = path.range_all
+    for key in ("pooled", "within", "reml", "nerlove"):
+        assert low - 1e-9 <= study.fit(key).coefficients["feeding"] <= high + 1e-9
+    assert path.coefficient[0] == pytest.approx(study.fit("pooled").coefficients["feeding"], rel=1e-10)
+
+
+def test_requirement_names_every_route_compared(study):
+    assert study.require("forage")["agrees"].all()
+    with pytest.raises(mixbridge.DisagreementError) as raised:
+        study.require("feeding")
+    for key in study.fits:
+        assert key in str(raised.value)
+
+
+def test_efficiency_never_beats_the_bound_without_bias(study):
+    table = study.efficiency()
+    unbiased = table[table["measure"] == "variance"]
+    assert (unbiased[["unit_variance", "idiosyncratic_variance"]] <= 1.0 + 1e-10).all().all()
+
+
+def test_crosswalk_gives_the_numbers_of_the_fit(study):
+    table = study.crosswalk("ml").set_index("quantity")
+    fit = study.fit("ml")
+    assert table.loc["unit variance", "value"] == fit.unit_variance
+    np.testing.assert_allclose(table.loc["variance ratio", "value"], fit.ratio)
+    assert len(mixbridge.crosswalk(fit)) > 10
