@@ -32,7 +32,7 @@ BoolArray = NDArray[np.bool_]
 STATUSES = (FITTED, TRUNCATED, NOT_POSITIVE, NO_DF)
 """Statuses of a route on a replicate, by code."""
 
-SPECTRAL_ORDER = 600
+SPECTRAL_ORDER = 2000
 """Largest number of coordinates for which the spectrum is taken; above it, products by size are summed instead."""
 
 POOR = 1e5
