@@ -38,9 +38,9 @@ def page(results: Mapping[str, Result], profile: str, threads: str, loads: tuple
         "process and the same rounds as the package, so that a busy spell of the machine meets "
         "both; a ratio carries over to other machines better than a time does.",
         "Measured on: " + machine(threads),
-        f"Load average of the machine {loads[0]} before the run and {loads[1]} after it, of which the run itself makes up 1. "
-        "Rows in random order are looked up in tables that a program running beside would push out of the shared cache: "
-        "the first ratio below is the one that suffers.",
+        f"Load average of the machine {loads[0]} before the run and {loads[1]} after it, of which the run itself makes "
+        "up 1. Rows in random order are looked up in tables that a program running beside would push out of the shared "
+        "cache: the first ratio below is the one that suffers.",
         "## Summary",
         _markdown(_summary(results)),
     ]
