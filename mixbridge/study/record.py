@@ -17,7 +17,7 @@ from mixbridge.reconcile.identities import Identity, check_identities, identity_
 from mixbridge.report.record import study_record
 from mixbridge.report.screen import study_screen
 from mixbridge.routes import iterate
-from mixbridge.study.reconciliation import StudyReconciliation
+from mixbridge.study.resampling import StudyResampling
 
 __all__ = ["Study"]
 
@@ -25,7 +25,7 @@ COMPONENT_COLUMNS = ["unit_variance", "idiosyncratic_variance", "ratio", "icc"]
 
 
 @dataclass(frozen=True, eq=False, repr=False)
-class Study(StudyReconciliation):
+class Study(StudyResampling):
     """A cross-check: what `crosscheck` returns.
 
     Attributes

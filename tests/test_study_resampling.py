@@ -1,0 +1,40 @@
+"""Resampling as a user meets it."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+
+import mixbridge
+
+
+@pytest.fixture(scope="module")
+def study():
+    data = mixbridge.demo.apiaries()
+    return mixbridge.crosscheck("honey ~ forage + feeding + altitude", data, unit="apiary", period="season")
+
+
+def test_gaps_are_set_against_their_noise_under_the_fitted_model(study):
+    found = study.bootstrap(400, seed=1)
+    gaps = found.gaps(study.primary).set_index(["term", "route"])
+    row = study.ledger.set_index(["term", "route"]).loc[("feeding", "swamy_arora")]
+    np.testing.assert_allclose(gaps.loc[("feeding", "swamy_arora"), "gap"], row["gap"], rtol=1e-9)
+    # unit effects of these data are related to feeding, so the gap is far outside what the model alone gives
+    assert abs(gaps.loc[("feeding", "swamy_arora"), "gap_in_sd"]) > 10
+    assert abs(gaps.loc[("forage", "nerlove"), "gap_in_sd"]) < 4
+
+
+def test_draws_do_not_depend_on_workers(study):
+    one, two = (study.bootstrap(400, seed=2, workers=workers) for workers in (1, 2))
+    np.testing.assert_array_equal(one.replicates.routes["reml"].ratio, two.replicates.routes["reml"].ratio)
+
+
+def test_too_few_replicates_for_a_quantile_are_refused(study):
+    with pytest.raises(mixbridge.OptionError, match="replicates"):
+        study.bootstrap(50, seed=1).interval("feeding", "reml")
+
+
+def test_zero_tests_reject_where_the_exact_test_does(study):
+    table = study.zero_tests(199, seed=3).set_index("route")
+    assert table.loc["reml", "p_value"] <= 0.01
+    assert study.variance_tests(draws=0).set_index("test").loc["f_unit_intercepts", "p_value"] < 1e-6
