@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 from concurrent.futures import ThreadPoolExecutor
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
@@ -101,10 +102,10 @@ def given_routes(
     return chosen
 
 
-def fit_moments(moments: Moments, routes: Conventions) -> dict[str, Fit] | str:
-    """Fit every route to moments; a sentence with the reason where the design has lost its identification."""
+def fit_moments(moments: Callable[[], Moments], routes: Conventions) -> dict[str, Fit] | str:
+    """Fit every route to the moments that a call returns; where nothing can be fitted, say why."""
     try:
-        curve = curve_of(moments)
+        curve = curve_of(moments())
     except (IdentificationError, DataError) as error:
         return f"not estimable: {error}"
     return {
@@ -260,7 +261,7 @@ def _fit_alone(
     for turn, unit in enumerate(units):
         wanted = {key: routes[key] for key in routes if doubt[key][unit]}
         made = (
-            fit_moments(without(products, np.array([unit])), wanted)
+            fit_moments(partial(without, products, np.array([unit])), wanted)
             if turn < most
             else f"not fitted: {most} fits are done"
         )
