@@ -17,9 +17,8 @@ from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
+import scipy
 from numpy.typing import NDArray
-from scipy.stats import chi2
-from scipy.stats import f as f_law
 
 from mixbridge.errors import IdentificationError
 from mixbridge.moments import Moments, span_of
@@ -140,7 +139,7 @@ class Instrumented:
                 "estimate": estimates.to_numpy(),
                 "standard_error": errors.to_numpy(),
                 "z": z.to_numpy(),
-                "p_value": chi2.sf(z.to_numpy() ** 2, 1),
+                "p_value": scipy.stats.chi2.sf(z.to_numpy() ** 2, 1),
             }
         )
 
@@ -270,7 +269,7 @@ def _sargan(criterion: float, df: int) -> Overidentification:
     form = "residuals on instruments"
     if df == 0:
         return Overidentification(form, 0.0, 0, np.nan, "just identified: nothing is left to test")
-    return Overidentification(form, criterion, df, float(chi2.sf(criterion, df)), "")
+    return Overidentification(form, criterion, df, float(scipy.stats.chi2.sf(criterion, df)), "")
 
 
 def _within_contrast(
@@ -295,7 +294,7 @@ def _within_contrast(
     note = (
         "" if df == extra else f"{extra} instruments beyond the coefficients, {df} directions in the slopes"
     )
-    return Overidentification(form, statistic, df, float(chi2.sf(statistic, df)), note)
+    return Overidentification(form, statistic, df, float(scipy.stats.chi2.sf(statistic, df)), note)
 
 
 def _strength(
@@ -329,7 +328,7 @@ def _strength(
     for j, name in enumerate(roles.z2):
         inside, outside = float((explained[:, j] ** 2).sum()), float((unexplained[:, j] ** 2).sum())
         value = inside / q / (outside / df)
-        found.append((name, value, q, df, float(f_law.sf(value, q, df)), inside / (inside + outside)))
+        found.append((name, value, q, df, float(scipy.stats.f.sf(value, q, df)), inside / (inside + outside)))
     if len(roles.z2) > 1:
         turned = explained @ root_of(unexplained) * np.sqrt(df)
         smallest = float(np.linalg.svd(turned, compute_uv=False)[-1] ** 2) / q

@@ -22,7 +22,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
-from scipy import stats
+import scipy
 
 from mixbridge.errors import OptionError
 from mixbridge.inference.pivot import no_pivot, pivot_of
@@ -89,7 +89,7 @@ def _exact(curve: Curve, confidence: float) -> Iterator[_Row]:
     if why is None:
         pivot = pivot_of(curve)
         found = pivot.ratio_set(confidence)
-        middle = pivot.solve(float(stats.f.median(pivot.df_between, pivot.df_within)))
+        middle = pivot.solve(float(scipy.stats.f.median(pivot.df_between, pivot.df_within)))
         note = "estimate: where F(ratio) equals its median" + (f"; {found.note}" if found.note else "")
         ratios = np.array([middle, found.lower, found.upper])
         for quantity, values in (("ratio", ratios), ("icc", ratios / (1.0 + ratios))):
@@ -114,8 +114,8 @@ def _exact(curve: Curve, confidence: float) -> Iterator[_Row]:
         tail = 0.5 * (1.0 - confidence)
         row = (
             squares / df,
-            squares / stats.chi2.isf(tail, df),
-            squares / stats.chi2.ppf(tail, df),
+            squares / scipy.stats.chi2.isf(tail, df),
+            squares / scipy.stats.chi2.ppf(tail, df),
             True,
             f"df {df}",
         )
@@ -177,7 +177,10 @@ def _satterthwaite(curve: Curve, key: str, fit: Fit, confidence: float) -> Itera
             continue
         df = 2.0 * value**2 / float(variance)
         with np.errstate(over="ignore", divide="ignore"):
-            lower, upper = df * value / stats.chi2.isf(tail, df), df * value / stats.chi2.ppf(tail, df)
+            lower, upper = (
+                df * value / scipy.stats.chi2.isf(tail, df),
+                df * value / scipy.stats.chi2.ppf(tail, df),
+            )
         exact = quantity == "idiosyncratic_variance" and _is_within(curve, fit, value, df)
         note = f"df {df:.4g}" + ("; the same as exact_chi_square" if exact else "")
         yield _Row(quantity, key, "satterthwaite", value, float(lower), float(upper), exact, note)
@@ -191,7 +194,7 @@ def _is_within(curve: Curve, fit: Fit, value: float, df: float) -> bool:
 
 
 def _delta(key: str, fit: Fit, confidence: float) -> Iterator[_Row]:
-    z = float(stats.norm.isf(0.5 * (1.0 - confidence)))
+    z = float(scipy.stats.norm.isf(0.5 * (1.0 - confidence)))
     errors = fit.component_standard_errors
     estimates = (fit.unit_variance_raw, fit.idiosyncratic_variance, fit.ratio, fit.icc)
     for quantity, estimate in zip(QUANTITIES, estimates, strict=True):

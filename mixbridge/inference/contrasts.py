@@ -22,8 +22,8 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
+import scipy
 from numpy.typing import NDArray
-from scipy.stats import chi2
 
 from mixbridge.inference.robust_regression import regression_of
 from mixbridge.moments.products import UnitProducts
@@ -331,5 +331,13 @@ def _contrast(
     turned = scale.T @ gap
     statistic = float(turned @ np.linalg.solve(inner, turned))
     return Contrast(
-        name, variance, weights, statistic, df, float(chi2.sf(statistic, df)), smallest, largest, ""
+        name,
+        variance,
+        weights,
+        statistic,
+        df,
+        float(scipy.stats.chi2.sf(statistic, df)),
+        smallest,
+        largest,
+        "",
     )

@@ -24,8 +24,8 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+import scipy
 from numpy.typing import NDArray
-from scipy import stats
 
 from mixbridge.inference.satterthwaite import orthonormal
 from mixbridge.ratio import Curve
@@ -169,7 +169,7 @@ def _unless_zero(curve: Curve, fit: Fit, df: float, why: str) -> ExactLaw:
             "the ratio is estimated at zero or the sizes differ: the scale is not one mean square",
         )
     df_between = curve.units - curve.rank_between
-    chance = float(stats.f.cdf(1.0 / (1.0 + curve.sizes[0] * fit.ratio), df_between, curve.df_within))
+    chance = float(scipy.stats.f.cdf(1.0 / (1.0 + curve.sizes[0] * fit.ratio), df_between, curve.df_within))
     text = (
         f"{why}; t({df:g}) but for samples with a zero unit variance, "
         f"probability {chance:.2g} at these estimates"

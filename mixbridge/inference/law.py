@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import special, stats
+import scipy
 
 __all__ = ["Reference"]
 
@@ -49,7 +49,7 @@ class Reference:
         tail = (1.0 - confidence) / 2.0
         if not self.available:
             return np.nan
-        return float(stats.norm.isf(tail) if np.isinf(self.df) else stats.t.isf(tail, self.df))
+        return float(scipy.stats.norm.isf(tail) if np.isinf(self.df) else scipy.stats.t.isf(tail, self.df))
 
     def interval(self, estimate: float, standard_error: float, confidence: float) -> tuple[float, float]:
         """Return the two-sided interval."""
@@ -61,7 +61,9 @@ class Reference:
         if not self.available:
             return np.nan
         size = abs(statistic)
-        return float(2.0 * (stats.norm.sf(size) if np.isinf(self.df) else stats.t.sf(size, self.df)))
+        return float(
+            2.0 * (scipy.stats.norm.sf(size) if np.isinf(self.df) else scipy.stats.t.sf(size, self.df))
+        )
 
     def log_p_value(self, statistic: float) -> float:
         """Return the natural logarithm of `p_value`; it stays finite where the p value underflows."""
@@ -69,7 +71,7 @@ class Reference:
             return np.nan
         size = abs(statistic)
         if np.isinf(self.df):
-            return float(np.log(2.0) + stats.norm.logsf(size))
+            return float(np.log(2.0) + scipy.stats.norm.logsf(size))
         p = self.p_value(statistic)
         if p > 1e-290 or np.isinf(size):
             return float(np.log(p)) if p > 0.0 else -np.inf
@@ -77,7 +79,10 @@ class Reference:
         a, x = self.df / 2.0, 1.0 / (1.0 + size / self.df * size)
         log_x = float(-np.log1p(size / self.df * size))
         return float(
-            a * log_x + np.log(special.hyp2f1(a, 0.5, a + 1.0, x)) - np.log(a) - special.betaln(a, 0.5)
+            a * log_x
+            + np.log(scipy.special.hyp2f1(a, 0.5, a + 1.0, x))
+            - np.log(a)
+            - scipy.special.betaln(a, 0.5)
         )
 
     def joint_p_value(self, statistic: float, q: int) -> float:
@@ -85,5 +90,7 @@ class Reference:
         if not self.available:
             return np.nan
         return float(
-            stats.chi2.sf(q * statistic, q) if np.isinf(self.df) else stats.f.sf(statistic, q, self.df)
+            scipy.stats.chi2.sf(q * statistic, q)
+            if np.isinf(self.df)
+            else scipy.stats.f.sf(statistic, q, self.df)
         )

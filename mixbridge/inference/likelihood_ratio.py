@@ -19,8 +19,8 @@ from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 
 import numpy as np
+import scipy
 from numpy.typing import NDArray
-from scipy import stats
 
 from mixbridge.errors import OptionError
 from mixbridge.inference.spectrum import Spectrum
@@ -98,7 +98,7 @@ def observed_ratio(curve: Curve, kind: Kind, psi: float) -> float:
 
 def mixture_p(statistic: float) -> float:
     """Return the p-value under the half-and-half mixture of chi-squares with 0 and 1 degrees of freedom."""
-    return 1.0 if statistic <= 0.0 else 0.5 * float(stats.chi2.sf(statistic, 1))
+    return 1.0 if statistic <= 0.0 else 0.5 * float(scipy.stats.chi2.sf(statistic, 1))
 
 
 def null_laws(

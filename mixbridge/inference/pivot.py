@@ -22,10 +22,9 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
+import scipy
 from numpy.typing import NDArray
-from scipy import stats
 from scipy.linalg import solve_triangular
-from scipy.optimize import brentq
 
 from mixbridge.ratio import Curve
 
@@ -96,7 +95,7 @@ class Pivot:
 
     def p_value(self, psi: float = 0.0) -> float:
         """Return the probability of a larger F at ψ."""
-        return float(stats.f.sf(self.statistic(psi), self.df_between, self.df_within))
+        return float(scipy.stats.f.sf(self.statistic(psi), self.df_between, self.df_within))
 
     def solve(self, value: float) -> float:
         """Return the ψ >= 0 at which ``F(psi)`` equals `value`; zero if F(0) is not above it."""
@@ -105,8 +104,8 @@ class Pivot:
     def ratio_set(self, confidence: float) -> RatioSet:
         """Return the ψ >= 0 whose F lies between two quantiles, half of ``1 - confidence`` beyond each."""
         tail = 0.5 * (1.0 - confidence)
-        low = float(stats.f.ppf(tail, self.df_between, self.df_within))
-        high = float(stats.f.isf(tail, self.df_between, self.df_within))
+        low = float(scipy.stats.f.ppf(tail, self.df_between, self.df_within))
+        high = float(scipy.stats.f.isf(tail, self.df_between, self.df_within))
         at_zero = self.statistic(0.0)
         if at_zero < low:
             note = (
@@ -170,4 +169,4 @@ def decreasing_root(function: Callable[[float], float], start: float) -> float:
         a, b = b, 16.0 * b
         if b > 1e300:
             return np.inf
-    return float(brentq(function, a, b, xtol=EPS * a, rtol=4.0 * EPS))
+    return float(scipy.optimize.brentq(function, a, b, xtol=EPS * a, rtol=4.0 * EPS))

@@ -19,9 +19,8 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
+import scipy
 from numpy.typing import NDArray
-from scipy import stats
-from scipy.optimize import brentq, minimize_scalar
 from scipy.special import lambertw
 
 from mixbridge.ratio import Curve
@@ -56,7 +55,7 @@ class Region:
 def profile_region(curve: Curve, kind: Kind, certificate: Certificate, confidence: float) -> Region:
     """Return the intervals at a level; the certificate supplies the optimum and all stationary points."""
     profile = Profile(curve, kind)
-    allowance = float(stats.chi2.ppf(confidence, 1))
+    allowance = float(scipy.stats.chi2.ppf(confidence, 1))
     lowest = float(profile.values(np.array([certificate.psi])).deviance[0])
 
     def excess(psi: float) -> float:
@@ -120,7 +119,7 @@ def _pieces(
     knots.append(beyond)
     heights = [excess(knot) for knot in knots]
     crossings = [
-        float(brentq(excess, a, b, xtol=1e-18 * b, rtol=1e-14))
+        float(scipy.optimize.brentq(excess, a, b, xtol=1e-18 * b, rtol=1e-14))
         for a, b, left, right in zip(knots[:-1], knots[1:], heights[:-1], heights[1:], strict=True)
         if (left <= 0.0) != (right <= 0.0)
     ]
@@ -134,7 +133,7 @@ def _minimum(function: Callable[[FloatArray], FloatArray], place: FloatArray) ->
     heights = function(place)
     best = int(heights.argmin())
     a, b = place[max(best - 1, 0)], place[min(best + 1, place.size - 1)]
-    found = minimize_scalar(
+    found = scipy.optimize.minimize_scalar(
         lambda t: float(function(np.array([t]))[0]),
         bounds=(a, b),
         method="bounded",

@@ -14,8 +14,8 @@ from memory).
 from __future__ import annotations
 
 import numpy as np
+import scipy
 from numpy.typing import ArrayLike, NDArray
-from scipy.optimize import brentq
 
 __all__ = ["probability_negative"]
 
@@ -73,7 +73,7 @@ def _lower(w: FloatArray, d: FloatArray) -> tuple[float, float]:
         high = end * (1.0 - 2.0**-k)
         if slope(high) < 0.0:
             break
-    x = float(brentq(slope, 0.0, high, rtol=1e-14, xtol=1e-300))
+    x = float(scipy.optimize.brentq(slope, 0.0, high, rtol=1e-14, xtol=1e-300))
     base = 1.0 + 2.0 * w * x
     bend = 2.0 * float((d * (w / base) ** 2).sum()) + 1.0 / x**2
     width = 1.0 / np.sqrt(bend)

@@ -27,7 +27,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
-from scipy import stats
+import scipy
 
 from mixbridge.errors import DataError
 from mixbridge.inference.likelihood_ratio import NullLaw, mixture_p, null_laws, observed_ratio
@@ -170,13 +170,21 @@ def _multiplier_rows(curve: Curve) -> list[_Row]:
     two, one, three = found.two_sided, found.one_sided, found.standardised
     large = "large-sample in the number of units"
     rows = [
-        (TESTS[1], two, "chi-square", 1.0, float(stats.chi2.sf(two, 1)), f"two-sided; {large}", found.reason),
+        (
+            TESTS[1],
+            two,
+            "chi-square",
+            1.0,
+            float(scipy.stats.chi2.sf(two, 1)),
+            f"two-sided; {large}",
+            found.reason,
+        ),
         (
             TESTS[2],
             one,
             "normal",
             np.nan,
-            float(stats.norm.sf(one)),
+            float(scipy.stats.norm.sf(one)),
             f"against a positive variance; {large}",
             found.reason,
         ),
@@ -185,7 +193,7 @@ def _multiplier_rows(curve: Curve) -> list[_Row]:
             three,
             "normal",
             np.nan,
-            float(stats.norm.sf(three)),
+            float(scipy.stats.norm.sf(three)),
             f"against a positive variance; mean and variance exact, shape {large}",
             found.reason_standardised,
         ),

@@ -14,9 +14,8 @@ from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
+import scipy
 from numpy.typing import NDArray
-from scipy import stats
-from scipy.optimize import brentq
 
 from mixbridge.errors import OptionError
 from mixbridge.inference.pivot import RatioSet, no_pivot, pivot_of
@@ -198,7 +197,7 @@ def coefficient_path(
     if not 0.0 < confidence < 1.0:
         raise OptionError(f"confidence={confidence!r} is not allowed; allowed: a number between 0 and 1.")
     at, size = curve.names.index(term), median_size(curve)
-    width = float(stats.norm.isf(0.5 * (1.0 - confidence))) if quantile is None else float(quantile)
+    width = float(scipy.stats.norm.isf(0.5 * (1.0 - confidence))) if quantile is None else float(quantile)
     seen = along(curve, search_grid(curve, 2 * points))
     turns = extrema(curve, seen, at)
     changes = _changes(curve, seen, at, width)
@@ -285,7 +284,7 @@ def _changes(curve: Curve, seen: Along, at: int, quantile: float) -> list[tuple[
             if sign(b) != after:
                 continue
         crossings = [
-            float(brentq(end, a, b, args=(side,), xtol=1e-16 * b, rtol=1e-13))
+            float(scipy.optimize.brentq(end, a, b, args=(side,), xtol=1e-16 * b, rtol=1e-13))
             for side in sides
             if end(a, side) * end(b, side) < 0.0
         ]

@@ -19,8 +19,8 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+import scipy
 from numpy.typing import NDArray
-from scipy.optimize import brentq
 
 from mixbridge.ratio import Curve
 
@@ -151,7 +151,9 @@ def extrema(curve: Curve, seen: Along, at: int) -> list[float]:
         if slope[i] * slope[i + 1] >= 0.0:
             continue
         a, b = float(seen.psi[i]), float(seen.psi[i + 1])
-        root = float(brentq(lambda psi: _at(curve, psi)[2][at], a, b, xtol=1e-16 * b, rtol=1e-14))
+        root = float(
+            scipy.optimize.brentq(lambda psi: _at(curve, psi)[2][at], a, b, xtol=1e-16 * b, rtol=1e-14)
+        )
         height = _at(curve, root)[0][at]
         if min(abs(height - beta[0]), abs(height - beta[-1])) > FLAT * unit:
             found.append(root)

@@ -8,8 +8,8 @@ from types import MappingProxyType
 
 import numpy as np
 import pandas as pd
+import scipy
 from numpy.typing import NDArray
-from scipy import stats
 
 from mixbridge.errors import IdentificationError, OptionError
 from mixbridge.inference.references import degrees_of_freedom
@@ -183,7 +183,7 @@ def half_width_factors(replicates: Replicates, key: str, confidence: float, rule
         raise OptionError.not_among("rule", rule, RULES)
     fit = fit_of(replicates, key)
     df = degrees_of_freedom(replicates.curve, fit, np.eye(len(fit.terms)), rule)
-    return np.asarray(stats.t.isf((1.0 - confidence) / 2.0, df))
+    return np.asarray(scipy.stats.t.isf((1.0 - confidence) / 2.0, df))
 
 
 def class_shares(

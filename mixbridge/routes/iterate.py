@@ -6,8 +6,8 @@ from collections.abc import Iterator
 
 import numpy as np
 import pandas as pd
+import scipy
 from numpy.typing import NDArray
-from scipy.optimize import brentq
 
 from mixbridge.errors import IdentificationError, OptionError
 from mixbridge.ratio import Curve
@@ -136,7 +136,7 @@ def _best_ratio(curve: Curve, inside: float, means: FloatArray) -> float:
     slopes = np.array([slope(psi) for psi in grid])
     found = [0.0] if slopes[0] >= 0.0 else []
     for i in np.flatnonzero((slopes[:-1] < 0.0) & (slopes[1:] >= 0.0)):
-        found.append(float(brentq(slope, grid[i], grid[i + 1], xtol=1e-300, rtol=8.9e-16)))
+        found.append(float(scipy.optimize.brentq(slope, grid[i], grid[i + 1], xtol=1e-300, rtol=8.9e-16)))
     return min(found, key=deviance)
 
 
