@@ -266,9 +266,4 @@ def _fit_alone(
             else f"not fitted: {most} fits are done"
         )
         for key in wanted:
-            if isinstance(made, str):
-                blank = Refits.empty(1, found[key].coefficients.shape[1])
-                blank.status[0] = made
-                found[key].put(np.array([unit]), blank)
-            else:
-                found[key].put_fit(int(unit), made[key])
+            found[key].put_alone(int(unit), made if isinstance(made, str) else made[key])

@@ -57,8 +57,9 @@ def solve_pairs(pairs: Pairs) -> tuple[FloatArray, FloatArray, BoolArray]:
         p, q = pairs.values / scale
         det = a * d - b * c
         idiosyncratic, unit = (d * p - b * q) / det, (a * q - c * p) / det
-        # the rows are scaled to one, so a determinant this small loses four digits: solved with the route's own code
-        safe = pairs.possible & (np.abs(det) > 1e-4) & np.isfinite(idiosyncratic + unit)
+        # a difference this small loses four digits, and rows this parallel are for the route's own code to judge
+        kept = (np.abs(det) > 1e-4 * (np.abs(a * d) + np.abs(b * c))) & (np.abs(det) > 1e-11)
+        safe = pairs.possible & kept & np.isfinite(idiosyncratic + unit)
     return idiosyncratic, unit, safe
 
 

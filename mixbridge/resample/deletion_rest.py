@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from mixbridge.errors import DataError, OptionError
 from mixbridge.moments import Moments, factor_from_rows
-from mixbridge.moments.factors import eigen_factor, factor_from_products
+from mixbridge.moments.factors import factor_from_products
 from mixbridge.moments.products import UnitProducts
 
 __all__ = ["keyed", "moments_of", "without"]
@@ -24,8 +24,8 @@ DIGITS_LOST = "ill-conditioned within products without a second pass over the ro
 """Note of `Moments` that widens the tolerance for dependencies: the products, not the rows, carry the digits."""
 
 NOTHING = 1e-7
-"""Length of a column within units, as a share of that over all units, that products cannot tell from rounding: its
-square is 1e-14."""
+"""Length of a direction within units, as a share of the longest, that products cannot tell from rounding: its square
+is 1e-14."""
 CONSTANT = 1e-12
 """Spread, as a share of the spread over all units, that is rounding of a column with one value in the units left."""
 
@@ -123,10 +123,19 @@ def _within_factor(packed: FloatArray, frame: FloatArray, k: int) -> tuple[Float
     total = total + np.triu(total, 1).T
     factor = factor_from_products(total)
     if factor is None:
-        factor = eigen_factor(total) @ frame
+        factor = _cut_factor(total) @ frame
         factor[:, np.sqrt((factor**2).sum(axis=0)) <= NOTHING * np.sqrt((frame**2).sum(axis=0))] = 0.0
         return factor, DIGITS_LOST
     return factor @ frame, "within products of units"
+
+
+def _cut_factor(products: FloatArray) -> FloatArray:
+    """Return a factor of products from which directions that are rounding are taken out."""
+    length = np.sqrt(np.maximum(np.diag(products), 0.0))
+    safe = np.where(length > 0.0, length, 1.0)
+    values, vectors = np.linalg.eigh(products / np.outer(safe, safe))
+    kept = np.where(values > NOTHING**2 * values[-1], values, 0.0)
+    return np.asarray(np.sqrt(kept)[:, None] * vectors.T * length)
 
 
 def _between_factor(rows: FloatArray) -> FloatArray:

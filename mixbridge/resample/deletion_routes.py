@@ -87,8 +87,12 @@ class Refits:
             getattr(self, field.name).setflags(write=False)
         return self
 
-    def put_fit(self, at: int, fit: Fit) -> None:
-        """Take one panel from a fit of its own."""
+    def put_alone(self, at: int, fit: Fit | str) -> None:
+        """Take one panel from a fit of its own, or why there is none."""
+        if isinstance(fit, str):
+            self.put(np.array([at]), Refits.empty(1, self.coefficients.shape[1]))
+            self.status[at], self.exact[at] = fit, True
+            return
         self.coefficients[at] = fit.beta
         with np.errstate(invalid="ignore"):
             self.standard_errors[at] = np.sqrt(np.diag(fit.covariance_array))
@@ -196,7 +200,7 @@ def _quadratic(
     pairs = COMPONENTS[route](sums, conventions)
     idiosyncratic, unit, safe = solve_pairs(pairs)
     positive = idiosyncratic > 0.0
-    with np.errstate(invalid="ignore"):
+    with np.errstate(invalid="ignore", divide="ignore"):
         ratio = np.where(safe & positive, np.maximum(unit, 0.0) / idiosyncratic, 0.0)
     line = _curve_line(sums, ratio)
     doubt = ~safe | (np.abs(idiosyncratic) < DOUBT * line.residual / sums.rows)

@@ -27,7 +27,7 @@ from mixbridge.resample.jackknife_verdicts import Limits
 from mixbridge.routes import Fit, fit_route
 from mixbridge.routes.fitting import named_route
 
-__all__ = ["NOT_LEARNED_AGAIN", "fits_of", "interval_multipliers", "leave_one_out"]
+__all__ = ["NOT_LEARNED_AGAIN", "estimated_routes", "fits_of", "interval_multipliers", "leave_one_out"]
 
 FloatArray = NDArray[np.float64]
 
@@ -94,11 +94,7 @@ def leave_one_out(
     _refuse_other_rows(curve, products)
     chosen = given_routes(curve, _with_primary(routes, primary), conventions)
     fits = fits_of(curve, chosen)
-    estimated = {
-        key: chosen[key]
-        for key, fit in fits.items()
-        if np.isfinite(fit.idiosyncratic_variance) or fit.estimated
-    }
+    estimated = estimated_routes(fits, chosen)
     axes, centre = centre_of(curve, products, fits, estimated, primary)
     refits = delete_each(axes, fits, estimated, centre, own_fits=own_fits, workers=workers, progress=progress)
     found = LeaveOneOut(
@@ -120,6 +116,15 @@ def fits_of(curve: Curve, routes: Conventions) -> dict[str, Fit]:
     """Fit every route to all units; conventions are resolved."""
     return {
         key: fit_route(curve, key, _stated(key, conventions), NO_ORDER) for key, conventions in routes.items()
+    }
+
+
+def estimated_routes(fits: Mapping[str, Fit], routes: Conventions) -> dict[str, Mapping[str, object]]:
+    """Return the routes that gave estimates, or a variance, from all units; the others give none without some."""
+    return {
+        key: conventions
+        for key, conventions in routes.items()
+        if fits[key].estimated or np.isfinite(fits[key].idiosyncratic_variance)
     }
 
 

@@ -246,7 +246,7 @@ class LeaveOneOut:
         made = {}
         for key, fit in self.fits.items():
             made[key] = Refits.empty(1, len(self.terms))
-            made[key].put_fit(0, fit)
+            made[key].put_alone(0, fit)
         return made
 
     def _largest(self) -> FloatArray:
