@@ -1,5 +1,7 @@
 """mixbridge: one random-intercept model, every route to its estimates, one ledger of where they agree and differ."""
 
+from importlib import import_module
+
 from mixbridge import demo
 from mixbridge.errors import (
     DataError,
@@ -10,10 +12,10 @@ from mixbridge.errors import (
     OptionError,
 )
 from mixbridge.moments import Moments, OpenMoments
-from mixbridge.moments.products import UnitProducts
-from mixbridge.reconcile.crosswalk import crosswalk
 from mixbridge.routes import Fit
 from mixbridge.study import Study, crosscheck
+
+_LATER = {"UnitProducts": "mixbridge.moments.products", "crosswalk": "mixbridge.reconcile.crosswalk"}
 
 __all__ = [
     "DataError",
@@ -31,3 +33,10 @@ __all__ = [
     "crosswalk",
     "demo",
 ]
+
+
+def __getattr__(name: str) -> object:
+    """Hand on names whose files are loaded when first asked for."""
+    if name in _LATER:
+        return getattr(import_module(_LATER[name]), name)
+    raise AttributeError(f"module 'mixbridge' has no attribute {name!r}")

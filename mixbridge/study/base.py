@@ -6,21 +6,22 @@ from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, field, replace
 from functools import cached_property
 from types import MappingProxyType
+from typing import TYPE_CHECKING
 
 import numpy as np
 
-from mixbridge.correlated import Mundlak
 from mixbridge.errors import IdentificationError, OptionError
-from mixbridge.inference.kenward_roger import kenward_roger
-from mixbridge.inference.references import default_rule, pick_reference
-from mixbridge.inference.robust import RobustCovariance, robust_covariance
-from mixbridge.inference.robust_two_way import PeriodBlock, two_way_covariance
 from mixbridge.moments import Block, Moments, OpenMoments
-from mixbridge.moments.products import UnitProducts, collect_products
 from mixbridge.panel import Panel
 from mixbridge.ratio import Curve, curve_of
-from mixbridge.reconcile.agreement import Interval
 from mixbridge.routes import LEDGER_ROUTES, Differences, Fit, differences_of, fit_route
+
+if TYPE_CHECKING:
+    from mixbridge.correlated import Mundlak
+    from mixbridge.inference.robust import RobustCovariance
+    from mixbridge.inference.robust_two_way import PeriodBlock
+    from mixbridge.moments.products import UnitProducts
+    from mixbridge.reconcile.agreement import Interval
 
 __all__ = ["StudyBase"]
 
@@ -50,6 +51,8 @@ class StudyBase:
     @cached_property
     def products(self) -> UnitProducts:
         """Products of every unit's rows, taken in one more pass when first asked for."""
+        from mixbridge.moments.products import collect_products
+
         return collect_products(self._blocks, self.opened, self.moments, self.panel.unit_keys)
 
     @property
@@ -97,6 +100,9 @@ class StudyBase:
         -------
         RobustCovariance
         """
+        from mixbridge.inference.robust import robust_covariance
+        from mixbridge.inference.robust_two_way import two_way_covariance
+
         name = None if multiplier in (None, "default") else str(multiplier)
         curve = self._curve_for(fit.conventions)
         products = self.products
@@ -140,6 +146,10 @@ class StudyBase:
         dict of str to Interval
             By term. With Kenward-Roger the standard errors are those of the adjusted covariance.
         """
+        from mixbridge.inference.kenward_roger import kenward_roger
+        from mixbridge.inference.references import default_rule, pick_reference
+        from mixbridge.reconcile.agreement import Interval
+
         if not fit.estimated:
             return dict.fromkeys(fit.terms, Interval(*[np.nan] * 4))
         name = rule or str(fit.conventions.get("reference", "default"))

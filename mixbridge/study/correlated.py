@@ -4,27 +4,18 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import replace
-from typing import Literal, Self
+from typing import TYPE_CHECKING, Literal, Self
 
 import numpy as np
 import pandas as pd
 
-from mixbridge.correlated import (
-    Coordinates,
-    Instrumented,
-    Mundlak,
-    NoisyMeans,
-    SlopeCertificate,
-    amemiya_macurdy,
-    hausman_taylor,
-    mundlak,
-    noisy_means,
-    unit_constant_table,
-)
 from mixbridge.errors import OptionError
-from mixbridge.inference.references import Robust
 from mixbridge.routes import Fit
 from mixbridge.study.questions import StudyQuestions
+
+if TYPE_CHECKING:
+    from mixbridge.correlated import Coordinates, Instrumented, Mundlak, NoisyMeans, SlopeCertificate
+    from mixbridge.inference.references import Robust
 
 __all__ = ["StudyCorrelated"]
 
@@ -50,6 +41,8 @@ class StudyCorrelated(StudyQuestions):
         Study
             With `unit_means`, `coordinates`, `mean_tests`, `noisy_means` and `unit_constant` besides the rest.
         """
+        from mixbridge.correlated import mundlak
+
         if form != "mundlak":
             raise OptionError.not_among("form", form, ("mundlak",))
         if self.unit_means is not None:
@@ -127,6 +120,8 @@ class StudyCorrelated(StudyQuestions):
         -------
         NoisyMeans
         """
+        from mixbridge.correlated import noisy_means
+
         fit = self.fit(self.primary if route is None else route)
         return noisy_means(self._unit_means(), fit, sampled=sampled, population=population)
 
@@ -138,6 +133,8 @@ class StudyCorrelated(StudyQuestions):
         DataFrame
             One row per column and route, with what identifies each and what the unit means do to its meaning.
         """
+        from mixbridge.correlated import unit_constant_table
+
         record = self._unit_means()
         raw = replace(
             self,
@@ -164,6 +161,8 @@ class StudyCorrelated(StudyQuestions):
         Instrumented
             With the overidentification test and the strength of the first stage.
         """
+        from mixbridge.correlated import amemiya_macurdy, hausman_taylor
+
         if estimator == "hausman_taylor":
             return hausman_taylor(self.moments, unrelated, terms=self.panel.terms)
         if estimator == "amemiya_macurdy":

@@ -3,23 +3,19 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from typing import Literal
+from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 import pandas as pd
 
 from mixbridge.errors import IdentificationError, OptionError
-from mixbridge.inference.comparison import criteria, same_column_space, variance_explained
-from mixbridge.inference.component_intervals import component_intervals
-from mixbridge.inference.contrasts import contrast_table, contrast_terms, contrasts
-from mixbridge.inference.effects import effect_variances, predicted_effects
-from mixbridge.inference.hypotheses import HypothesisResult, test_hypothesis
-from mixbridge.inference.references import Robust, inference_table
-from mixbridge.inference.robust import RobustCovariance
-from mixbridge.inference.variance_tests import variance_tests
-from mixbridge.inference.zero_estimate import zero_probabilities
 from mixbridge.routes import Fit
 from mixbridge.study.base import StudyBase
+
+if TYPE_CHECKING:
+    from mixbridge.inference.hypotheses import HypothesisResult
+    from mixbridge.inference.references import Robust
+    from mixbridge.inference.robust import RobustCovariance
 
 __all__ = ["StudyQuestions"]
 
@@ -55,6 +51,8 @@ class StudyQuestions(StudyBase):
             One row per rule and covariance; ``exact`` marks what holds exactly under the model in this design,
             ``why`` gives the reason.
         """
+        from mixbridge.inference.references import inference_table
+
         fit = self.fit(self.primary if route is None else route, **conventions)
         found = (
             {}
@@ -85,6 +83,8 @@ class StudyQuestions(StudyBase):
         -------
         HypothesisResult
         """
+        from mixbridge.inference.hypotheses import test_hypothesis
+
         fit = self.fit(self.primary if route is None else route)
         if covariance not in ("model", *ROBUST, "two_way"):
             raise OptionError.not_among("covariance", covariance, ("model", *ROBUST, "two_way"))
@@ -106,6 +106,8 @@ class StudyQuestions(StudyBase):
         DataFrame
             By unit key.
         """
+        from mixbridge.inference.effects import predicted_effects
+
         return predicted_effects(self.opened, self._on_curve(route, conventions))
 
     def effect_variances(self, route: str | None = None, **conventions: object) -> pd.DataFrame:
@@ -123,6 +125,8 @@ class StudyQuestions(StudyBase):
         DataFrame
             ``quantity``, ``value`` (a variance), ``meaning``.
         """
+        from mixbridge.inference.effects import effect_variances
+
         return effect_variances(self.curve, self.opened, self._on_curve(route, conventions))
 
     def contrasts(self, route: str | None = None, by: Literal["all", "term"] = "all") -> pd.DataFrame:
@@ -140,6 +144,8 @@ class StudyQuestions(StudyBase):
         DataFrame
             Not rejecting proves nothing, and choosing an estimator by the result distorts size and coverage.
         """
+        from mixbridge.inference.contrasts import contrast_table, contrast_terms, contrasts
+
         fit = self._on_curve(route, {})
         if by == "term":
             return contrast_terms(self.curve, fit, self.fit("within"))
@@ -165,6 +171,8 @@ class StudyQuestions(StudyBase):
         DataFrame
             One row per test and reference.
         """
+        from mixbridge.inference.variance_tests import variance_tests
+
         return variance_tests(self.curve, self.fits, seed, draws, progress=progress)
 
     def component_intervals(self, confidence: float | None = None) -> pd.DataFrame:
@@ -180,6 +188,8 @@ class StudyQuestions(StudyBase):
         DataFrame
             ``quantity, route, method, estimate, lower, upper, exact, note``.
         """
+        from mixbridge.inference.component_intervals import component_intervals
+
         return component_intervals(
             self.curve, self.fits, self.confidence if confidence is None else confidence
         )
@@ -192,6 +202,8 @@ class StudyQuestions(StudyBase):
         DataFrame
             By route.
         """
+        from mixbridge.inference.zero_estimate import zero_probabilities
+
         return zero_probabilities(self.curve, self.fits)
 
     def criteria(self) -> pd.DataFrame:
@@ -202,6 +214,8 @@ class StudyQuestions(StudyBase):
         DataFrame
             ML, and REML with and without ``½ log|X'X|``.
         """
+        from mixbridge.inference.comparison import criteria
+
         return criteria(self.curve, {key: self.fits.get(key) or self.fit(key) for key in ("ml", "reml")})
 
     def compare(self, other: StudyBase, likelihood: Literal["ml", "reml"] = "ml") -> pd.DataFrame:
@@ -219,6 +233,8 @@ class StudyQuestions(StudyBase):
         DataFrame
             Criteria of both, one below the other.
         """
+        from mixbridge.inference.comparison import criteria, same_column_space
+
         if likelihood not in ("ml", "reml"):
             raise OptionError.not_among("likelihood", likelihood, ("ml", "reml"))
         same = (self.panel.outcome, self.panel.n) == (other.panel.outcome, other.panel.n)
@@ -256,6 +272,8 @@ class StudyQuestions(StudyBase):
         DataFrame
             ``measure``, ``value``, ``definition``.
         """
+        from mixbridge.inference.comparison import variance_explained
+
         return variance_explained(self.curve, self._on_curve(route, {}))
 
     def _on_curve(self, route: str | None, conventions: Mapping[str, object]) -> Fit:
@@ -268,6 +286,8 @@ class StudyQuestions(StudyBase):
 
     def _given(self, found: RobustCovariance) -> Robust:
         """Hand a robust covariance on in the form that tables and hypotheses take."""
+        from mixbridge.inference.references import Robust
+
         if found.kind != "CR2":
             return Robust(found.covariance_array)
         return Robust(

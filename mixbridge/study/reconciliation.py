@@ -2,24 +2,58 @@
 
 from __future__ import annotations
 
-from typing import Literal
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, Literal
 
 import pandas as pd
 
 from mixbridge.errors import DisagreementError, IdentificationError, OptionError
-from mixbridge.reconcile.attribution import Attribution, attribute
-from mixbridge.reconcile.crosswalk import crosswalk
-from mixbridge.reconcile.efficiency import relative_efficiency
-from mixbridge.reconcile.path import Path, coefficient_path
-from mixbridge.reconcile.require import require
 from mixbridge.routes import Fit
 from mixbridge.study.correlated import StudyCorrelated
+
+if TYPE_CHECKING:
+    from mixbridge.reconcile.attribution import Attribution
+    from mixbridge.reconcile.path import Path
 
 __all__ = ["StudyReconciliation"]
 
 
 class StudyReconciliation(StudyCorrelated):
     """The part of a study that explains gaps."""
+
+    def agreement(
+        self,
+        immaterial: float = 0.1,
+        half_width: float = 0.1,
+        routes: Sequence[str] | None = None,
+        reference: str | None = None,
+    ) -> pd.DataFrame:
+        """Set every route beside the primary one.
+
+        Parameters
+        ----------
+        immaterial : float
+            Largest immaterial gap, in standard errors of the primary route.
+        half_width : float
+            Largest immaterial relative difference of interval half-widths.
+        routes : sequence of str, optional
+            Routes to show; all of the study unless given.
+        reference : str, optional
+            One reference distribution for all intervals, a key of `mixbridge.inference.references.RULES`.
+
+        Returns
+        -------
+        DataFrame
+            ``term, route, estimate, standard_error, lower, upper, gap, gap_in_se, verdict, reason``.
+        """
+        from mixbridge.reconcile.agreement import Thresholds, ledger
+
+        chosen = {
+            key: self.fits.get(key) or self.fit(key)
+            for key in dict.fromkeys([*(routes or self.routes), self.primary])
+        }
+        intervals = {key: self.intervals(fit, reference) for key, fit in chosen.items()}
+        return ledger(self.curve, chosen, intervals, self.primary, Thresholds(immaterial, half_width))
 
     def attribution(self, term: str, a: str | Fit, b: str | Fit | None = None) -> Attribution:
         """Split the gap between two routes in one coefficient into named changes that add up exactly.
@@ -38,6 +72,8 @@ class StudyReconciliation(StudyCorrelated):
             Of the coefficient, all through the ratio, and of the interval's half-width; for routes off the curve the
             contrast instead. Print it for sentences.
         """
+        from mixbridge.reconcile.attribution import attribute
+
         left = self._named(a)
         right = self._named(self.primary if b is None else b)
         intervals = (self.intervals(left), self.intervals(right))
@@ -56,6 +92,8 @@ class StudyReconciliation(StudyCorrelated):
         -------
         Path
         """
+        from mixbridge.reconcile.path import coefficient_path
+
         return coefficient_path(self.curve, self.fits, term, points=points, confidence=self.confidence)
 
     def efficiency(self, route: str | None = None) -> pd.DataFrame:
@@ -71,6 +109,8 @@ class StudyReconciliation(StudyCorrelated):
         DataFrame
             By route.
         """
+        from mixbridge.reconcile.efficiency import relative_efficiency
+
         return relative_efficiency(self.curve, self.fits, self._on_curve(route, {}))
 
     def require(
@@ -94,6 +134,8 @@ class StudyReconciliation(StudyCorrelated):
         DisagreementError
             With the explanation, and all routes compared.
         """
+        from mixbridge.reconcile.require import require
+
         table = self.agreement()
         return require(table, term, agree, explain=lambda route: self._explained(term, route))
 
@@ -109,6 +151,8 @@ class StudyReconciliation(StudyCorrelated):
         -------
         DataFrame
         """
+        from mixbridge.reconcile.crosswalk import crosswalk
+
         fit = self.fit(self.primary if route is None else route)
         return crosswalk(fit, self.moments.counts)
 

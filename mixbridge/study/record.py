@@ -2,22 +2,20 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
-from typing import Any, Literal
+from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 import pandas as pd
 
 from mixbridge.errors import OptionError
 from mixbridge.moments import column_table
-from mixbridge.reconcile.agreement import Thresholds, ledger
-from mixbridge.reconcile.identities import Identity, check_identities, identity_table
-from mixbridge.report.record import study_record
-from mixbridge.report.screen import study_screen
 from mixbridge.routes import iterate
 from mixbridge.study.resampling import StudyResampling
+
+if TYPE_CHECKING:
+    from mixbridge.reconcile.identities import Identity
 
 __all__ = ["Study"]
 
@@ -89,44 +87,16 @@ class Study(StudyResampling):
     @cached_property
     def identity_results(self) -> tuple[Identity, ...]:
         """What theory says must agree, checked on these data."""
+        from mixbridge.reconcile.identities import check_identities
+
         return check_identities(self.curve, self.fits, None)
 
     @property
     def identities(self) -> pd.DataFrame:
         """Identities as a table. These check the arithmetic, not the model."""
+        from mixbridge.reconcile.identities import identity_table
+
         return identity_table(self.identity_results)
-
-    def agreement(
-        self,
-        immaterial: float = 0.1,
-        half_width: float = 0.1,
-        routes: Sequence[str] | None = None,
-        reference: str | None = None,
-    ) -> pd.DataFrame:
-        """Set every route beside the primary one.
-
-        Parameters
-        ----------
-        immaterial : float
-            Largest immaterial gap, in standard errors of the primary route.
-        half_width : float
-            Largest immaterial relative difference of interval half-widths.
-        routes : sequence of str, optional
-            Routes to show; all of the study unless given.
-        reference : str, optional
-            One reference distribution for all intervals, a key of `mixbridge.inference.references.RULES`.
-
-        Returns
-        -------
-        DataFrame
-            ``term, route, estimate, standard_error, lower, upper, gap, gap_in_se, verdict, reason``.
-        """
-        chosen = {
-            key: self.fits.get(key) or self.fit(key)
-            for key in dict.fromkeys([*(routes or self.routes), self.primary])
-        }
-        intervals = {key: self.intervals(fit, reference) for key, fit in chosen.items()}
-        return ledger(self.curve, chosen, intervals, self.primary, Thresholds(immaterial, half_width))
 
     def iterate(self, kind: Literal["gls", "minque"], start: str | float = "within") -> pd.DataFrame:
         """Return the path of an iterated estimator: ``"gls"`` or ``"minque"``.
@@ -192,10 +162,14 @@ class Study(StudyResampling):
         Everything in it can be recomputed from these moments. JSON-ready; what is not a finite number is a
         string or None.
         """
+        from mixbridge.report.record import study_record
+
         return study_record(self)
 
     def __str__(self) -> str:
         """Return the first screen: what was fitted, whether the routes agree, where not, components."""
+        from mixbridge.report.screen import study_screen
+
         return study_screen(self)
 
     def __repr__(self) -> str:

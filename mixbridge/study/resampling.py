@@ -3,11 +3,14 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from typing import TYPE_CHECKING
 
 import pandas as pd
 
-from mixbridge.resample import Bootstrap, bootstrap, zero_tests
 from mixbridge.study.reconciliation import StudyReconciliation
+
+if TYPE_CHECKING:
+    from mixbridge.resample import Bootstrap
 
 __all__ = ["StudyResampling"]
 
@@ -42,6 +45,8 @@ class StudyResampling(StudyReconciliation):
             Laws of components, coefficients and gaps between routes. It assumes the model that an audit questions.
             `first_difference` is not in the moments and is left out.
         """
+        from mixbridge.resample import bootstrap
+
         return bootstrap(
             self.curve,
             self.fits,
@@ -65,4 +70,6 @@ class StudyResampling(StudyReconciliation):
         DataFrame
             One row per route.
         """
+        from mixbridge.resample import zero_tests
+
         return zero_tests(self.curve, self.fits, replicates, seed)

@@ -7,6 +7,7 @@ import numpy as np
 from mixbridge.inference.contrasts import contrasts
 from mixbridge.inference.pivot import no_pivot, pivot_of
 from mixbridge.inference.variance_tests import multiplier_of
+from mixbridge.moments import noise
 from mixbridge.reconcile.identities.plain import EPS
 from mixbridge.reconcile.identities.registry import Compared, Unmet, identity
 from mixbridge.reconcile.identities.setting import Setting, multiple
@@ -36,15 +37,17 @@ def one_chi_square(setting: Setting) -> Compared | Unmet:
     if not found:
         return Unmet("shared directions: no column varies both within units and between their means")
     contrast = next(item for item in found if item.name == "within - gls")
-    if not np.isfinite(contrast.statistic):
+    if not contrast.smallest > 1e-4 or setting.snapped:
         return Unmet(
-            f"positive definite difference of covariances: smallest eigenvalue {contrast.smallest:.2g}"
+            "digits left in the difference of covariances: its smallest eigenvalue, relative to the within "
+            f"covariance, is {contrast.smallest:.2g}"
         )
     solved, unit = setting.wide[fit.ratio], setting.with_means.unit**2
     residual = curve.at(fit.ratio).residual
     right = (residual - unit * solved.residual) / fit.idiosyncratic_variance
     size = max(residual / fit.idiosyncratic_variance, 1.0)
-    lost = curve.condition * setting.engine_condition(fit.ratio) / min(contrast.smallest, 1.0)
+    inner = float(np.linalg.cond(curve.within_root))
+    lost = curve.condition * setting.engine_condition(fit.ratio) * inner / min(contrast.smallest, 1.0)
     amplified = solved.condition * unit * solved.total / residual + lost
     return Compared(
         f"{contrast.df} shared directions, ratio {fit.ratio:.6g}",
@@ -53,11 +56,20 @@ def one_chi_square(setting: Setting) -> Compared | Unmet:
         "within - GLS contrast, from the difference of covariances",
         "Wald statistic of the unit means, from residual sums of squares",
         abs(contrast.statistic - right) / size,
-        multiple(setting.with_means.rank) * amplified,
+        multiple(setting.with_means.rank) * amplified + _stored(setting) / min(contrast.smallest, 1.0),
         f"64 (columns + 1) x 2.2e-16 x (condition with means {solved.condition:.3g} x total over residual sum of "
-        f"squares + condition of X over the smallest relative eigenvalue {contrast.smallest:.3g} of the difference); "
+        f"squares + condition of X x condition of QX {inner:.3g} over the smallest relative eigenvalue "
+        f"{contrast.smallest:.3g} of the difference), plus the stored rounding of within deviations over the same; "
         "relative to the residual sum of squares over the variance",
     )
+
+
+def _stored(setting: Setting) -> float:
+    """Return the largest rounding of a stored column relative to its deviations from unit means."""
+    moments = setting.curve.moments
+    length = np.sqrt((moments.within[:, :-1] ** 2).sum(axis=0))
+    floor = noise(moments)[:-1]
+    return float(np.max(floor[length > floor] / length[length > floor], initial=0.0))
 
 
 @identity(
@@ -69,6 +81,9 @@ def one_chi_square(setting: Setting) -> Compared | Unmet:
 )
 def multiplier_is_score(setting: Setting) -> Compared | Unmet:
     """Compare the residual form of the statistic with the derivative of the profile deviance."""
+    missing = setting.missing("pooled")
+    if missing:
+        return Unmet(missing)
     curve = setting.curve
     left = multiplier_of(curve)
     if not np.isfinite(left.two_sided):
@@ -136,6 +151,9 @@ def pivot_is_f(setting: Setting) -> Compared | Unmet:
 def inverted_pivot(setting: Setting) -> Compared | Unmet:
     """Compare the tail probability at the upper end of the 95% set with 0.025."""
     curve = setting.curve
+    missing = setting.missing("pooled")
+    if missing:
+        return Unmet(missing)
     why = no_pivot(curve)
     if why is not None:
         return Unmet(why)
@@ -152,6 +170,6 @@ def inverted_pivot(setting: Setting) -> Compared | Unmet:
         "tail probability of the pivot at the upper end",
         "half of one minus the level",
         abs(left - 0.025) / 0.025,
-        1e-9 + multiple(curve.rank) * curve.condition * curve.n,
+        5e-10 + multiple(curve.rank) * curve.condition * curve.n,
         "relative stop of the root at 4 roundings, amplified by at most n in the tail probability",
     )
