@@ -246,13 +246,13 @@ GRUNFELD = {
         ["swamy_arora, scale=gls_residuals"],
         ["swamy_arora, scale=gls_residuals_n"],
     ],
-    "ml": [["ml"], ["ml, scale=gls_residuals"]],
+    "ml": [["ml"], ["ml, scale=gls_residuals"], ["ml, covariance=observed_information"]],
 }
 
 
 @pytest.mark.parametrize("route", GRUNFELD)
-def test_grunfeld_columns_leave_one_route_with_ties_of_scale_only(route):
-    """Balanced: `minque` at prior 0 is `wallace_hussain`, a theorem; the scales differ by less than was printed."""
+def test_grunfeld_columns_leave_one_route_with_ties_of_its_errors_only(route):
+    """Balanced: `minque` at prior 0 is `wallace_hussain`, a theorem; the errors differ by less than was printed."""
     match = matched("grunfeld", route)
     assert labels(match) == GRUNFELD[route]
     assert match.unique == (len(GRUNFELD[route]) == 1)

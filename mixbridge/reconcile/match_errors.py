@@ -1,6 +1,7 @@
 """Standard errors of one fit under every convention of presentation, in stages of rising cost.
 
-- model: scale variants of the model-based covariance, and Kenward-Roger for `reml`;
+- model: scale variants of the model-based covariance; Kenward-Roger for `reml`; for `ml` and `reml` the inverse of the
+  joint observed information of coefficients and ratio;
 - unit sums: CR0 and, with each multiplier, CR1: one pass over the unit products per distinct regression;
 - adjusted: CR2 and CR3 with each multiplier: one small factorisation per unit besides;
 - two-way: by unit and by period: passes over the rows, where periods are known.
@@ -18,18 +19,21 @@ from mixbridge.inference.kenward_roger import kenward_roger
 from mixbridge.inference.robust import DEFAULTS, MULTIPLIERS, multiplier_value, robust_covariance
 from mixbridge.inference.robust_regression import Regression
 from mixbridge.inference.robust_two_way import TWO_WAY_MULTIPLIERS
+from mixbridge.reconcile.match_ratio import points_at
 from mixbridge.reconcile.match_space import Searchable
 from mixbridge.reconcile.match_values import Fitted
-from mixbridge.routes import axes_of
+from mixbridge.routes import Profile, axes_of
 
-__all__ = ["STAGES", "Presented", "errors_at"]
+__all__ = ["JOINT", "STAGES", "Presented", "errors_at", "joint_errors"]
 
 FloatArray = NDArray[np.float64]
 Presented = tuple[dict[str, str], FloatArray]
 """Conventions of presentation that differ from the defaults, and standard errors."""
 
+JOINT = "observed_information"
+"""Name of a covariance that is searched and is no convention of `study.fit`."""
 STAGES: Mapping[str, str] = {
-    "model": "model-based, every scale, and Kenward-Roger",
+    "model": "model-based, every scale, Kenward-Roger, joint observed information",
     "unit sums": "CR0 and CR1, every multiplier",
     "adjusted": "CR2 and CR3, every multiplier",
     "two-way": "by unit and by period, every multiplier",
@@ -98,6 +102,10 @@ def _model(fitted: Fitted) -> Iterator[Presented]:
         seen.append(scale)
         with np.errstate(invalid="ignore"):
             yield ({} if name == "own" else {"scale": name}), lengths * np.sqrt(scale)
+    if fitted.route in ("ml", "reml") and fit.estimated:
+        joint = joint_errors(fitted)
+        if joint is not None:
+            yield {"covariance": JOINT}, joint
     if fitted.route == "reml" and fit.estimated:
         try:
             adjusted = kenward_roger(curve, fit).covariance
@@ -105,6 +113,33 @@ def _model(fitted: Fitted) -> Iterator[Presented]:
             return
         with np.errstate(invalid="ignore"):
             yield {"reference": "kenward_roger"}, np.sqrt(np.diag(adjusted))
+
+
+def joint_errors(fitted: Fitted) -> FloatArray | None:
+    """Return standard errors from the observed information of coefficients and ratio together.
+
+    With ``D`` the profile deviance, its inverse has for the coefficients the block
+    ``sigma_u^2 (X'V_0^-1 X)^-1 + b'(psi) b'(psi)' 2 / D''(psi)``: some programs print it for mixed models.
+
+    Parameters
+    ----------
+    fitted : Fitted
+        Of `ml` or `reml`.
+
+    Returns
+    -------
+    ndarray or None
+        None at ratio 0, and where the deviance is not convex.
+    """
+    fit, curve = fitted.fit, fitted.side.curve
+    if not 0.0 < fit.ratio < np.inf:
+        return None
+    psi = np.array([fit.ratio])
+    bend = float(Profile(curve, "reml" if fitted.route == "reml" else "ml").values(psi).bend[0])
+    if not bend > 0.0:
+        return None
+    slope = points_at(curve, np.arange(curve.rank), psi).slope[0]
+    return np.asarray(np.sqrt(fit.scale * fitted.root_lengths**2 + 2.0 * slope**2 / bend))
 
 
 def _multiplied(

@@ -24,7 +24,7 @@ from numpy.typing import NDArray
 from mixbridge.ratio import Curve
 from mixbridge.reconcile.printed import PrintedFigure
 
-__all__ = ["RatioUnion", "compatible_ratios"]
+__all__ = ["Points", "RatioUnion", "compatible_ratios", "points_at"]
 
 FloatArray = NDArray[np.float64]
 Interval = tuple[float, float]
@@ -64,8 +64,16 @@ class RatioUnion:
 
 
 @dataclass(frozen=True, slots=True)
-class _Nodes:
-    """Points of the curve in increasing ψ: coefficients and v for the terms asked for, and r."""
+class Points:
+    """Points of the curve in increasing ψ.
+
+    Attributes
+    ----------
+    psi, residual : ndarray of shape (M,)
+        Ratios, and r in whitened units.
+    beta, spread, slope : ndarray of shape (M, q)
+        For the coefficients asked for: b_j in the units of the data, v in whitened units, and b_j'.
+    """
 
     psi: FloatArray
     beta: FloatArray
@@ -73,10 +81,11 @@ class _Nodes:
     residual: FloatArray
     slope: FloatArray
 
-    def __add__(self, other: _Nodes) -> _Nodes:
+    def __add__(self, other: Points) -> Points:
+        """Join two sets of points."""
         psi = np.concatenate([self.psi, other.psi])
         order = np.argsort(psi, kind="stable")
-        return _Nodes(
+        return Points(
             psi[order],
             np.concatenate([self.beta, other.beta])[order],
             np.concatenate([self.spread, other.spread])[order],
@@ -113,7 +122,7 @@ def compatible_ratios(
     low = np.array([figure.widest[0] for figure in named]) - slack
     high = np.array([figure.widest[1] for figure in named]) + slack
     fine = FINE * 2.0 * np.array([figure.half_unit for figure in named])
-    nodes = _points(curve, at, np.concatenate([[0.0], np.logspace(-6, 8, 57) / curve.sizes[0]]))
+    nodes = points_at(curve, at, np.concatenate([[0.0], np.logspace(-6, 8, 57) / curve.sizes[0]]))
     complete = False
     for _ in range(ROUNDS):
         open_left = np.flatnonzero(_undecided(nodes, low, high, fine, curve.within_residual))
@@ -123,7 +132,7 @@ def compatible_ratios(
         if nodes.psi.size + open_left.size > MOST:
             break
         a, b = nodes.psi[open_left], nodes.psi[open_left + 1]
-        nodes = nodes + _points(curve, at, np.where(a > 0.0, np.sqrt(a * b), b / 16.0))
+        nodes = nodes + points_at(curve, at, np.where(a > 0.0, np.sqrt(a * b), b / 16.0))
     by_term = tuple(
         (curve.names[term], _inside(curve, at, j, nodes, (float(low[j]), float(high[j]))))
         for j, term in enumerate(at)
@@ -134,8 +143,21 @@ def compatible_ratios(
     return RatioUnion(common, by_term, one_row_units, complete)
 
 
-def _points(curve: Curve, at: NDArray[np.intp], psi: FloatArray) -> _Nodes:
-    """Evaluate b_j, v, r and b_j' at several ratios."""
+def points_at(curve: Curve, at: NDArray[np.intp], psi: FloatArray) -> Points:
+    """Evaluate coefficients, v, r and the derivatives of the coefficients at several ratios.
+
+    Parameters
+    ----------
+    curve : Curve
+    at : ndarray of int
+        Places of the coefficients.
+    psi : ndarray
+        Ratios.
+
+    Returns
+    -------
+    Points
+    """
     p, count = curve.rank, psi.size
     weight = curve.sizes / (1.0 + np.multiply.outer(psi, curve.sizes))
     flat = curve.between_products.reshape(curve.sizes.size, -1)
@@ -152,11 +174,11 @@ def _points(curve: Curve, at: NDArray[np.intp], psi: FloatArray) -> _Nodes:
     c = np.column_stack([-white, np.ones(count)])
     pull = np.matmul(s2, c[:, :, None])[:, :p, 0]
     slope = -np.einsum("mpj,mp->mj", by_row, pull)
-    return _Nodes(psi, beta, np.einsum("pj,mpj->mj", rows[0], by_row), pivot**2, slope)
+    return Points(psi, beta, np.einsum("pj,mpj->mj", rows[0], by_row), pivot**2, slope)
 
 
 def _undecided(
-    nodes: _Nodes, low: FloatArray, high: FloatArray, fine: FloatArray, within_residual: float
+    nodes: Points, low: FloatArray, high: FloatArray, fine: FloatArray, within_residual: float
 ) -> NDArray[np.bool_]:
     """Tell for each interval between nodes whether some coefficient can still cross an end of its figure there."""
     a, b = nodes.beta[:-1], nodes.beta[1:]
@@ -175,7 +197,7 @@ def _undecided(
 
 
 def _inside(
-    curve: Curve, at: NDArray[np.intp], j: int, nodes: _Nodes, figure: Interval
+    curve: Curve, at: NDArray[np.intp], j: int, nodes: Points, figure: Interval
 ) -> tuple[Interval, ...]:
     """Return the intervals in which one coefficient lies inside its figure."""
     beta = nodes.beta[:, j]
@@ -192,7 +214,7 @@ def _inside(
         between = beta[(nodes.psi >= low) & (nodes.psi <= high)]
         if between.size == 0:
             middle = np.sqrt(low * high) if low > 0.0 else high / 2.0
-            between = _points(curve, at[j : j + 1], np.array([middle])).beta[:, 0]
+            between = points_at(curve, at[j : j + 1], np.array([middle])).beta[:, 0]
         # the node furthest from either end of the figure decides: nodes at the cuts themselves are rounding
         depth = np.minimum(between - figure[0], figure[1] - between)
         if depth[np.argmax(np.abs(depth))] >= 0.0:
@@ -205,10 +227,10 @@ def _inside(
 
 def _crossing(curve: Curve, at: NDArray[np.intp], level: float, a: float, b: float) -> float:
     """Find where a coefficient crosses a level in a bracket: Newton steps kept inside, else halving."""
-    rising = bool(_points(curve, at, np.array([b])).beta[0, 0] > level)
+    rising = bool(points_at(curve, at, np.array([b])).beta[0, 0] > level)
     psi = np.sqrt(a * b) if a > 0.0 else b / 2.0
     for _ in range(100):
-        point = _points(curve, at, np.array([psi]))
+        point = points_at(curve, at, np.array([psi]))
         gap, slope = float(point.beta[0, 0]) - level, float(point.slope[0, 0])
         if (gap > 0.0) == rising:
             b = psi
