@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 
-from benchmarks import arrays, frames, growth, likelihood, memory, resampling
+from benchmarks import arrays, frames, growth, inference, likelihood, memory, resampling
 from benchmarks.profiles import Profile
 from benchmarks.results import Result
 
@@ -31,6 +31,7 @@ PROBLEMS = {
     "likelihood": Problem("REML with its certificate", likelihood.likelihood),
     "rows": Problem("All routes after the moments, by number of rows", growth.rows),
     "sizes": Problem("All routes after the moments, by number of distinct unit sizes", growth.sizes),
+    "inference": Problem("Inference after the moments", inference.inference),
     "resampling": Problem("Parametric bootstrap in moment space", resampling.resampling),
 }
 """Add a function that takes a profile and returns a result, and a line here."""
