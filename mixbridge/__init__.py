@@ -13,9 +13,14 @@ from mixbridge.errors import (
 )
 from mixbridge.moments import Moments, OpenMoments
 from mixbridge.routes import Fit
-from mixbridge.study import Study, crosscheck
+from mixbridge.study import Study, adopt, crosscheck
 
-_LATER = {"UnitProducts": "mixbridge.moments.products", "crosswalk": "mixbridge.reconcile.crosswalk"}
+_LATER = {
+    "UnitProducts": "mixbridge.moments.products",
+    "crosswalk": "mixbridge.reconcile.crosswalk",
+    "match_reported": "mixbridge.reconcile.match",
+    "read_figures": "mixbridge.reconcile.printed_file",
+}
 
 __all__ = [
     "DataError",
@@ -29,9 +34,12 @@ __all__ = [
     "OptionError",
     "Study",
     "UnitProducts",
+    "adopt",
     "crosscheck",
     "crosswalk",
     "demo",
+    "match_reported",
+    "read_figures",
 ]
 
 

@@ -1,4 +1,4 @@
-"""The command line: ``mixbridge check`` and ``mixbridge demo``."""
+"""The command line: ``mixbridge check``, ``mixbridge match`` and ``mixbridge demo``."""
 
 from __future__ import annotations
 
@@ -44,6 +44,24 @@ examples:
 exit status: 0 done, and every required agreement met; 1 a required agreement is missing (the
 message says which routes disagree and why); 2 the input cannot be used (the message says what,
 where, and what to do)."""
+
+
+MATCH = """\
+Searches every route under every convention for those that are compatible with figures somebody printed:
+coefficients, standard errors, components, ICC, quasi-demeaning weights, log-likelihoods, test statistics.
+Figures are taken as printed, to half a unit of their last digit. A match shows compatibility, not where
+the figures came from, and never intent."""
+
+MATCH_EXAMPLES = """\
+a file of figures (TOML); figures are text, so that trailing zeros count:
+  "b:forage" = "0.235"
+  "se:forage" = "0.025"
+  icc = "0.48"
+
+example:
+  mixbridge match figures.toml honey.csv --formula 'honey ~ forage + feeding' --unit apiary
+
+exit status: 0 some convention matches every figure; 1 none does; 2 the input cannot be used."""
 
 
 def main(arguments: Sequence[str] | None = None) -> int:
@@ -117,6 +135,25 @@ def _parser() -> argparse.ArgumentParser:
         "--json", action="store_true", help="print the whole record, unrounded, instead of the screen"
     )
     check.set_defaults(action=_check)
+    match = commands.add_parser(
+        "match",
+        help="find which conventions are compatible with printed figures",
+        description=MATCH,
+        epilog=MATCH_EXAMPLES,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    match.add_argument("figures", metavar="FIGURES", help="TOML or CSV file of figures as printed")
+    match.add_argument("file", metavar="FILE", help="CSV or Parquet file with the data")
+    match.add_argument("--formula", required=True, help="outcome ~ covariates")
+    match.add_argument("--unit", required=True, help="column of the grouping factor")
+    match.add_argument("--period", help="column that orders the rows of a unit")
+    match.add_argument(
+        "--robust",
+        choices=("auto", "always", "if_needed", "never"),
+        default="auto",
+        help="whether robust covariances are searched too (default: auto, all where that is quick)",
+    )
+    match.set_defaults(action=_match)
     demo = commands.add_parser(
         "demo",
         help="cross-check invented data on honey yields",
@@ -155,6 +192,16 @@ def _check(options: argparse.Namespace) -> int:
             print(f"mixbridge: {missing}", file=sys.stderr)
             status = DIFFERS
     return status
+
+
+def _match(options: argparse.Namespace) -> int:
+    from mixbridge.reconcile.match import match_reported
+    from mixbridge.reconcile.printed_file import read_figures
+
+    study = crosscheck(options.formula, options.file, unit=options.unit, period=options.period, trusted=False)
+    found = match_reported(read_figures(options.figures), study, robust=options.robust)
+    print(found)
+    return DONE if found.all_matched else DIFFERS
 
 
 def _requirement(text: str) -> tuple[str, str]:

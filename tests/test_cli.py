@@ -97,7 +97,7 @@ def test_a_missing_file_is_unusable_input(tmp_path, capsys):
 
 
 def test_help_teaches(capsys):
-    for arguments in (["--help"], ["check", "--help"], ["demo", "--help"]):
+    for arguments in (["--help"], ["check", "--help"], ["match", "--help"], ["demo", "--help"]):
         with pytest.raises(SystemExit) as ended:
             main(arguments)
         assert ended.value.code == 0
@@ -114,3 +114,21 @@ def test_module_runs_as_a_program():
     assert done.returncode == 0
     assert done.stderr == ""
     assert "Invented data" in done.stdout
+
+
+def test_match_reads_figures_and_says_what_is_compatible(file, tmp_path, capsys):
+    fit = mixbridge.crosscheck(FORMULA, mixbridge.demo.apiaries(), unit="apiary").fit("swamy_arora")
+    figures = tmp_path / "figures.toml"
+    printed = {
+        "b:feeding": f"{fit.coefficients['feeding']:.4f}",
+        "se:feeding": f"{fit.standard_errors['feeding']:.4f}",
+        "unit_variance": f"{fit.unit_variance:.3f}",
+    }
+    figures.write_text("".join(f'"{key}" = "{value}"\n' for key, value in printed.items()), encoding="utf-8")
+    arguments = ["match", str(figures), file, "--formula", FORMULA, "--unit", "apiary", "--robust", "never"]
+    assert main(arguments) == 0
+    assert "swamy_arora" in capsys.readouterr().out
+    figures.write_text('"b:feeding" = "7.77"\n"b:forage" = "1.23"\n', encoding="utf-8")
+    assert main(arguments) == 1
+    figures.write_text('"b:fodder" = "7.77"\n', encoding="utf-8")
+    assert main(arguments) == 2

@@ -148,7 +148,8 @@ class Fit:
     @property
     def standard_errors(self) -> pd.Series:
         """Standard errors by term, the square roots of the diagonal of `covariance`."""
-        values = np.sqrt(np.diag(self.covariance_array))
+        squares = np.diag(self.covariance_array)
+        values = np.sqrt(np.where(squares >= 0.0, squares, np.nan))  # a two-way variance may be negative
         return pd.Series(values, index=list(self.terms), name=self.route)
 
     @property
