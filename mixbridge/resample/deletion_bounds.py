@@ -46,10 +46,12 @@ WIDTHS = (0.3, 0.2, 0.15, 0.1, 0.07, 0.05, 0.03, 0.02, 0.01)
 """Half-widths tried for ``[a, b]``, relative to ψ (on the boundary: b in units of one over the largest size)."""
 CONVEX = 0.3
 """Share of the second derivative at the optimum that its bound on ``[a, b]`` must keep for all units."""
-SLACK = 0.25
+SLACK = 0.5
 """Share of the slope at the nearer end that the bound on an interval must keep for all units."""
 LEVERAGE = 0.5
 """Leverage of a unit up to which the bounds are of use."""
+MANY = 5000
+"""Units from which the cheaper bound of r'' on ``[a, b]`` is tried first; below, the interval should rather be wide."""
 MOST = 400
 """Largest grid; a likelihood that asks for more is searched in full."""
 
@@ -171,7 +173,7 @@ def neighbourhood(axes: UnitAxes, kind: Kind, psi: float) -> Neighbourhood | Non
         return Values(**table, m=m)
 
     inside = float(solved(everything.within, axes.order, axes.inner).residual[0])
-    ends = _ends(values, psi, float(curve.sizes[-1]), inside)
+    ends = _ends(values, psi, float(curve.sizes[-1]), inside, first=curve.units > MANY)
     if ends is None:
         return None
     a, b, plain = ends
@@ -197,11 +199,11 @@ def neighbourhood(axes: UnitAxes, kind: Kind, psi: float) -> Neighbourhood | Non
 
 
 def _ends(
-    values: Callable[[FloatArray], Values], psi: float, largest: float, inside: float
+    values: Callable[[FloatArray], Values], psi: float, largest: float, inside: float, *, first: bool
 ) -> tuple[float, float, bool] | None:
     """Return an interval on which the deviance of all units is convex with room to spare, and by which bound."""
     bend = float(values(np.array([psi])).bend[0])
-    for plain in (True, False):
+    for plain in (first, not first):
         for width in WIDTHS:
             a, b = (psi / (1.0 + width), psi * (1.0 + width)) if psi > 0.0 else (0.0, width / largest)
             left, right = values(np.array([a])), values(np.array([b]))

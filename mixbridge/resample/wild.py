@@ -124,6 +124,7 @@ def wild_bootstrap(
         factor=factor,
         direction=direction / length,
         gram=pulls.T @ pulls,
+        energy=_energy(regression),
         observed=_parts(tables, np.ones((1, units)), scores.shape[1]),
         drawn=_draw(tables, scores.shape[1], kind, count, seed, listed=listed, workers=workers),
         weights=kind,
@@ -214,6 +215,19 @@ def _pulls(regression: Regression, direction: FloatArray) -> FloatArray:
         mapped[left == right] /= 2.0
         pulls += regression.products.packed @ mapped
     return np.asarray(pulls)
+
+
+def _energy(regression: Regression) -> float:
+    """Return the residual sum of squares."""
+    r = regression.rank
+    total = float(regression.weights @ regression.means()[:, r] ** 2)
+    if regression.deviations:
+        left, right = np.triu_indices(regression.from_framed.shape[0])
+        e = regression.from_framed[:, r]
+        total += float(
+            regression.products.packed.sum(axis=0) @ (np.where(left == right, 1.0, 2.0) * e[left] * e[right])
+        )
+    return total
 
 
 def _combination(curve: Curve, regression: Regression, hypothesis: str | Mapping[str, float]) -> FloatArray:

@@ -20,6 +20,8 @@ TIE = 1e-9
 exchanged give the same size."""
 NOTHING = 1e-12
 """Variance, as a share of the squares it is made of, that is rounding."""
+CARRIED = 1e-20
+"""Variance, as a share of the sum of squared residuals, that is rounding: a unit that carries the direction alone."""
 WIDEST = 1e6
 """Distance, in standard errors, beyond which an interval counts as unbounded."""
 
@@ -63,6 +65,8 @@ class WildBootstrap:
     length, factor, direction, gram : float, float, ndarray, ndarray
         Length of the combination in the coordinates of the regression, multiplier of CR1, direction of the
         combination, ``sum g_i g_i'``.
+    energy : float
+        Residual sum of squares of the regression.
     observed, drawn : Parts
         With all weights one; of the replicates.
     weights : str
@@ -82,6 +86,7 @@ class WildBootstrap:
     factor: float
     direction: FloatArray
     gram: FloatArray
+    energy: float
     observed: Parts
     drawn: Parts
     weights: str
@@ -182,14 +187,14 @@ class WildBootstrap:
         """Return the first value away from the estimate that is rejected."""
         inside, step = 0.0, 0.25 * self.standard_error
         outside = step
-        while self._p_value(self.estimate + side * outside) > level:
+        while self._p_value(self.estimate + side * outside) > level * (1.0 + TIE):
             inside = outside
             outside = outside + step if outside < 8.0 * self.standard_error else 1.5 * outside
             if outside > WIDEST * self.standard_error:
                 return side * np.inf
         for _ in range(60):
             middle = 0.5 * (inside + outside)
-            if self._p_value(self.estimate + side * middle) > level:
+            if self._p_value(self.estimate + side * middle) > level * (1.0 + TIE):
                 inside = middle
             else:
                 outside = middle
@@ -242,4 +247,5 @@ class WildBootstrap:
         crossed = ((parts.score_pull + parts.pull_pull * shift) * delta).sum(axis=1)
         common = ((delta @ self.gram) * delta).sum(axis=1)
         variance = own - 2.0 * crossed + common
-        return np.sqrt(self.factor * np.where(variance > NOTHING * (own + common), variance, 0.0))
+        floor = np.maximum(NOTHING * (own + common), CARRIED * (self.energy + shift**2))
+        return np.sqrt(self.factor * np.where(variance > floor, variance, 0.0))
