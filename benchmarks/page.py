@@ -32,7 +32,6 @@ def load() -> str:
 def page(results: Mapping[str, Result], profile: str, threads: str, loads: tuple[str, str]) -> str:
     """Return the documentation page; `loads` are the load averages before and after the run."""
     parts = [
-        "---\norphan: true\n---",
         "# Speed and memory",
         f"Written by `python -m benchmarks --profile {profile} --write docs/performance.md`. Rivals run in the same "
         "process and the same rounds as the package, so that a busy spell of the machine meets "
