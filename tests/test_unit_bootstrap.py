@@ -338,7 +338,7 @@ def test_refusals_of_the_wild_bootstrap():
         wild_bootstrap(curve, products, 0.0, "x1", replicates=0)
     with pytest.raises(IdentificationError, match="does not determine x0"):
         wild_bootstrap(curve, products, np.inf, "x0")
-    X, y, codes = made(units=12, seed=3)
+    _, y, codes = made(units=12, seed=3)
     only = codes == np.bincount(codes).argmax()
     own = np.where(only, np.arange(codes.size), 0.0)
     own[only] -= own[only].mean()

@@ -9,7 +9,6 @@ with its own code; so is a route whose degrees of freedom, sign or optimum is in
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from concurrent.futures import ThreadPoolExecutor
 from functools import partial
 
 import numpy as np
@@ -25,7 +24,7 @@ from mixbridge.resample.deletion_bounds import neighbourhood
 from mixbridge.resample.deletion_rest import without
 from mixbridge.resample.deletion_routes import Centre, Refits, fit_batch
 from mixbridge.resample.deletion_sums import Sums
-from mixbridge.resample.deletion_values import NUMBERS
+from mixbridge.resample.deletion_values import panels_at_once
 from mixbridge.routes import Fit, fit_route, resolve
 from mixbridge.routes.fitting import LIKELIHOOD, named_route
 
@@ -164,7 +163,6 @@ def delete_each(
     centre: Centre,
     *,
     own_fits: int,
-    workers: int,
     progress: Progress | None,
 ) -> dict[str, Refits]:
     """Refit every route without each unit in turn.
@@ -179,8 +177,6 @@ def delete_each(
     centre : Centre
     own_fits : int
         Most units that get a fit of their own.
-    workers : int
-        Threads.
     progress : callable or None
         Called with units done and their number.
 
@@ -193,27 +189,18 @@ def delete_each(
     doubt = {key: np.zeros(total, dtype=bool) for key in routes}
     for key in set(fits) - set(routes):
         found[key].status[:] = f"not estimable with all units: {fits[key].status}"
-    step = max(NUMBERS // axes.order**2, 1)
+    step = panels_at_once(axes.order)
     leverages = _leverage_maps(axes)
 
-    def work(start: int) -> int:
+    for start in range(0, total, step):
         part = slice(start, min(start + step, total))
         batch, own = deletions(axes, part)
         lost = _lost(batch, own, leverages)
         for key, (refits, unsure, _) in fit_batch(batch, routes, centre, lost, own).items():
             found[key].put(part, refits)
             doubt[key][part] = unsure
-        return part.stop
-
-    starts = range(0, total, step)
-    pool = ThreadPoolExecutor(workers) if workers > 1 else None
-    try:
-        for done in map(work, starts) if pool is None else pool.map(work, starts):
-            if progress is not None:
-                progress(done, total)
-    finally:
-        if pool is not None:
-            pool.shutdown(wait=True, cancel_futures=True)
+        if progress is not None:
+            progress(part.stop, total)
     _fit_alone(axes.products, routes, found, doubt, own_fits)
     return found
 

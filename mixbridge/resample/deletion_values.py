@@ -14,13 +14,18 @@ from mixbridge.resample.deletion_batch import Batch, full, quadratic, solved, tr
 from mixbridge.resample.optima import FIELDS, Values
 from mixbridge.routes.likelihood import Kind
 
-__all__ = ["BatchDeviances", "evaluate"]
+__all__ = ["BatchDeviances", "evaluate", "panels_at_once"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.intp]
 
 NUMBERS = 2**15
 """Entries of one ``(s, s, m)`` array in work: a quarter of a megabyte, so that eliminations stay in the cache."""
+
+
+def panels_at_once(order: int) -> int:
+    """Return how many panels with this number of coordinates are worked on together."""
+    return max(NUMBERS // order**2, 64)
 
 
 def evaluate(batch: Batch, kind: Kind, psi: FloatArray, m: FloatArray) -> Values:
@@ -92,7 +97,7 @@ class BatchDeviances:
     @property
     def step(self) -> int:
         """Panels in work at one time."""
-        return max(NUMBERS // self.batch.axes.order**2, 1)
+        return panels_at_once(self.batch.axes.order)
 
     def on_grid(self, psi: FloatArray) -> Values:
         """Evaluate all at common ratios."""

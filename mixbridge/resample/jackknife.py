@@ -27,7 +27,14 @@ from mixbridge.resample.jackknife_verdicts import Limits
 from mixbridge.routes import Fit, fit_route
 from mixbridge.routes.fitting import named_route
 
-__all__ = ["NOT_LEARNED_AGAIN", "estimated_routes", "fits_of", "interval_multipliers", "leave_one_out"]
+__all__ = [
+    "NOT_LEARNED_AGAIN",
+    "estimated_routes",
+    "fits_of",
+    "interval_multipliers",
+    "leave_one_out",
+    "refuse_other_rows",
+]
 
 FloatArray = NDArray[np.float64]
 
@@ -49,7 +56,6 @@ def leave_one_out(
     limits: Limits | None = None,
     names: bool = True,
     own_fits: int = 500,
-    workers: int = 1,
     progress: Progress | None = None,
 ) -> LeaveOneOut:
     """Refit every route without each unit in turn.
@@ -78,8 +84,6 @@ def leave_one_out(
     own_fits : int
         Most units that get a fit of their own where subtraction would lose digits or a route's conditions are in
         doubt. At most about three per direction of X dominate; what is beyond the limit says so in its status.
-    workers : int
-        Threads; results do not depend on it.
     progress : callable, optional
         Called with the number of units done and of all.
 
@@ -87,16 +91,14 @@ def leave_one_out(
     -------
     LeaveOneOut
     """
-    if isinstance(workers, bool) or workers < 1:
-        raise OptionError(f"workers={workers!r} is not allowed; allowed: a positive integer.")
     if curve.units < 2:
         raise IdentificationError("there is one unit only: without it nothing is left.")
-    _refuse_other_rows(curve, products)
+    refuse_other_rows(curve, products)
     chosen = given_routes(curve, _with_primary(routes, primary), conventions)
     fits = fits_of(curve, chosen)
     estimated = estimated_routes(fits, chosen)
     axes, centre = centre_of(curve, products, fits, estimated, primary)
-    refits = delete_each(axes, fits, estimated, centre, own_fits=own_fits, workers=workers, progress=progress)
+    refits = delete_each(axes, fits, estimated, centre, own_fits=own_fits, progress=progress)
     found = LeaveOneOut(
         terms=curve.names,
         primary=primary,
@@ -158,7 +160,8 @@ def _with_primary(routes: tuple[str, ...], primary: str) -> tuple[str, ...]:
     return routes if primary in routes else (*routes, primary)
 
 
-def _refuse_other_rows(curve: Curve, products: UnitProducts) -> None:
+def refuse_other_rows(curve: Curve, products: UnitProducts) -> None:
+    """Refuse unit products that do not belong to the moments of the curve."""
     sizes, counts = np.unique(products.sizes, return_counts=True)
     moments = curve.moments
     if not (

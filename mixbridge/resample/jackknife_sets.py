@@ -18,7 +18,7 @@ from mixbridge.moments.products import UnitProducts
 from mixbridge.ratio import Curve
 from mixbridge.resample.deletion import DELETED_ROUTES, Conventions, Progress, fit_moments, given_routes
 from mixbridge.resample.deletion_rest import keyed, without
-from mixbridge.resample.jackknife import NOT_LEARNED_AGAIN, fits_of
+from mixbridge.resample.jackknife import NOT_LEARNED_AGAIN, fits_of, refuse_other_rows
 from mixbridge.routes import Fit
 
 __all__ = ["LeftOut", "leave_one_period_out", "leave_two_out"]
@@ -125,6 +125,7 @@ def leave_two_out(
     keys = pd.Index(list(units))
     if not 2 <= len(keys) <= MOST_UNITS or keys.has_duplicates:
         raise OptionError(f"{len(keys)} units are named; name 2 to {MOST_UNITS} different ones.")
+    refuse_other_rows(curve, products)
     at = keyed(products, keys)
     chosen = given_routes(curve, routes if primary in routes else (*routes, primary), conventions)
     pairs = list(combinations(range(len(keys)), 2))

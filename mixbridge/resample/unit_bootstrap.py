@@ -33,8 +33,8 @@ from mixbridge.resample.deletion_batch import Batch
 from mixbridge.resample.deletion_rest import moments_of
 from mixbridge.resample.deletion_routes import Centre, Refits, fit_batch
 from mixbridge.resample.deletion_sums import Sums
-from mixbridge.resample.deletion_values import NUMBERS
-from mixbridge.resample.jackknife import NOT_LEARNED_AGAIN, estimated_routes, fits_of
+from mixbridge.resample.deletion_values import panels_at_once
+from mixbridge.resample.jackknife import NOT_LEARNED_AGAIN, estimated_routes, fits_of, refuse_other_rows
 from mixbridge.resample.simulated import check_confidence, quantiles
 from mixbridge.routes import Fit
 
@@ -223,6 +223,7 @@ def unit_bootstrap(
             raise OptionError(f"{name}={given!r} is not allowed; allowed: an integer, at least {least}.")
     if curve.units < 2:
         raise IdentificationError("there is one unit only: drawing units tells nothing.")
+    refuse_other_rows(curve, products)
     chosen = given_routes(curve, routes, conventions)
     fits = fits_of(curve, chosen)
     estimated = estimated_routes(fits, chosen)
@@ -269,7 +270,7 @@ def _draw_all(
     """Fit every draw, filling `refits`; return by route and draw whether it needs a fit of its own."""
     replicates, units = next(iter(refits.values())).ratio.size, axes.curve.units
     doubt = np.zeros((len(routes), replicates), dtype=bool)
-    step = max(min(DRAWN // units, NUMBERS // axes.order**2), 1)
+    step = max(min(DRAWN // units, panels_at_once(axes.order)), 1)
     order = np.argsort(axes.classes, kind="stable")
 
     def work(start: int) -> int:
