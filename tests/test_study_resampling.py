@@ -38,3 +38,26 @@ def test_zero_tests_reject_where_the_exact_test_does(study):
     table = study.zero_tests(199, seed=3).set_index("route")
     assert table.loc["reml", "p_value"] <= 0.01
     assert study.variance_tests(draws=0).set_index("test").loc["f_unit_intercepts", "p_value"] < 1e-6
+
+
+def test_leaving_a_unit_out_is_refitting_without_it(study):
+    found = study.leave_one_out(("swamy_arora", "reml"))
+    data = mixbridge.demo.apiaries()
+    at = list(found.units).index("A04")
+    again = mixbridge.crosscheck(study.panel.formula, data[data["apiary"] != "A04"], unit="apiary")
+    for key in ("swamy_arora", "reml"):
+        np.testing.assert_allclose(found.refits[key].coefficients[at], again.fit(key).beta, rtol=1e-8)
+    assert len(found.jackknife("reml")) > 0
+
+
+def test_units_are_not_named_where_names_are_off(study):
+    hidden = study.leave_one_out(("reml",), names=False)
+    assert all(str(name).startswith("unit ") for name in hidden.units)
+
+
+def test_pairs_periods_draws_and_wild_weights_answer(study):
+    assert len(study.leave_two_out(["A01", "A02", "A03"], ("reml",)).table()) > 0
+    assert len(study.leave_one_period_out(("reml",)).table()) > 0
+    assert len(study.unit_bootstrap(99, routes=("reml",)).table()) > 0
+    wild = study.wild_bootstrap("altitude", replicates=499)
+    assert 0.0 < wild.p_value <= 1.0

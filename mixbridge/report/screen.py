@@ -245,8 +245,8 @@ def _components(study: StudyView) -> list[str]:
         merged.setdefault((*cells, *errors, status), []).append(str(row["route"]))
     rows = [["route", "unit", "(se)", "idiosyncratic", "(se)", "ratio ψ", "ICC", "status"]]
     without: list[str] = []
-    for (*shown, status), names in merged.items():
-        cells = list(shown)
+    for key, names in merged.items():
+        cells, status = key[:-1], key[-1]
         if set(cells) == {"-"}:
             without.append(shorten(f"  {_join(names, 44)}: {status}", WIDTH))
             continue

@@ -2,15 +2,22 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Hashable, Mapping, Sequence
 from typing import TYPE_CHECKING
 
-import pandas as pd
+import numpy as np
 
+from mixbridge.errors import OptionError
 from mixbridge.study.reconciliation import StudyReconciliation
 
 if TYPE_CHECKING:
+    import pandas as pd
+
     from mixbridge.resample import Bootstrap
+    from mixbridge.resample.jackknife_record import LeaveOneOut
+    from mixbridge.resample.jackknife_sets import LeftOut
+    from mixbridge.resample.unit_bootstrap import UnitBootstrap
+    from mixbridge.resample.wild_record import WildBootstrap
 
 __all__ = ["StudyResampling"]
 
@@ -73,3 +80,147 @@ class StudyResampling(StudyReconciliation):
         from mixbridge.resample import zero_tests
 
         return zero_tests(self.curve, self.fits, replicates, seed)
+
+    def leave_one_out(
+        self,
+        routes: Sequence[str] | None = None,
+        *,
+        names: bool = True,
+        progress: Callable[[int, int], None] | None = None,
+    ) -> LeaveOneOut:
+        """Refit every route without each unit in turn, exactly, from products of the units.
+
+        Parameters
+        ----------
+        routes : sequence of str, optional
+            Routes refitted; those of the study unless given, first differences left out.
+        names : bool
+            Whether units are named; who was influential may disclose a confidential unit.
+        progress : callable, optional
+            Called with units done and their number.
+
+        Returns
+        -------
+        LeaveOneOut
+            Influence, deciding units, jackknife standard errors. Formula transforms are not learned again.
+        """
+        from mixbridge.resample.jackknife import leave_one_out
+
+        chosen = self._deletable(routes)
+        multipliers = {}
+        for key in dict.fromkeys([*chosen, self.primary]):
+            fit = self.fits.get(key) or self.fit(key)
+            if fit.estimated:
+                rows = self.intervals(fit).values()
+                multipliers[key] = [row.half_width / row.standard_error for row in rows]
+        return leave_one_out(
+            self.curve,
+            self.products,
+            chosen,
+            self.primary,
+            multipliers=multipliers,
+            confidence=self.confidence,
+            names=names,
+            progress=progress,
+        )
+
+    def leave_two_out(self, units: Sequence[Hashable], routes: Sequence[str] | None = None) -> LeftOut:
+        """Leave out every pair of some named units: what one hides when the other is there.
+
+        Parameters
+        ----------
+        units : sequence
+            Keys of two units or more.
+        routes : sequence of str, optional
+            As for `leave_one_out`.
+
+        Returns
+        -------
+        LeftOut
+        """
+        from mixbridge.resample.jackknife_sets import leave_two_out
+
+        return leave_two_out(self.curve, self.products, units, self._deletable(routes), self.primary)
+
+    def leave_one_period_out(self, routes: Sequence[str] | None = None) -> LeftOut:
+        """Leave out every period in turn, by one pass over the rows each.
+
+        Parameters
+        ----------
+        routes : sequence of str, optional
+            As for `leave_one_out`.
+
+        Returns
+        -------
+        LeftOut
+        """
+        from mixbridge.resample.jackknife_sets import leave_one_period_out
+
+        if self.panel.period_ordinals is None:
+            raise OptionError(
+                "no period to leave out: name the column with period=. " + (self.panel.period_note or "")
+            )
+        periods = np.unique(self.panel.period_ordinals).tolist()
+        return leave_one_period_out(
+            self.curve,
+            self._period_blocks,
+            self.panel.unit_keys,
+            periods,
+            routes=self._deletable(routes),
+            primary=self.primary,
+        )
+
+    def unit_bootstrap(
+        self, replicates: int = 999, seed: int = 20_050, routes: Sequence[str] | None = None
+    ) -> UnitBootstrap:
+        """Draw whole units with replacement and refit: no model for the errors within a unit.
+
+        Parameters
+        ----------
+        replicates, seed : int
+        routes : sequence of str, optional
+            As for `leave_one_out`.
+
+        Returns
+        -------
+        UnitBootstrap
+        """
+        from mixbridge.resample.unit_bootstrap import unit_bootstrap
+
+        return unit_bootstrap(self.curve, self.products, self._deletable(routes), replicates, seed)
+
+    def wild_bootstrap(
+        self,
+        hypothesis: str | Mapping[str, float],
+        value: float = 0.0,
+        *,
+        route: str | None = None,
+        replicates: int = 9_999,
+        seed: int = 20_050,
+    ) -> WildBootstrap:
+        """Test one linear combination by the wild cluster bootstrap with restricted residuals.
+
+        Parameters
+        ----------
+        hypothesis : str or mapping of str to float
+            A coefficient, or weights of several.
+        value : float
+            What the combination is under the hypothesis.
+        route : str, optional
+            The primary route unless given; its ratio counts as known.
+        replicates, seed : int
+
+        Returns
+        -------
+        WildBootstrap
+        """
+        from mixbridge.resample.wild import wild_bootstrap
+
+        fit = self.fit(self.primary if route is None else route)
+        return wild_bootstrap(
+            self.curve, self.products, fit, hypothesis, value, replicates=replicates, seed=seed
+        )
+
+    def _deletable(self, routes: Sequence[str] | None) -> tuple[str, ...]:
+        given = self.routes if routes is None else routes
+        return tuple(key for key in given if key != "first_difference" or routes is not None)
