@@ -56,7 +56,15 @@ def test_earlier_layers_and_neighbours_may_be_imported(tmp_path):
 
 
 def test_import_leaves_heavy_optional_packages_alone():
-    heavy = ("statsmodels", "matplotlib", "pyarrow.parquet", "duckdb", "dask", "scipy.stats", "scipy.optimize")
+    heavy = (
+        "statsmodels",
+        "matplotlib",
+        "pyarrow.parquet",
+        "duckdb",
+        "dask",
+        "scipy.stats",
+        "scipy.optimize",
+    )
     code = f"import sys, mixbridge; print([name for name in {heavy} if name in sys.modules])"
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert done.stdout.strip() == "[]"

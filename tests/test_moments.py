@@ -516,7 +516,9 @@ def test_constants(level):
     X, y, units = adversarial("ordinary", 0)
     X[:, 0] = level
     moments = Moments.from_arrays(X, y, units, ("c", "x", "w"))
-    ones = level == 1.0  # a constant of another value is a column like others: its coefficient has its own unit
+    ones = (
+        level == 1.0
+    )  # a constant of another value is a column like others: its coefficient has its own unit
     assert moments.constant == ("c" if ones else None)
     assert moments.columns == (("x", "w", "y") if ones else ("c", "x", "w", "y"))
 

@@ -26,6 +26,7 @@ WAGE = f"lwage ~ educ + black + hisp + exper + expersq + married + union + {YEAR
 
 WITHIN = "within residual sum of squares"
 
+
 @cache
 def study(case: str) -> mixbridge.Study:
     match case:
@@ -59,14 +60,18 @@ def computed(case: str, route: str, quantity: str) -> float:
     column = "Intercept" if column == "intercept" else column
     scale = "gls_residuals" if kind == "se_scaled_by_gls_residuals" else "own"
     if route == "tests" and quantity.startswith("hausman"):
-        variance = {"hausman_one_idiosyncratic_variance": "one idiosyncratic variance"}.get(quantity, "each route's own")
+        variance = {"hausman_one_idiosyncratic_variance": "one idiosyncratic variance"}.get(
+            quantity, "each route's own"
+        )
         table = study(case).contrasts("swamy_arora")
         row = table[(table["contrast"] == "within - gls") & (table["variance"] == variance)]
         return float(row["statistic"].item())
     if quantity == "likelihood_ratio":
         tested = statistics_of(case).loc[quantity].iloc[0]
         by_hand = 2 * (study(case).fit("ml").log_likelihood - log_likelihood_of_pooled(study(case)))
-        assert abs(tested - by_hand) <= 1e-9 * by_hand  # two log-likelihoods of size 1e3, each right to rounding
+        assert (
+            abs(tested - by_hand) <= 1e-9 * by_hand
+        )  # two log-likelihoods of size 1e3, each right to rounding
         return float(tested)
     if route == "tests":
         return float(statistics_of(case).loc[quantity])

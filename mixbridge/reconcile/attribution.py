@@ -28,7 +28,7 @@ from mixbridge.ratio import Curve
 from mixbridge.reconcile.agreement import Interval
 from mixbridge.reconcile.attribution_chains import Link, links_between, median_size
 from mixbridge.reconcile.attribution_contrast import GapPart, joint_contrasts, off_curve_parts
-from mixbridge.reconcile.attribution_node import CAUSES
+from mixbridge.reconcile.attribution_node import CAUSES, label_of
 from mixbridge.reconcile.attribution_positions import Positions
 from mixbridge.reconcile.attribution_text import Gap, attribution_sentences
 from mixbridge.reconcile.attribution_width import StandardErrors, WidthFactor, width_factors
@@ -144,14 +144,16 @@ class Attribution:
 
     @property
     def half_width(self) -> pd.DataFrame:
-        """Factors of (half-width of a) / (half-width of b): ``log`` adds up to the logarithm of the quotient."""
+        """Factors of (half-width of a) / (half-width of b): ``log`` adds up to the logarithm of the quotient.
+
+        Columns ``factor, log, log_lowest, log_highest, relative`` (the factor minus one), and what each route uses:
+        ``a``, ``b``.
+        """
         rows = [
             [item.name, item.log, item.lowest, item.highest, np.expm1(item.log), item.a, item.b]
             for item in self.factors
         ]
-        columns = ["factor", "log", "log_lowest", "log_highest", "relative", self.gap.a, self.gap.b]
-        if self.gap.a == self.gap.b:
-            columns[-2:] = [f"{self.gap.a} (first)", f"{self.gap.b} (second)"]
+        columns = ["factor", "log", "log_lowest", "log_highest", "relative", "a", "b"]
         return pd.DataFrame(rows, columns=columns)
 
     @property
@@ -234,8 +236,8 @@ def attribute(
     size = median_size(curve)
     gap = Gap(
         term=term,
-        a=a.route,
-        b=b.route,
+        a=label_of(a),
+        b=label_of(b),
         estimate_a=float(a.beta[at]),
         estimate_b=float(b.beta[at]),
         standard_error=float(b.standard_errors.iloc[at]) if pair is None else pair[1].standard_error,

@@ -11,7 +11,7 @@ from mixbridge.ratio import Curve
 from mixbridge.reconcile.attribution_changes import POOLED, WITHIN, changes_of
 from mixbridge.reconcile.attribution_graph import Graph, legal_chains
 from mixbridge.reconcile.attribution_node import CAUSES, TRUNCATION, UNSPLIT, Change, Node, node_of
-from mixbridge.reconcile.attribution_positions import Move, Positions
+from mixbridge.reconcile.attribution_positions import Move, Position, Positions
 from mixbridge.routes import Fit
 
 __all__ = ["Link", "links_between", "median_size", "weight_at"]
@@ -129,29 +129,30 @@ def _moves(
     for before, after in pairwise(trail):
         here, there = positions.at(before), positions.at(after)
         bounded = before.route in BOUNDED or after.route in BOUNDED
-        ratio = _cut(moves, before, ratio, here.ratio if bounded else here.raw)
+        ratio = _cut(moves, here, ratio, here.ratio if bounded else here.raw)
         change = changes.get((before, after))
         sentence = change.sentence if change is not None else changes[(after, before)].back
         cause = (change or changes[(after, before)]).cause
         to = there.ratio if bounded else there.raw
-        moves.append(Move(before.label, after.label, cause, sentence, ratio, to))
+        moves.append(Move(_name(here, ratio), _name(there, to), cause, sentence, ratio, to))
         ratio = to
-    _cut(moves, trail[-1], ratio, positions.at(trail[-1]).ratio)
+    last = positions.at(trail[-1])
+    _cut(moves, last, ratio, last.ratio)
     return tuple(moves)
 
 
-def _cut(moves: list[Move], node: Node, ratio: float, wanted: float) -> float:
+def _name(position: Position, ratio: float) -> str:
+    """Return the name of a node on one side of its truncation."""
+    before = position.cut and ratio == position.raw
+    return f"{position.node.label} before truncation" if before else position.node.label
+
+
+def _cut(moves: list[Move], here: Position, ratio: float, wanted: float) -> float:
     """Add the move from one side of the truncation of a node to the other, if it is on the wrong one."""
     if ratio != wanted:
-        before, after = f"{node.label} before truncation", node.label
-        if wanted < 0.0:
-            moves.append(Move(after, before, TRUNCATION, "the negative unit variance is kept", ratio, wanted))
-        else:
-            moves.append(
-                Move(
-                    before, after, TRUNCATION, "the negative unit variance is replaced by zero", ratio, wanted
-                )
-            )
+        names = _name(here, ratio), _name(here, wanted)
+        done = "kept" if wanted < 0.0 else "replaced by zero"
+        moves.append(Move(*names, TRUNCATION, f"the negative unit variance is {done}", ratio, wanted))
     return wanted
 
 

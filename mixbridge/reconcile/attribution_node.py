@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass
 
-from mixbridge.routes import Fit, named_route
+from mixbridge.routes import Fit, axes_of, named_route
 
 __all__ = [
     "CAUSES",
@@ -21,6 +21,7 @@ __all__ = [
     "ZERO",
     "Change",
     "Node",
+    "label_of",
     "node_of",
     "plain",
 ]
@@ -153,3 +154,23 @@ def node_of(fit: Fit) -> Node:
         elif value != DEFAULTS[name]:
             kept.append((name, value))
     return Node(route, tuple(kept))
+
+
+def label_of(fit: Fit) -> str:
+    """Return the key of a fit with the conventions that are not the defaults.
+
+    Parameters
+    ----------
+    fit : Fit
+
+    Returns
+    -------
+    str
+        For example ``swamy_arora (between=harmonic, covariance=CR1)``.
+    """
+    route, implied = named_route(fit.route)
+    defaults = {axis.name: axis.values[0] for axis in axes_of(route)} | implied
+    changed = [
+        f"{name}={plain(value)}" for name, value in fit.conventions.items() if value != defaults.get(name)
+    ]
+    return f"{fit.route} ({', '.join(changed)})" if changed else fit.route

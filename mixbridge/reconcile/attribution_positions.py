@@ -88,6 +88,8 @@ class Positions:
     curve : Curve
     fits : mapping of str to Fit
         Fits of this panel; used as they are.
+    known : dict
+        Positions found so far, by node.
     walks : dict
         Chains found so far, by start, end and how much longer than the shortest they may be.
     """
@@ -95,7 +97,7 @@ class Positions:
     curve: Curve
     fits: Mapping[str, Fit]
     walks: dict[tuple[Node, Node, int], Walks] = field(default_factory=dict, repr=False)
-    _known: dict[Node, Position] = field(default_factory=dict, repr=False)
+    known: dict[Node, Position] = field(default_factory=dict, repr=False)
     _beta: dict[float, FloatArray] = field(default_factory=dict, repr=False)
 
     def __post_init__(self) -> None:
@@ -103,7 +105,7 @@ class Positions:
         for fit in self.fits.values():
             if fit.rows == self.curve.n and fit.route not in ("between", "first_difference"):
                 node = node_of(fit)
-                self._known.setdefault(node, self._of_fit(node, fit))
+                self.known.setdefault(node, self._of_fit(node, fit))
 
     def at(self, node: Node) -> Position:
         """Return the position of a node.
@@ -116,9 +118,9 @@ class Positions:
         -------
         Position
         """
-        if node not in self._known:
-            self._known[node] = self._found(node)
-        return self._known[node]
+        if node not in self.known:
+            self.known[node] = self._found(node)
+        return self.known[node]
 
     def beta(self, ratio: float) -> FloatArray:
         """Return the coefficients at a ratio; within slopes at an infinite one, NaN where there is none.
