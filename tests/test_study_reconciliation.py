@@ -52,3 +52,24 @@ def test_crosswalk_gives_the_numbers_of_the_fit(study):
     assert table.loc["unit variance", "value"] == fit.unit_variance
     np.testing.assert_allclose(table.loc["variance ratio", "value"], fit.ratio)
     assert len(mixbridge.crosswalk(fit)) > 10
+
+
+def test_a_gap_is_given_on_three_scales(study):
+    table = study.agreement(margin={"feeding": 0.2}, noise=study.bootstrap(400, seed=1)).set_index(
+        ["term", "route"]
+    )
+    row = table.loc[("feeding", "swamy_arora")]
+    np.testing.assert_allclose(row["gap_in_margin"], row["gap"] / 0.2, rtol=1e-12)
+    assert not row["within_margin"]
+    assert table.loc[("feeding", "ml"), "within_margin"]
+    np.testing.assert_allclose(row["gap_in_noise"], row["gap"] / row["noise_sd"], rtol=1e-12)
+    assert np.isnan(table.loc[("forage", "ml"), "margin"])
+
+
+def test_the_first_screen_names_causes_that_add_up(study):
+    (line,) = [line for line in str(study).split("\n") if line.strip().startswith("why: feeding")]
+    gap = study.ledger.set_index(["term", "route"]).loc[("feeding", "swamy_arora"), "gap_in_se"]
+    causes = study.attribution("feeding", "swamy_arora").causes
+    np.testing.assert_allclose(causes["in_se"].sum(), gap, rtol=1e-9)
+    for cause in causes.loc[causes["in_se"].abs() >= 0.05, "cause"]:
+        assert cause in line

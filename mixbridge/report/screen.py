@@ -8,10 +8,12 @@ from typing import Any, Protocol
 import numpy as np
 import pandas as pd
 
+from mixbridge.errors import IdentificationError, OptionError
 from mixbridge.moments import Moments
 from mixbridge.panel import Panel
 from mixbridge.ratio import Curve
 from mixbridge.reconcile.agreement import CLASSES, Thresholds
+from mixbridge.reconcile.attribution import Attribution
 from mixbridge.reconcile.identities import Identity
 from mixbridge.report.text import WIDTH, columns, interval, number, shorten, signed
 from mixbridge.routes import REFERENCE_ROUTES, Fit
@@ -49,6 +51,7 @@ class StudyView(Protocol):
     def identity_results(self) -> tuple[Identity, ...]: ...  # noqa: D102
     @property
     def singletons(self) -> int: ...  # noqa: D102
+    def attribution(self, term: str, a: str) -> Attribution: ...  # noqa: D102
 
 
 def study_screen(study: StudyView) -> str:
@@ -180,6 +183,9 @@ def _agreement(study: StudyView, most: int) -> list[str]:
         error = number(base["standard_error"], 3)
         rows.append([term, number(base["estimate"]), error, classes, shorten(widest, 24)])
     lines += _fitted(rows, right=(1, 2))
+    lines += [
+        line for term in _weighty(grouped, order, votes) for line in _cause(study, term, grouped[term], votes)
+    ]
     if beside:
         lines.append(f"Other questions on the same rows: estimate, and (gap in se of {primary})")
         rows = [["term", *(key.replace("_", " ") for key in beside)]]
@@ -194,6 +200,36 @@ def _agreement(study: StudyView, most: int) -> list[str]:
         )
         lines.append(f"  and {len(worst)} more terms, by their worst class {summary}: study.ledger shows all")
     return lines
+
+
+def _weighty(grouped: Mapping[str, pd.DataFrame], order: list[str], votes: list[str]) -> list[str]:
+    """Return at most two terms whose gaps between random-effects routes are neither identical nor immaterial."""
+    gaps = {
+        term: float(part.loc[part["route"].isin(votes), "gap_in_se"].abs().max())
+        for term, part in grouped.items()
+    }
+    loud = [
+        term
+        for term in order
+        if _worst(grouped[term], votes) in CLASSES[2:] and gaps[term] >= Thresholds().gap
+    ]
+    return sorted(loud, key=lambda term: -gaps[term])[:2]
+
+
+def _cause(study: StudyView, term: str, part: pd.DataFrame, votes: list[str]) -> list[str]:
+    """Say which named changes make the widest gap of a term, in standard errors of the primary route."""
+    rows = part[part["route"].isin(votes)].set_index("route")["gap_in_se"].dropna()
+    key = str(rows.abs().idxmax())
+    try:
+        causes = study.attribution(term, key).causes
+    except (IdentificationError, OptionError):
+        return []
+    parts = [
+        f"{signed(row['in_se'])} {row['cause']}" for _, row in causes.iterrows() if abs(row["in_se"]) >= 0.05
+    ]
+    if not parts:
+        return []
+    return [shorten(f"  why: {term}, {key} {signed(rows[key])} se = {_join(parts, 80)}", WIDTH)]
 
 
 def _fitted(rows: list[list[str]], right: Sequence[int]) -> list[str]:

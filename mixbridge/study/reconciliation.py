@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING, Literal
 
 import pandas as pd
@@ -14,6 +14,7 @@ from mixbridge.study.correlated import StudyCorrelated
 if TYPE_CHECKING:
     from mixbridge.reconcile.attribution import Attribution
     from mixbridge.reconcile.path import Path
+    from mixbridge.resample import Bootstrap
 
 __all__ = ["StudyReconciliation"]
 
@@ -25,8 +26,11 @@ class StudyReconciliation(StudyCorrelated):
         self,
         immaterial: float = 0.1,
         half_width: float = 0.1,
+        *,
         routes: Sequence[str] | None = None,
         reference: str | None = None,
+        margin: float | Mapping[str, float] | None = None,
+        noise: Bootstrap | None = None,
     ) -> pd.DataFrame:
         """Set every route beside the primary one.
 
@@ -41,19 +45,36 @@ class StudyReconciliation(StudyCorrelated):
         reference : str, optional
             One reference distribution for all intervals, a key of `mixbridge.inference.references.RULES`.
 
+        margin : float or mapping of str to float, optional
+            Largest gap that does not matter, in units of the coefficient: adds ``margin, gap_in_margin,
+            within_margin``.
+        noise : Bootstrap, optional
+            From `bootstrap`: adds each gap over its own standard deviation under the fitted model.
+
         Returns
         -------
         DataFrame
             ``term, route, estimate, standard_error, lower, upper, gap, gap_in_se, verdict, reason``.
         """
         from mixbridge.reconcile.agreement import Thresholds, ledger
+        from mixbridge.reconcile.require_scales import gap_scales
 
         chosen = {
             key: self.fits.get(key) or self.fit(key)
             for key in dict.fromkeys([*(routes or self.routes), self.primary])
         }
         intervals = {key: self.intervals(fit, reference) for key, fit in chosen.items()}
-        return ledger(self.curve, chosen, intervals, self.primary, Thresholds(immaterial, half_width))
+        table = ledger(self.curve, chosen, intervals, self.primary, Thresholds(immaterial, half_width))
+        if margin is None and noise is None:
+            return table
+        spread: dict[tuple[str, str], float] | None = None
+        if noise is not None:
+            gaps = noise.gaps(self.primary)
+            keys = zip(gaps["term"], gaps["route"], strict=True)
+            spread = {
+                (str(term), str(route)): float(sd) for (term, route), sd in zip(keys, gaps["sd"], strict=True)
+            }
+        return gap_scales(table, noise=spread, margin=margin)
 
     def attribution(self, term: str, a: str | Fit, b: str | Fit | None = None) -> Attribution:
         """Split the gap between two routes in one coefficient into named changes that add up exactly.
