@@ -133,7 +133,8 @@ def _best_ratio(curve: Curve, inside: float, means: FloatArray) -> float:
     while slope(high) <= 0.0 and high < 1e100:
         high *= 10.0
     grid = np.concatenate([[0.0], np.geomspace(1e-9 * high, high, 200)])
-    slopes = np.array([slope(psi) for psi in grid])
+    weights = curve.sizes / (1.0 + np.multiply.outer(grid, curve.sizes))
+    slopes = weights @ curve.counts - curve.n * (weights**2 @ means) / (inside + weights @ means)
     found = [0.0] if slopes[0] >= 0.0 else []
     for i in np.flatnonzero((slopes[:-1] < 0.0) & (slopes[1:] >= 0.0)):
         found.append(float(scipy.optimize.brentq(slope, grid[i], grid[i + 1], xtol=1e-300, rtol=8.9e-16)))
