@@ -211,6 +211,17 @@ def test_correlated_effects_bias_routes_by_the_formula():
     assert tests.loc["unit_means_reml", "rejection"] > 0.5
 
 
+def test_an_offset_changes_nothing():
+    shifted = replace(BALANCED, covariates={"dose": (1.0, 0.5, 1e6)})
+    for truth in (
+        Truth(icc=0.3, correlation={"dose": 0.4}),
+        Truth(icc=0.3, correlation={"dose": 0.4}, tail_df=5.0),
+    ):
+        a, b = (rehearse(design, truth, 100, 1).runs.routes["reml"] for design in (BALANCED, shifted))
+        # an offset of 1e6 costs six digits of the column as stored
+        assert a.coefficients[:, 1] == pytest.approx(b.coefficients[:, 1], rel=1e-7, abs=1e-8)
+
+
 def test_a_stated_correlation_is_the_correlation():
     setting = setting_of(MIXED, Truth(icc=0.3, correlation={"dose": 0.5, "age": -0.2}, idiosyncratic=2.0))
     model = setting.model
@@ -328,6 +339,10 @@ def test_power_at_the_detectable_departure_is_the_power_stated():
     assert np.isnan(table.loc[("coefficient", "age"), "departure"])
     table = minimum_detectable(curve, reml).set_index(["test", "term"])
     assert np.isnan(table.loc[("unit means", "age"), "departure"])
+    robust = minimum_detectable(curve, replace(reml, robust=4.0 * reml.covariance.to_numpy()))
+    row = robust.set_index(["test", "term"]).loc[("coefficient", "dose")]
+    wide = 2.0 * reml.standard_errors["dose"] * shift_for(0.8, 0.05, 149.0)
+    assert row["departure"] == pytest.approx(wide, rel=1e-9)
     gamma = float(table.loc[("unit means", "dose"), "departure"])
     truth = Truth(ratio=reml.ratio, idiosyncratic=reml.idiosyncratic_variance, contextual={"dose": gamma})
     rate = rehearse(design, truth, count, 3).tests.set_index("test").loc["unit_means_reml", "rejection"]
@@ -369,6 +384,16 @@ def test_texts_hold_the_numbers_and_the_caution():
     assert "Route within" in found.paragraph("dose", "within")
     assert set(found.to_dict()) >= {"truth", "coefficients", "intervals", "components", "tests"}
     assert found.statuses()["route"].tolist() == list(found.runs.routes)
+    drawn = found.figure("dose")
+    panels = drawn.axes
+    points = panels[0].lines[0].get_xydata()
+    assert points[:, 0] == pytest.approx(found.coefficients.query("term == 'dose'")["bias"].to_numpy())
+    assert [label.get_text() for label in panels[0].get_yticklabels()] == found.coefficients.query(
+        "term == 'dose'"
+    )["route"].tolist()
+    assert len(panels[2].get_legend().get_texts()) == 4
+    with pytest.raises(OptionError, match="Did you mean 'dose'"):
+        found.figure("dosis")
     with pytest.raises(OptionError, match="route"):
         found.paragraph(route="remel")
     with pytest.raises(OptionError, match="term"):

@@ -33,10 +33,11 @@ def minimum_detectable(curve: Curve, fit: Fit, power: float = 0.8, level: float 
     Returns
     -------
     DataFrame
-        ``test``: ``coefficient`` (two-sided test of 0) or ``unit means`` (chi-square of the contrasts between within,
-        GLS and between, for a departure in one covariate alone); ``route, term, reference, standard_error,
-        departure`` (outcome units per unit of the term), ``in_sd_of_unit_means`` (outcome units: departure times the
-        standard deviation of the unit means), ``note``.
+        ``test``: ``coefficient`` (two-sided test of 0 by the default reference; t with N - 1 for a robust
+        covariance) or ``unit means`` (chi-square of the contrasts between within, GLS and between, for a departure in
+        one covariate alone); ``route, term, reference, standard_error, departure`` (outcome units per unit of the
+        term), ``in_sd_of_unit_means`` (outcome units: departure times the standard deviation of the unit means),
+        ``note``.
     """
     for name, value in (("power", power), ("level", level)):
         if isinstance(value, bool) or not isinstance(value, (int, float)) or not 0.0 < value < 1.0:
@@ -55,7 +56,8 @@ def minimum_detectable(curve: Curve, fit: Fit, power: float = 0.8, level: float 
     sd = np.sqrt(np.maximum(np.diag(spread), 0.0))
     rows: list[list[object]] = []
     errors = fit.standard_errors.to_numpy()
-    for at, (term, reference) in enumerate(zip(fit.terms, pick_reference(curve, fit), strict=True)):
+    references = pick_reference(curve, fit, rule=None if fit.robust is None else "t_units")
+    for at, (term, reference) in enumerate(zip(fit.terms, references, strict=True)):
         if not (np.isfinite(errors[at]) and reference.available):
             reason = fit.not_estimable.get(term, "no reference distribution: " + reference.text)
             rows.append(["coefficient", fit.route, term, "none", errors[at], np.nan, np.nan, reason])

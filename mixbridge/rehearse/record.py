@@ -4,12 +4,17 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cached_property
+from typing import TYPE_CHECKING
 
 import pandas as pd
 
 from mixbridge.errors import OptionError
 from mixbridge.rehearse import tables, text
+from mixbridge.rehearse.figure import figure_of
 from mixbridge.rehearse.replicates import Runs
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
 
 __all__ = ["Rehearsal"]
 
@@ -95,6 +100,19 @@ class Rehearsal:
         return text.paragraph(
             self.runs, self._tables(), name, key, confidence=self.confidence, notes=self.notes
         )
+
+    def figure(self, term: str) -> Figure:
+        """Return bias, root mean square error and coverage of one term as a figure.
+
+        Parameters
+        ----------
+        term : str
+
+        Returns
+        -------
+        matplotlib.figure.Figure
+        """
+        return figure_of(self.coefficients, self.intervals, term, self.confidence)
 
     def to_dict(self) -> dict[str, object]:
         """Return tables and settings as plain values."""

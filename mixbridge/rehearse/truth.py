@@ -183,8 +183,10 @@ def _contextual(truth: Truth, curve: Curve, unit: float) -> tuple[FloatArray, fl
     mean, covariance = unit_mean_covariance(curve)
     place = [curve.names.index(name) for name in given]
     spread = covariance[np.ix_(place, place)]
-    for name, variance, level in zip(given, np.diag(spread), mean[place], strict=True):
-        if not variance > 1e-12 * (variance + level**2):
+    size_of = dict(zip(curve.moments.columns, curve.moments.magnitude, strict=True))
+    for name, variance in zip(given, np.diag(spread), strict=True):
+        # what rounding of the stored column can produce
+        if not variance > (1e-12 * size_of.get(name, 1.0)) ** 2:
             raise IdentificationError(
                 f"the unit means of {name!r} do not vary: unit effects cannot depend on them."
             )
