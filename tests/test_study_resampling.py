@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 
 import mixbridge
+from mixbridge.rehearse import Truth
 
 
 @pytest.fixture(scope="module")
@@ -61,3 +62,16 @@ def test_pairs_periods_draws_and_wild_weights_answer(study):
     assert len(study.unit_bootstrap(99, routes=("reml",)).table()) > 0
     wild = study.wild_bootstrap("altitude", replicates=499)
     assert 0.0 < wild.p_value <= 1.0
+
+
+def test_a_rehearsal_under_related_effects_shows_who_is_biased(study):
+    found = study.rehearse(Truth(contextual={"feeding": -2.0}), replicates=200, seed=4)
+    assert "within" in str(found)
+    again = study.rehearse(Truth(contextual={"feeding": -2.0}), replicates=200, seed=4)
+    assert str(found) == str(again)
+
+
+def test_detectable_departures_shrink_with_the_power_asked(study):
+    strong, weak = (study.minimum_detectable(power=power)["departure"].dropna() for power in (0.9, 0.5))
+    assert len(strong) > 3
+    assert (strong > weak).all()
