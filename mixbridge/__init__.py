@@ -20,6 +20,7 @@ _LATER = {
     "crosswalk": "mixbridge.reconcile.crosswalk",
     "match_reported": "mixbridge.reconcile.match",
     "read_figures": "mixbridge.reconcile.printed_file",
+    "rehearse": "mixbridge.rehearse",
 }
 
 __all__ = [
@@ -40,11 +41,13 @@ __all__ = [
     "demo",
     "match_reported",
     "read_figures",
+    "rehearse",
 ]
 
 
 def __getattr__(name: str) -> object:
     """Hand on names whose files are loaded when first asked for."""
     if name in _LATER:
-        return getattr(import_module(_LATER[name]), name)
+        module = import_module(_LATER[name])
+        return module if name == "rehearse" else getattr(module, name)
     raise AttributeError(f"module 'mixbridge' has no attribute {name!r}")

@@ -1,4 +1,4 @@
-"""The command line: ``mixbridge check``, ``mixbridge match`` and ``mixbridge demo``."""
+"""The command line: ``mixbridge check``, ``match``, ``rehearse`` and ``demo``."""
 
 from __future__ import annotations
 
@@ -62,6 +62,25 @@ example:
   mixbridge match figures.toml honey.csv --formula 'honey ~ forage + feeding' --unit apiary
 
 exit status: 0 some convention matches every figure; 1 none does; 2 the input cannot be used."""
+
+
+REHEARSE = """\
+Simulates a design under a stated truth and analyses every replicate by every route: bias, root mean
+square error, coverage, size and power, with Monte Carlo errors, and a paragraph for a protocol. So a
+route can be chosen and written down before the data come."""
+
+REHEARSE_EXAMPLES = """\
+a file with a design (TOML); covariates have variances [within, between]:
+  units = 40
+  sizes = { 3 = 20, 6 = 20 }
+  covariates = { dose = [1.0, 0.5], age = [0.0, 1.0] }
+
+  [truth]
+  coefficients = { dose = 0.3 }
+  icc = 0.4
+  contextual = { dose = -0.5 }
+
+exit status: 0 done; 2 the design is impossible or the file cannot be used."""
 
 
 def main(arguments: Sequence[str] | None = None) -> int:
@@ -154,6 +173,19 @@ def _parser() -> argparse.ArgumentParser:
         help="whether robust covariances are searched too (default: auto, all where that is quick)",
     )
     match.set_defaults(action=_match)
+    rehearse = commands.add_parser(
+        "rehearse",
+        help="simulate a design under a stated truth, before the data come",
+        description=REHEARSE,
+        epilog=REHEARSE_EXAMPLES,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    rehearse.add_argument("design", metavar="DESIGN", help="TOML file with the design and the truth")
+    rehearse.add_argument(
+        "--replicates", type=int, default=2_000, help="number of replicates (default: 2000)"
+    )
+    rehearse.add_argument("--seed", type=int, default=20_061, help="seed of the draws (default: 20061)")
+    rehearse.set_defaults(action=_rehearse)
     demo = commands.add_parser(
         "demo",
         help="cross-check invented data on honey yields",
@@ -202,6 +234,18 @@ def _match(options: argparse.Namespace) -> int:
     found = match_reported(read_figures(options.figures), study, robust=options.robust)
     print(found)
     return DONE if found.all_matched else DIFFERS
+
+
+def _rehearse(options: argparse.Namespace) -> int:
+    from mixbridge.rehearse import rehearse
+    from mixbridge.rehearse.design_file import read_design
+
+    design, truth = read_design(options.design)
+    found = rehearse(design, truth, options.replicates, options.seed)
+    print(found)
+    print()
+    print(found.paragraph())
+    return DONE
 
 
 def _requirement(text: str) -> tuple[str, str]:

@@ -97,7 +97,13 @@ def test_a_missing_file_is_unusable_input(tmp_path, capsys):
 
 
 def test_help_teaches(capsys):
-    for arguments in (["--help"], ["check", "--help"], ["match", "--help"], ["demo", "--help"]):
+    for arguments in (
+        ["--help"],
+        ["check", "--help"],
+        ["match", "--help"],
+        ["rehearse", "--help"],
+        ["demo", "--help"],
+    ):
         with pytest.raises(SystemExit) as ended:
             main(arguments)
         assert ended.value.code == 0
@@ -132,3 +138,45 @@ def test_match_reads_figures_and_says_what_is_compatible(file, tmp_path, capsys)
     assert main(arguments) == 1
     figures.write_text('"b:fodder" = "7.77"\n', encoding="utf-8")
     assert main(arguments) == 2
+
+
+DESIGN = """
+units = 20
+sizes = { 3 = 10, 5 = 10 }
+covariates = { dose = [1.0, 0.5], age = [0.0, 1.0] }
+within_correlation = []
+
+[truth]
+coefficients = { dose = 0.3 }
+icc = 0.4
+"""
+
+
+def test_a_design_is_rehearsed_from_a_file(tmp_path, capsys):
+    path = tmp_path / "design.toml"
+    path.write_text(DESIGN, encoding="utf-8")
+    assert main(["rehearse", str(path), "--replicates", "200", "--seed", "3"]) == 0
+    out = capsys.readouterr().out
+    assert "dose" in out
+    assert "200 replicates" in out
+    assert callable(mixbridge.rehearse)
+    design = mixbridge.rehearse.Design(units=20, sizes=4, covariates={"dose": (1.0, 0.5)})
+    truth = mixbridge.rehearse.Truth(icc=0.3)
+    assert "dose" in str(mixbridge.rehearse(design, truth, replicates=200, seed=1))
+
+
+@pytest.mark.parametrize(
+    ("text", "message"),
+    [
+        ("units = 20", "needs units and sizes"),
+        ("units = 20\nsizes = 3\nwidth = 1", "has no 'width'"),
+        ("units = 20\nsizes = { many = 3 }", "not a number of rows"),
+        ("units = ", "cannot be read"),
+        ("units = 20\nsizes = 3\n[truth]\nicc = 1.5", "icc"),
+    ],
+)
+def test_an_impossible_design_has_exit_status_two(tmp_path, capsys, text, message):
+    path = tmp_path / "design.toml"
+    path.write_text(text, encoding="utf-8")
+    assert main(["rehearse", str(path)]) == 2
+    assert message in capsys.readouterr().err
