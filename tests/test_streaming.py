@@ -1,0 +1,316 @@
+"""Panels from chunks against the panel of the same rows in one frame, and against rational arithmetic."""
+
+import itertools
+from fractions import Fraction
+
+import numpy as np
+import pandas as pd
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from mixbridge.moments import collect, factor_from_rows, stack_factors
+from mixbridge.panel import build_panel
+from mixbridge.panel.streaming import build_streaming_panel
+from mixbridge.ratio import curve_of
+from mixbridge.routes import LEDGER_ROUTES, differences_of, fit_route
+from mixbridge.sources import read_table
+
+pa = pytest.importorskip("pyarrow")
+pq = pytest.importorskip("pyarrow.parquet")
+ds = pytest.importorskip("pyarrow.dataset")
+
+FORMULA = "honey ~ forage * region + C(frames) + np.log(weight)"
+OFF_CURVE = ("first_difference",)
+
+
+def make(n=300, seed=5):
+    rng = np.random.default_rng(seed)
+    hive = rng.integers(0, 30, n)
+    data = pd.DataFrame(
+        {
+            "hive": hive,
+            "season": pd.Series(range(n)).groupby(hive).cumcount() + 2001,
+            "forage": rng.normal(size=n) + 0.1 * hive,
+            "weight": rng.exponential(size=n) + 1.0,
+            "frames": rng.integers(1, 4, n),
+            "region": rng.choice(["east", "north", "west"], n),
+        }
+    )
+    data["honey"] = 20 + data["forage"] + rng.normal(size=30)[hive] + rng.normal(size=n)
+    data.loc[[3, 77], "forage"] = np.nan
+    data.loc[[4, 50], "honey"] = np.nan
+    data.loc[10, "weight"] = -1.0
+    return data
+
+
+def split(data, cuts):
+    edges = [0, *sorted(cuts), len(data)]
+    return lambda: (data.iloc[a:b] for a, b in itertools.pairwise(edges))
+
+
+def streamed(formula, source, **options):
+    return build_streaming_panel(formula, source, unit="hive", **options)
+
+
+def moments_of(panel):
+    if hasattr(panel, "blocks_with_codes"):
+        return collect(panel.blocks_with_codes, (*panel.names, panel.outcome), panel.unit_keys)
+    codes = panel.codes
+    return collect(
+        lambda: ((codes[s : s + len(y)], x, y) for s, x, y in panel.blocks()),
+        (*panel.names, panel.outcome),
+        panel.unit_keys,
+    )
+
+
+def same_recipe(got, wanted):
+    assert got.names == wanted.names
+    assert dict(got.terms) == dict(wanted.terms)
+    assert (got.constant, got.outcome, got.n, got.N) == (
+        wanted.constant,
+        wanted.outcome,
+        wanted.n,
+        wanted.N,
+    )
+    assert got.accounting == wanted.accounting
+    assert list(got.unit_keys) == list(wanted.unit_keys)
+
+
+def same_moments(got, wanted):
+    """Compare to 1e-12 of the column scale: both add the same 300 products in different order, each sum having a
+    relative error of at most 300 eps = 7e-14 of the sum of magnitudes."""
+    (opened, closed), (opened_0, closed_0) = got, wanted
+    scale = opened_0.magnitude
+    np.testing.assert_array_equal(opened.counts, opened_0.counts)
+    means, means_0 = opened.means + opened.shift, opened_0.means + opened_0.shift
+    assert np.abs((means - means_0) / scale).max() < 1e-12
+    products = np.outer(scale, scale) * opened_0.rows
+    assert np.abs((opened.within - opened_0.within) / products).max() < 1e-12
+    np.testing.assert_array_equal(closed.sizes, closed_0.sizes)
+    for name in ("within", "between"):
+        a, b = getattr(closed, name), getattr(closed_0, name)
+        ours, theirs = (np.swapaxes(f, -1, -2) @ f for f in (a, b))
+        # columns are standardised here: every product is of the order of the number of rows
+        assert np.abs(ours - theirs).max() < 1e-12 * opened_0.rows
+
+
+def same_fits(got, wanted):
+    """Coefficients of every curve route to 1e-10 of the largest: the search for the ratio stops at 1e-12."""
+    ours, theirs = curve_of(got), curve_of(wanted)
+    for key in LEDGER_ROUTES:
+        if key in OFF_CURVE:
+            continue
+        a, b = (fit_route(curve, key, {}, "not here") for curve in (ours, theirs))
+        assert a.status == b.status
+        np.testing.assert_allclose(a.beta, b.beta, rtol=0, atol=1e-10 * np.nanmax(np.abs(b.beta)))
+
+
+def same_rows(got, wanted):
+    parts = list(got.blocks_with_codes(rows=17))
+    x, y = wanted.matrix()
+    np.testing.assert_array_equal(np.concatenate([part[0] for part in parts]), wanted.codes)
+    np.testing.assert_array_equal(np.vstack([part[1] for part in parts]), x)
+    np.testing.assert_array_equal(np.concatenate([part[2] for part in parts]), y)
+
+
+@settings(max_examples=25, deadline=None)
+@given(st.randoms(use_true_random=False), st.lists(st.integers(0, 300), max_size=40))
+def test_any_partition_of_shuffled_rows(random, cuts):
+    data = make()
+    order = list(range(len(data)))
+    random.shuffle(order)
+    shuffled = data.iloc[order]
+    got = streamed(FORMULA, split(shuffled, cuts))
+    same_rows(got, build_panel(FORMULA, shuffled, unit="hive"))
+    whole = build_panel(FORMULA, data, unit="hive")
+    same_recipe(got, whole)
+    moments, expected = moments_of(got), moments_of(whole)
+    same_moments(moments, expected)
+    same_fits(moments[1], expected[1])
+
+
+KEYS = {
+    "integer": lambda hive: hive * 3 - 7,
+    "scattered": lambda hive: hive * 10**15,
+    "wide": lambda hive: hive + 2**62,
+    "unsigned": lambda hive: hive.astype("uint64") + np.uint64(2**63),
+    "huge": lambda hive: pd.Series([int(h) + 10**30 for h in hive], dtype=object),
+    "text": lambda hive: "hive " + hive.astype(str),
+    "nullable": lambda hive: hive.astype("Int64").where(hive != 3),
+    "whole floats": lambda hive: hive.astype(float).where(hive != 3),
+    "dates": lambda hive: pd.Timestamp("2001-01-01") + pd.to_timedelta(hive, unit="D"),
+    "categories": lambda hive: pd.Categorical.from_codes(
+        hive.clip(0, 28), [*"zyxwvutsrqponmlkjihgfedcba012"]
+    ),
+}
+
+
+@pytest.mark.parametrize("kind", KEYS)
+def test_unit_keys(kind):
+    data = make().assign(hive=lambda frame: KEYS[kind](frame["hive"]))
+    wanted = build_panel("honey ~ forage", data, unit="hive")
+    got = streamed("honey ~ forage", split(data, [11, 12, 100]))
+    same_recipe(got, wanted)
+    assert got.unit_keys.dtype == wanted.unit_keys.dtype
+    same_rows(got, wanted)
+
+
+SOURCES = [
+    "parquet",
+    "folder",
+    "partitioned",
+    "csv",
+    "dataset",
+    "reader",
+    "table",
+    "generator",
+    "frame",
+    "function",
+    "read_table",
+]
+
+
+def source_of(kind, data, folder):
+    table = pa.Table.from_pandas(data, preserve_index=False)
+    if kind in ("parquet", "read_table"):
+        pq.write_table(table, folder / "rows.parquet", row_group_size=41)
+        return folder / "rows.parquet" if kind == "parquet" else read_table(folder / "rows.parquet")
+    if kind in ("folder", "dataset"):
+        for i in range(4):
+            pq.write_table(table.slice(80 * i, 80), folder / f"part-{i}.parquet", row_group_size=30)
+        return folder if kind == "folder" else ds.dataset(folder)
+    if kind == "partitioned":
+        ds.write_dataset(
+            table,
+            folder,
+            format="parquet",
+            partitioning=ds.partitioning(pa.schema([("frames", pa.int64())]), flavor="hive"),
+        )
+        return folder
+    if kind == "csv":
+        data.to_csv(folder / "rows.csv", index=False)
+        return folder / "rows.csv"
+    return {
+        "reader": lambda: pa.RecordBatchReader.from_batches(table.schema, table.to_batches(max_chunksize=23)),
+        "table": lambda: table,
+        "generator": split(data, [20, 20, 150]),
+        "frame": lambda: data,
+        "function": lambda: split(data, [20, 20, 150]),
+    }[kind]()
+
+
+@pytest.mark.parametrize("kind", SOURCES)
+def test_every_source(kind, tmp_path):
+    data = make()
+    got = streamed(FORMULA, source_of(kind, data, tmp_path), period="season", chunk_rows=37)
+    wanted = build_panel(FORMULA, data, unit="hive", period="season")
+    if kind == "partitioned":  # rows come in the order of the folders
+        assert got.accounting.rows_used == wanted.accounting.rows_used
+        assert got.names == wanted.names
+    else:
+        same_recipe(got, wanted)
+        same_rows(got, wanted)
+        assert got.period_note == wanted.period_note
+    spooled = kind in ("reader", "table", "generator")
+    assert (got.source_note is not None) == spooled
+    moments, expected = moments_of(got), moments_of(wanted)
+    same_moments(moments, expected)
+    same_fits(moments[1], expected[1])
+
+
+@pytest.mark.parametrize(
+    "formula",
+    [
+        "honey ~ center(forage)",
+        "honey ~ standardize(forage) + scale(weight)",
+        "honey ~ center(np.log(weight))",
+        "honey ~ np.log(center(weight) + 1)",
+        "honey ~ C(forage > 1) * weight",
+        "honey ~ C(region, Sum) + C(frames, levels=[3, 2, 1])",
+        "np.log(honey) ~ I(region == 'east') + region:weight",
+        "honey ~ 0 + region",
+        "honey ~ C(season)",
+    ],
+)
+def test_what_is_learned_is_that_of_the_whole(formula):
+    data = make()
+    wanted = build_panel(formula, data, unit="hive")
+    got = streamed(formula, split(data, [1, 9, 60, 200]))
+    same_recipe(got, wanted)
+    x = np.vstack([part[1] for part in got.blocks_with_codes()])
+    # a mean of 300 values summed in another order: 300 eps of the largest value, 10
+    np.testing.assert_allclose(x, wanted.matrix()[0], rtol=0, atol=1e-12)
+
+
+def test_levels_that_only_dropped_rows_have_are_left_out():
+    data = make()
+    data["grade"] = pd.Categorical(np.where(np.arange(300) % 2, "a", "b"), ["c", "b", "a", "d"])
+    data.loc[3, "grade"] = "d"  # forage is missing there
+    wanted = build_panel("honey ~ forage + grade", data, unit="hive")
+    got = streamed("honey ~ forage + grade", split(data, [2, 5, 100]))
+    same_recipe(got, wanted)
+    assert got.names[1] == "grade[T.a]"
+    assert any("left out: c, d" in note for note in got.accounting.notes)
+
+
+def test_keys_in_text_files_are_read_over_all_lines(tmp_path):
+    data = make().assign(hive=lambda frame: frame["hive"].map("{:02d}".format))
+    path = tmp_path / "rows.csv"
+    data.to_csv(path, index=False)
+    got = streamed("honey ~ forage", path, chunk_rows=29)
+    same_recipe(got, build_panel("honey ~ forage", path, unit="hive"))
+    assert got.unit_keys[0] == "00"
+
+
+@pytest.mark.parametrize("step", [None, 1, 2])
+def test_sorted_rows_are_differenced_over_the_edges_of_chunks(step):
+    data = make().sort_values(["hive", "season"]).drop(columns="region")
+    formula = "honey ~ forage + weight"
+    wanted = build_panel(formula, data, unit="hive", period="season")
+    x, y = wanted.matrix()
+    expected = differences_of(x, y, wanted.codes, wanted.period_ordinals, step)
+    got = streamed(formula, split(data, range(0, 300, 3)), period="season")
+    assert got.order.reason is None
+    used = min(got.order.jumps) if step is None else step
+    factor = np.zeros_like(expected.factor)
+    count = 0
+    for rows in got.difference_rows(used, rows=2):
+        factor = stack_factors(factor, factor_from_rows(rows))
+        count += len(rows)
+    assert (count, used) == (expected.count, expected.step)
+    assert count == got.order.jumps[used]
+    # sums of at most 300 products, whose relative error is below 300 eps of the largest
+    products = expected.factor.T @ expected.factor
+    np.testing.assert_allclose(factor.T @ factor, products, rtol=0, atol=1e-12 * products.max())
+
+
+def test_exact_arithmetic_with_an_offset_and_units_in_every_chunk():
+    """Rational arithmetic on the stored doubles: offsets of 1e9, units of 4 rows, one row of each in each chunk."""
+    rng = np.random.default_rng(2)
+    units, rows = 5, 4
+    x = 1e9 + rng.integers(-64, 64, (rows, units)) / 8.0
+    y = 1e9 + 2 * (x - 1e9) + rng.integers(-64, 64, (rows, units)) / 16.0 + np.arange(units) / 4.0
+    frames = [pd.DataFrame({"hive": np.arange(units), "honey": y[t], "forage": x[t]}) for t in range(rows)]
+    panel = streamed("honey ~ forage", lambda: iter(frames))
+    opened, closed = moments_of(panel)
+    z = [[(Fraction(1), Fraction(x[t, i]), Fraction(y[t, i])) for t in range(rows)] for i in range(units)]
+    mean = [[sum(row[j] for row in unit) / rows for j in range(3)] for unit in z]
+    within = [
+        [sum((r[a] - mean[i][a]) * (r[b] - mean[i][b]) for i in range(units) for r in z[i]) for b in range(3)]
+        for a in range(3)
+    ]
+    exact = np.array([[float(value) for value in line] for line in within])
+    scale = np.sqrt(np.diag(exact)[1:])
+    gap = (opened.within - exact)[1:, 1:] / np.outer(scale, scale)
+    assert np.abs(gap).max() < 1e-13  # differences of stored doubles are exact; 20 products are added
+    for psi in (Fraction(0), Fraction(1), Fraction(7, 2)):
+        weight = rows / (1 + rows * psi)
+        a = [[within[j][k] + weight * sum(m[j] * m[k] for m in mean) for k in range(3)] for j in range(3)]
+        determinant = a[0][0] * a[1][1] - a[0][1] * a[1][0]
+        slope = (a[0][0] * a[1][2] - a[1][0] * a[0][2]) / determinant
+        constant = (a[0][2] * a[1][1] - a[0][1] * a[1][2]) / determinant
+        beta = curve_of(closed).at(float(psi)).beta
+        assert abs(beta[1] - float(slope)) < 1e-13 * abs(float(slope)) * 10  # condition of the centred design
+        # the constant is the mean of y minus slope times 1e9: it inherits the rounding of the slope
+        assert abs(beta[0] - float(constant)) < 1e9 * 1e-13 * 10 * abs(float(slope))
