@@ -1,6 +1,7 @@
 """Panels from chunks against the panel of the same rows in one frame, and against rational arithmetic."""
 
 import itertools
+import tracemalloc
 from fractions import Fraction
 
 import numpy as np
@@ -314,3 +315,41 @@ def test_exact_arithmetic_with_an_offset_and_units_in_every_chunk():
         assert abs(beta[1] - float(slope)) < 1e-13 * abs(float(slope)) * 10  # condition of the centred design
         # the constant is the mean of y minus slope times 1e9: it inherits the rounding of the slope
         assert abs(beta[0] - float(constant)) < 1e9 * 1e-13 * 10 * abs(float(slope))
+
+
+@settings(max_examples=25, deadline=None)
+@given(st.integers(0, 10**6), st.lists(st.integers(0, 120), max_size=12))
+def test_every_dropped_row_has_the_cause_it_has_in_memory(seed, cuts):
+    rng = np.random.default_rng(seed)
+    data = make(120, seed)
+    for name in data.columns:
+        holes = rng.random(120) < 0.08
+        data[name] = data[name].astype(object if name == "region" else float).where(~holes)
+    data.loc[rng.integers(0, 120, 5), "weight"] = -1.0
+    data = data.drop_duplicates(["hive", "season"])
+    formula = "honey ~ np.log(weight) + center(np.sqrt(weight)) + np.log(center(forage) + 1) + C(region)"
+    wanted = build_panel(formula, data, unit="hive", period="season")
+    got = streamed(formula, split(data, [min(cut, len(data)) for cut in cuts]), period="season")
+    same_recipe(got, wanted)
+    assert got.period_note == wanted.period_note
+
+
+def test_memory_does_not_grow_with_rows():
+    def peak(chunks):
+        def frames():
+            for i in range(chunks):
+                rng = np.random.default_rng(i)
+                yield pd.DataFrame(
+                    {"hive": rng.integers(0, 50, 4000), "honey": rng.normal(size=4000), "forage": i + 0.5}
+                )
+
+        tracemalloc.start()
+        try:
+            moments_of(streamed("honey ~ forage", frames))
+            return tracemalloc.get_traced_memory()[1]
+        finally:
+            tracemalloc.stop()
+
+    peak(2)  # what is imported or cached once does not count
+    # all rows of the longer run are 30 * 4000 * 24 bytes = 2.9 MB, fifteen times those of the shorter one
+    assert peak(30) < 1.25 * peak(2)

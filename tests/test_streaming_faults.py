@@ -159,7 +159,7 @@ def test_what_needs_all_rows_is_refused(formula, reason):
 def test_memory_is_estimated_before_moments_are_taken():
     with pytest.raises(DataError, match=r"moments of 12 units with 6 columns .* memory_limit = 0\.0 MiB"):
         streamed(split(make(), 30), "honey ~ forage + C(season)", memory_limit=12 * 8 * 32 - 1)
-    with pytest.raises(DataError, match="More than 12 units so far"):
+    with pytest.raises(DataError, match="read so far have 12 units"):
         streamed(split(make(), 30), memory_limit=100)
     assert streamed(split(make(), 30), "honey ~ forage + C(season)", memory_limit=12 * 8 * 32).N == 12
 

@@ -116,7 +116,7 @@ class _Book:
     used: int = 0
     missing: dict[str, int] = field(default_factory=dict)
     dropped: dict[tuple[str, str], int] = field(default_factory=dict)
-    bad: dict[str, int] = field(default_factory=dict)
+    bad: dict[str, tuple[int, int]] = field(default_factory=dict)
     numbers: dict[EvalFactor, _Numbers] = field(default_factory=dict)
     labels: dict[EvalFactor, tuple[Distinct, Labels]] = field(default_factory=dict)
     notes: dict[str, str] = field(default_factory=dict)
@@ -129,8 +129,9 @@ class _Book:
             self.missing[name] = self.missing.get(name, 0) + count
         for cause, name, count in step.account.dropped:
             self.dropped[cause, name] = self.dropped.get((cause, name), 0) + count
-        for name, count in step.bad:
-            self.bad[name] = self.bad.get(name, 0) + count
+        for stage, name, count in step.bad:
+            before, so_far = self.bad.get(name, (stage, 0))
+            self.bad[name] = min(stage, before), so_far + count
         for reading in step.readings:
             for name, column in reading.columns.items():
                 if column.note is not None:
@@ -139,12 +140,20 @@ class _Book:
             return
         names = self.plan.keys
         self.units.add(step.key(names[0]), step.place)
-        if len(self.units) > self.most_units:
-            raise _too_many(len(self.units), self.most_units)
+        self.check_units(self.units.settled)
         if self.periods is not None:
             self.periods.add(step.key(names[1]), step.place)
         for reading, value in zip(step.readings, step.values, strict=False):
             self._value(reading, value, step)
+
+    def check_units(self, units: int) -> None:
+        """Stop before the keys alone fill the memory."""
+        if units > self.most_units:
+            raise DataError(
+                f"The rows read so far have {units:,} units: moments of so many do not fit into memory_limit, "
+                f"which allows about {int(self.most_units):,} with these columns. Raise memory_limit, or check "
+                "that unit= names the grouping column."
+            )
 
     def _value(self, reading: Reading, value: Value, step: Step) -> None:
         factor = reading.factor
@@ -166,20 +175,15 @@ class _Book:
         order += [("missing outcome", name) for name in reads[0]]
         order += [("missing covariate", name) for names in reads[1:] for name in names]
         dropped = [(*key, self.dropped[key]) for key in dict.fromkeys(order) if key in self.dropped]
-        dropped += [(f"not a number in {name}", name, count) for name, count in self.bad.items()]
+        places = {factor.code: place for place, factor in enumerate(self.plan.reads)}
+        for name in sorted(self.bad, key=lambda name: (self.bad[name][0], places[name])):
+            dropped.append((f"not a number in {name}", name, self.bad[name][1]))
         missing = {name: self.missing.get(name, 0) for _, name in order}
         return Accounting(self.given, self.used, tuple(dropped), tuple(missing.items()))
 
 
 def _coded(factor: EvalFactor, values: Distinct, labels: Labels) -> Coded:
     return code_values(factor.code, C(values.series(), labels.contrast, labels.levels))
-
-
-def _too_many(units: int, most: float) -> DataError:
-    return DataError(
-        f"More than {units:,} units so far: moments of so many do not fit into memory_limit, which allows about "
-        f"{int(most):,} with these columns. Raise memory_limit, or check that unit= names the grouping column."
-    )
 
 
 def learn_all(
@@ -215,6 +219,7 @@ def learn_all(
             unsettled |= step.unsettled
         if not book.given:
             raise DataError("The data have no rows.")
+        book.check_units(len(book.units))
         account = book.account()
         _check_left(account, incomplete_rows)
         if not (stage.states and unsettled):

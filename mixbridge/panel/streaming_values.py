@@ -13,7 +13,7 @@ from mixbridge.panel.keys import whole_numbers
 
 __all__ = ["Distinct"]
 
-_PENDING = 1 << 20
+_PENDING = 1 << 16
 _LARGEST = np.iinfo(np.int64).max
 
 
@@ -47,6 +47,11 @@ class Distinct:
         """Return the number of distinct values."""
         return len(self._settled())
 
+    @property
+    def settled(self) -> int:
+        """At least how many values are distinct, without work."""
+        return 0 if self._values is None else len(self._values)
+
     def add(self, series: pd.Series[Any], place: str) -> None:
         """Take in the values of a chunk.
 
@@ -58,21 +63,24 @@ class Distinct:
         if not len(series):
             return
         self._note_categories(series)
-        fresh = self._plain(series).drop_duplicates()
+        plain = self._plain(series)
+        seen = None if self._values is None else self._places(plain, self._values) >= 0
+        fresh = plain.drop_duplicates() if seen is None else plain[~seen].drop_duplicates()
         dtype = "category" if isinstance(series.dtype, pd.CategoricalDtype) else series.dtype
         if self._values is None and not self._pending:
             self._dtype = dtype
         else:
             known = self._values if self._values is not None else self._pending[0]
-            if _sort_of(known) != _sort_of(fresh):
+            if _sort_of(known) != _sort_of(plain):
                 raise DataError(
-                    f"In {place} the column {self.name!r} holds {_sort_of(fresh)} ({series.dtype}); before, it "
+                    f"In {place} the column {self.name!r} holds {_sort_of(plain)} ({series.dtype}); before, it "
                     f"held {_sort_of(known)}. Give the column one type in all parts of the data."
                 )
             self._dtype = dtype if dtype == self._dtype else None
-        self._pending.append(fresh)
-        self._waiting += len(fresh)
-        if self._waiting > max(_PENDING, 0 if self._values is None else 2 * len(self._values)):
+        if len(fresh):
+            self._pending.append(fresh)
+            self._waiting += len(fresh)
+        if self._waiting > max(_PENDING, self.settled):
             self._settled()
 
     def series(self) -> pd.Series[Any]:
@@ -92,8 +100,10 @@ class Distinct:
             places = np.full(len(series), -1, dtype=np.intp)
             places[~gaps] = self.find(series[~gaps])
             return places
-        values = self._plain(series)
-        known = self._settled()
+        return self._places(self._plain(series), self._settled())
+
+    def _places(self, values: pd.Series[Any], known: pd.Series[Any]) -> npt.NDArray[np.intp]:
+        """Return the place of each value among known ones."""
         whole = values.dtype == np.int64 and known.dtype == np.int64
         if self._index is None and self._table is None:
             self._prepare(known)

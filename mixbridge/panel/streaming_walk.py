@@ -111,8 +111,8 @@ class Step:
         The value of each factor; empty where the walk had no stage.
     account : Accounting
         Rows dropped because something is missing.
-    bad : tuple of (str, int)
-        Rows dropped because a factor is not a number, by factor.
+    bad : tuple of (int, str, int)
+        Rows dropped because a factor is not a number: stage, factor, and how many.
     unsettled : bool
         Whether the last stage dropped a row.
     """
@@ -123,7 +123,7 @@ class Step:
     readings: list[Reading]
     values: list[Value]
     account: Accounting
-    bad: tuple[tuple[str, int], ...] = ()
+    bad: tuple[tuple[int, str, int], ...] = ()
     unsettled: bool = False
 
     @property
@@ -176,11 +176,11 @@ def _step(plan: Plan, chunk: Chunk, stages: Sequence[Stage]) -> Step:
     for reading in readings:
         _refuse_whole(reading)
     values: list[Value] = []
-    bad: list[tuple[str, int]] = []
+    bad: list[tuple[int, str, int]] = []
     stale = False
-    for stage in stages:
+    for number, stage in enumerate(stages):
         values, keep, found = _at_stage(plan, readings, rows, len(frame), stage)
-        bad += found
+        bad += [(number, name, count) for name, count in found]
         stale = keep is not None
         if keep is not None:
             rows = np.flatnonzero(keep) if rows is None else rows[keep]
