@@ -207,6 +207,17 @@ def test_a_stream_is_spooled_and_its_file_removed():
     assert not Path(path).exists()
 
 
+def test_a_stream_that_begins_without_values():
+    data = make().astype({"region": object})
+    data.loc[:29, "region"] = None
+    data.loc[45:, "region"] = None
+    parts = split(data, 15, 30, 45)
+    panel = streamed(parts(), "honey ~ forage + region")
+    assert panel.accounting == build_panel("honey ~ forage + region", data, unit="hive").accounting
+    assert panel.n == 15
+    assert panel.names == ("Intercept", "region[T.west]", "forage")
+
+
 def test_a_stream_whose_columns_change():
     parts = [make(), make().drop(columns="region")]
     with pytest.raises(DataError, match="Part 1 of the data has the columns"):

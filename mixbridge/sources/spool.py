@@ -67,8 +67,8 @@ def spool(stream: Any, rows: int = CHUNK_ROWS) -> SpooledChunks:
     """
     folder = Path(tempfile.mkdtemp(prefix="mixbridge-"))
     try:
-        parts = _write(stream, folder / "rows.parquet")
-        file = open_parquet_chunks([folder / "rows.parquet"], rows)
+        parts, files = _write(stream, folder)
+        file = open_parquet_chunks(files, rows)
     except BaseException:
         shutil.rmtree(folder, ignore_errors=True)
         raise
@@ -76,25 +76,42 @@ def spool(stream: Any, rows: int = CHUNK_ROWS) -> SpooledChunks:
     return SpooledChunks(replace(file, note=note), folder)
 
 
-def _write(stream: Any, path: Path) -> int:
-    """Write the parts of a stream; return how many there were."""
+def _write(stream: Any, folder: Path) -> tuple[int, list[Path]]:
+    """Write the parts of a stream; return how many there were, and the files.
+
+    A column without a value so far has no type; the part that brings one begins a new file.
+    """
     pa = import_pyarrow("A stream that can be read once")
     parquet = import_pyarrow("A stream that can be read once", "pyarrow.parquet")
+    files: list[Path] = []
     writer, number, schema = None, -1, None
     try:
         for number, table in enumerate(_tables(stream, pa)):
-            if writer is None:
-                schema = table.schema.remove_metadata()
-                writer = parquet.ParquetWriter(path, schema)
+            known = table.schema.remove_metadata() if schema is None else _typed(schema, table.schema, pa)
+            if writer is None or known != schema:
+                if writer is not None:
+                    writer.close()
+                schema = known
+                files.append(folder / f"rows-{len(files)}.parquet")
+                writer = parquet.ParquetWriter(files[-1], schema)
             writer.write_table(_as(table, schema, number, pa))
     except (pa.ArrowException, OSError) as error:
         raise DataError(f"The stream broke off after part {number}: {error}") from error
     finally:
         if writer is not None:
             writer.close()
-    if writer is None:
+    if not files:
         raise DataError("The data have no rows: the stream is empty.")
-    return number + 1
+    return number + 1, files
+
+
+def _typed(schema: Any, newer: Any, pa: Any) -> Any:
+    """Return a schema in which columns without a type so far have that of a later part."""
+    for place, field in enumerate(schema):
+        at = newer.get_field_index(field.name)
+        if pa.types.is_null(field.type) and at >= 0 and not pa.types.is_null(newer.field(at).type):
+            schema = schema.set(place, newer.field(at).remove_metadata())
+    return schema
 
 
 def _tables(stream: Any, pa: Any) -> Iterator[Any]:
