@@ -264,6 +264,17 @@ def test_keys_in_text_files_are_read_over_all_lines(tmp_path):
     assert got.unit_keys[0] == "00"
 
 
+def test_fractions_are_text_as_units_and_numbers_as_periods(tmp_path):
+    data = make().assign(hive=lambda frame: frame["hive"] + 0.5, season=lambda frame: frame["season"] / 4)
+    path = tmp_path / "rows.csv"
+    data.to_csv(path, index=False)
+    got = streamed("honey ~ forage", path, period="season", chunk_rows=29)
+    wanted = build_panel("honey ~ forage", path, unit="hive", period="season")
+    same_recipe(got, wanted)
+    assert got.unit_keys[0] == "0.5"
+    assert got.period_note == wanted.period_note == "season: numbers in steps of 0.25"
+
+
 @pytest.mark.parametrize("step", [None, 1, 2])
 def test_sorted_rows_are_differenced_over_the_edges_of_chunks(step):
     data = make().sort_values(["hive", "season"]).drop(columns="region")
