@@ -73,3 +73,14 @@ def test_the_first_screen_names_causes_that_add_up(study):
     np.testing.assert_allclose(causes["in_se"].sum(), gap, rtol=1e-9)
     for cause in causes.loc[causes["in_se"].abs() >= 0.05, "cause"]:
         assert cause in line
+
+
+def test_the_half_width_is_split_between_covariance_types_too(study):
+    found = study.attribution("feeding", study.fit("swamy_arora", covariance="CR2"), "reml")
+    total = np.log(
+        study.intervals(study.fit("swamy_arora", covariance="CR2"))["feeding"].half_width
+        / study.intervals(study.fit("reml"))["feeding"].half_width
+    )
+    parts = found.half_width
+    np.testing.assert_allclose(parts.select_dtypes("number").iloc[:, 0].sum(), total, rtol=1e-9)
+    assert "covariance type" in str(found)

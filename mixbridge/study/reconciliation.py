@@ -12,6 +12,9 @@ from mixbridge.routes import Fit
 from mixbridge.study.correlated import StudyCorrelated
 
 if TYPE_CHECKING:
+    import numpy as np
+    from numpy.typing import NDArray
+
     from mixbridge.reconcile.attribution import Attribution
     from mixbridge.reconcile.path import Path
     from mixbridge.resample import Bootstrap
@@ -49,7 +52,8 @@ class StudyReconciliation(StudyCorrelated):
             Largest gap that does not matter, in units of the coefficient: adds ``margin, gap_in_margin,
             within_margin``.
         noise : Bootstrap, optional
-            From `bootstrap`: adds each gap over its own standard deviation under the fitted model.
+            From `bootstrap`: adds each gap over its own standard deviation under the fitted model. It assumes the
+            model that an audit questions.
 
         Returns
         -------
@@ -98,7 +102,9 @@ class StudyReconciliation(StudyCorrelated):
         left = self._named(a)
         right = self._named(self.primary if b is None else b)
         intervals = (self.intervals(left), self.intervals(right))
-        return attribute(self.curve, self.fits, term, left, right, intervals=intervals)
+        return attribute(
+            self.curve, self.fits, term, left, right, intervals=intervals, errors=self._errors_of_kind
+        )
 
     def path(self, term: str, points: int = 101) -> Path:
         """Follow one coefficient from pooled to within, with every route's place and the exact set of ratios on it.
@@ -176,6 +182,12 @@ class StudyReconciliation(StudyCorrelated):
 
         fit = self.fit(self.primary if route is None else route)
         return crosswalk(fit, self.moments.counts)
+
+    def _errors_of_kind(self, fit: Fit, kind: str) -> NDArray[np.float64]:
+        """Return the standard errors of a fit under another kind of covariance."""
+        kept = ("between", "expectation", "divisor", "count", "prior", "scale", "one_row_units")
+        conventions = {name: value for name, value in fit.conventions.items() if name in kept}
+        return self.fit(fit.route, covariance=kind, **conventions).standard_errors.to_numpy(dtype=float)
 
     def _named(self, route: str | Fit) -> Fit:
         if isinstance(route, Fit):
