@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 
-from benchmarks import arrays, frames, growth, inference, likelihood, matching, memory, resampling
+from benchmarks import arrays, deletions, frames, growth, inference, likelihood, matching, memory, resampling
 from benchmarks.profiles import Profile
 from benchmarks.results import Result
 
@@ -34,6 +34,8 @@ PROBLEMS = {
     "inference": Problem("Inference after the moments", inference.inference),
     "matching": Problem("Printed figures against every convention", matching.matching),
     "early": Problem("How often a general optimiser of REML stops early", matching.early),
+    "deletions": Problem("Leave-one-unit-out", deletions.deletions),
+    "rehearsal": Problem("Rehearsal of a design", deletions.rehearsal),
     "resampling": Problem("Parametric bootstrap in moment space", resampling.resampling),
 }
 """Add a function that takes a profile and returns a result, and a line here."""
