@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
+from mixbridge.report.progress import progress_line
 from mixbridge.study.resampling import StudyResampling
 
 if TYPE_CHECKING:
@@ -47,7 +48,9 @@ class StudyAudit(StudyResampling):
         """
         from mixbridge.rehearse import rehearse
 
-        return rehearse(self, truth, replicates, seed, confidence=self.confidence)
+        return rehearse(
+            self, truth, replicates, seed, confidence=self.confidence, progress=progress_line("replicates")
+        )
 
     def minimum_detectable(
         self, route: str | None = None, power: float = 0.8, level: float = 0.05

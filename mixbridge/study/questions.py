@@ -9,6 +9,7 @@ import numpy as np
 import pandas as pd
 
 from mixbridge.errors import IdentificationError, OptionError
+from mixbridge.report.progress import progress_line
 from mixbridge.routes import Fit
 from mixbridge.study.base import StudyBase
 
@@ -173,7 +174,7 @@ class StudyQuestions(StudyBase):
         """
         from mixbridge.inference.variance_tests import variance_tests
 
-        return variance_tests(self.curve, self.fits, seed, draws, progress=progress)
+        return variance_tests(self.curve, self.fits, seed, draws, progress=progress or progress_line("draws"))
 
     def component_intervals(self, confidence: float | None = None) -> pd.DataFrame:
         """Give intervals for both variances, ratio and ICC by every method, exact ones marked.

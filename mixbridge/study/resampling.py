@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from mixbridge.errors import OptionError
+from mixbridge.report.progress import progress_line
 from mixbridge.study.reconciliation import StudyReconciliation
 
 if TYPE_CHECKING:
@@ -44,7 +45,7 @@ class StudyResampling(StudyReconciliation):
         workers : int, optional
             Threads; results do not depend on them.
         progress : callable, optional
-            Called with replicates done and asked for.
+            Called with replicates done and asked for; a line on the terminal past two seconds unless given.
 
         Returns
         -------
@@ -62,7 +63,7 @@ class StudyResampling(StudyReconciliation):
             seed=seed,
             confidence=self.confidence,
             workers=workers,
-            progress=progress,
+            progress=progress or progress_line("replicates"),
         )
 
     def zero_tests(self, replicates: int = 9_999, seed: int = 20_050) -> pd.DataFrame:
@@ -97,7 +98,7 @@ class StudyResampling(StudyReconciliation):
         names : bool
             Whether units are named; who was influential may disclose a confidential unit.
         progress : callable, optional
-            Called with units done and their number.
+            Called with units done and their number; a line on the terminal past two seconds unless given.
 
         Returns
         -------
@@ -121,7 +122,7 @@ class StudyResampling(StudyReconciliation):
             multipliers=multipliers,
             confidence=self.confidence,
             names=names,
-            progress=progress,
+            progress=progress or progress_line("units left out"),
         )
 
     def leave_two_out(self, units: Sequence[Hashable], routes: Sequence[str] | None = None) -> LeftOut:
