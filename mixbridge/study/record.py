@@ -12,7 +12,7 @@ import pandas as pd
 from mixbridge.errors import OptionError
 from mixbridge.moments import column_table
 from mixbridge.routes import iterate
-from mixbridge.study.auditing import StudyAudit
+from mixbridge.study.reporting import StudyReport
 
 if TYPE_CHECKING:
     from mixbridge.reconcile.identities import Identity
@@ -23,7 +23,7 @@ COMPONENT_COLUMNS = ["unit_variance", "idiosyncratic_variance", "ratio", "icc"]
 
 
 @dataclass(frozen=True, eq=False, repr=False)
-class Study(StudyAudit):
+class Study(StudyReport):
     """A cross-check: what `crosscheck` returns.
 
     Attributes
