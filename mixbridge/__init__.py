@@ -13,7 +13,8 @@ from mixbridge.errors import (
 )
 from mixbridge.moments import Moments, OpenMoments
 from mixbridge.routes import Fit
-from mixbridge.study import Study, adopt, crosscheck
+from mixbridge.sources.chunk_options import ChunkOptions
+from mixbridge.study import Study, adopt, crosscheck, from_moments
 
 _LATER = {
     "UnitProducts": "mixbridge.moments.products",
@@ -24,6 +25,7 @@ _LATER = {
 }
 
 __all__ = [
+    "ChunkOptions",
     "DataError",
     "DisagreementError",
     "Fit",
@@ -39,6 +41,7 @@ __all__ = [
     "crosscheck",
     "crosswalk",
     "demo",
+    "from_moments",
     "match_reported",
     "read_figures",
     "rehearse",

@@ -9,7 +9,6 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from types import MappingProxyType
-from typing import cast
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,7 +19,7 @@ from mixbridge.errors import DataError, IdentificationError
 from mixbridge.moments import Moments, OpenMoments, close
 from mixbridge.moments.products import UnitProducts
 from mixbridge.panel import Panel
-from mixbridge.panel.design import Design
+from mixbridge.panel.widened import WidenedPanel
 
 __all__ = ["Augmented", "augment", "widen_products"]
 
@@ -194,27 +193,9 @@ def widen_products(products: UnitProducts, augmented: Augmented) -> UnitProducts
     )
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class _WithUnitValues:
-    """A design with values of units as further columns, looked up for each block of rows."""
-
-    given: Design
-    values: FloatArray
-    codes: IntArray
-
-    def block(self, start: int, stop: int) -> FloatArray:
-        """Return the columns for used rows from start to stop."""
-        return np.hstack([self.given.block(start, stop), self.values[self.codes[start:stop]]])
-
-
 def _widen_panel(panel: Panel, opened: OpenMoments, at: IntArray, names: tuple[str, ...]) -> Panel:
     place = opened.keys.get_indexer(panel.unit_keys)
-    values = (opened.means[:, at] + opened.shift[at])[place]
-    p = len(panel.names)
-    terms = {**panel.terms, **{name: slice(p + j, p + j + 1) for j, name in enumerate(names)}}
-    # a panel asks of its design only `block`
-    design = cast(Design, _WithUnitValues(panel.design, values, panel.codes))
-    return replace(panel, names=(*panel.names, *names), terms=MappingProxyType(terms), design=design)
+    return WidenedPanel(panel, (opened.means[:, at] + opened.shift[at])[place], names)
 
 
 def _widen_opened(opened: OpenMoments, at: IntArray, names: tuple[str, ...]) -> OpenMoments:

@@ -2,6 +2,6 @@
 
 from mixbridge.panel.accounting import Accounting
 from mixbridge.panel.build import build_panel
-from mixbridge.panel.record import Panel
+from mixbridge.panel.record import HeldPanel, Panel
 
-__all__ = ["Accounting", "Panel", "build_panel"]
+__all__ = ["Accounting", "HeldPanel", "Panel", "build_panel"]

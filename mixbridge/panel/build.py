@@ -20,7 +20,7 @@ from mixbridge.panel.design import lay_out
 from mixbridge.panel.factors import Numeric
 from mixbridge.panel.formula import parse_formula
 from mixbridge.panel.readings import factor_columns, make_environment, read_factors
-from mixbridge.panel.record import Panel
+from mixbridge.panel.record import HeldPanel
 from mixbridge.panel.roles import check_role, periods_of, units_of
 from mixbridge.sources import Source, open_source
 
@@ -38,7 +38,7 @@ def build_panel(
     incomplete_rows: Literal["drop", "refuse"] = "drop",
     trusted: bool = True,
     env: int | EvalEnvironment = 0,
-) -> Panel:
+) -> HeldPanel:
     """Validate rows and lay out the design of a formula.
 
     Parameters
@@ -64,7 +64,7 @@ def build_panel(
 
     Returns
     -------
-    Panel
+    HeldPanel
         Rows in the order of the data.
 
     Raises
@@ -139,7 +139,7 @@ def build_panel(
     for array in (codes, ordinals):
         if array is not None:
             array.setflags(write=False)
-    return Panel(
+    return HeldPanel(
         formula=formula,
         outcome=parsed.outcome.name(),
         names=design.names,

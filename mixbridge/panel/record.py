@@ -1,9 +1,10 @@
-"""The panel: validated rows, ready to be turned into moments."""
+"""What a panel is, and the one whose rows are at hand."""
 
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
+from typing import Protocol
 
 import numpy as np
 import numpy.typing as npt
@@ -14,11 +15,60 @@ from mixbridge.panel.accounting import Accounting
 from mixbridge.panel.design import Design
 from mixbridge.panel.factors import Numeric
 
-__all__ = ["Panel"]
+__all__ = ["Block", "HeldPanel", "Panel"]
+
+FloatArray = npt.NDArray[np.float64]
+CodeArray = npt.NDArray[np.intp]
+Block = tuple[CodeArray, FloatArray, FloatArray]
+"""Unit codes of some rows, their design columns and their outcome."""
+
+
+class Panel(Protocol):
+    """What every panel knows: validated columns, units and periods, and an account of every row.
+
+    `HeldPanel` describes each attribute. A panel whose rows are not held together raises a DataError where the
+    rows in order are asked for (`codes`, `row_labels`, `matrix`), one without rows also at `blocks`.
+    """
+
+    @property
+    def formula(self) -> str: ...  # noqa: D102
+    @property
+    def outcome(self) -> str: ...  # noqa: D102
+    @property
+    def names(self) -> tuple[str, ...]: ...  # noqa: D102
+    @property
+    def terms(self) -> Mapping[str, slice]: ...  # noqa: D102
+    @property
+    def constant(self) -> int | None: ...  # noqa: D102
+    @property
+    def codes(self) -> CodeArray: ...  # noqa: D102
+    @property
+    def unit_keys(self) -> pd.Index: ...  # noqa: D102
+    @property
+    def unit_name(self) -> str: ...  # noqa: D102
+    @property
+    def period_name(self) -> str | None: ...  # noqa: D102
+    @property
+    def period_ordinals(self) -> npt.NDArray[np.int64] | None: ...  # noqa: D102
+    @property
+    def period_note(self) -> str | None: ...  # noqa: D102
+    @property
+    def row_labels(self) -> pd.Index: ...  # noqa: D102
+    @property
+    def accounting(self) -> Accounting: ...  # noqa: D102
+    @property
+    def source_note(self) -> str | None: ...  # noqa: D102
+    @property
+    def n(self) -> int: ...  # noqa: D102
+    @property
+    def N(self) -> int: ...  # noqa: D102
+    def blocks(self, rows: int = 8192) -> Iterator[tuple[int, FloatArray, FloatArray]]: ...  # noqa: D102
+    def blocks_with_codes(self, rows: int = 8192) -> Iterator[Block]: ...  # noqa: D102
+    def matrix(self) -> tuple[FloatArray, FloatArray]: ...  # noqa: D102
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Panel:
+class HeldPanel:
     """The rows used, their units and periods, and the recipe of their design columns.
 
     Blocks are read from the data when they are asked for; data changed in place in between would be
@@ -104,6 +154,16 @@ class Panel:
         for start in range(0, self.n, rows):
             stop = min(start + rows, self.n)
             yield start, self.design.block(start, stop), self._outcome(start, stop)
+
+    @property
+    def source_note(self) -> str | None:
+        """What was done to read the rows: nothing here."""
+        return None
+
+    def blocks_with_codes(self, rows: int = 8192) -> Iterator[Block]:
+        """Yield unit codes, design and outcome block by block, as `mixbridge.moments.collect` takes them."""
+        for start, x, y in self.blocks(rows):
+            yield self.codes[start : start + len(y)], x, y
 
     def matrix(self) -> tuple[npt.NDArray[np.float64], npt.NDArray[np.float64]]:
         """Return the whole design matrix and the outcome; for small data."""

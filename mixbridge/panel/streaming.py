@@ -12,6 +12,7 @@ import pandas as pd
 from patsy import EvalEnvironment
 
 from mixbridge.errors import DataError, FormulaError, OptionError
+from mixbridge.panel.absent import Apart
 from mixbridge.panel.accounting import Accounting
 from mixbridge.panel.design import Design, lay_out
 from mixbridge.panel.formula import parse_formula
@@ -37,7 +38,7 @@ means in order of size."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class StreamedPanel:
+class StreamedPanel(Apart):
     """The recipe of a panel whose rows are read anew each time blocks are asked for.
 
     Parameters
@@ -79,11 +80,6 @@ class StreamedPanel:
     def period_note(self) -> str | None:
         """How periods were read, or why they have no order."""
         return self.order.note
-
-    @property
-    def period_ordinals(self) -> None:
-        """Nothing: the periods of all rows are never held."""
-        return
 
     def blocks_with_codes(self, rows: int = 8192) -> Iterator[tuple[CodeArray, FloatArray, FloatArray]]:
         """Yield unit codes, design and outcome block by block, as `mixbridge.moments.collect` takes them.

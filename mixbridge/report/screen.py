@@ -78,7 +78,7 @@ def study_screen(study: StudyView) -> str:
 def _rows_used(study: StudyView) -> list[str]:
     panel, moments, fit = study.panel, study.moments, study.fits[study.primary]
     account = panel.accounting
-    sizes = np.repeat(moments.sizes, moments.counts)
+    sizes = moments.sizes
     rows = f"{account.rows_used} of {account.rows_given} used"
     if account.rows_dropped:
         causes = [
@@ -92,7 +92,7 @@ def _rows_used(study: StudyView) -> list[str]:
     each = (
         f"{sizes[0]} rows each"
         if sizes[0] == sizes[-1]
-        else f"{sizes[0]} to {sizes[-1]} rows each, median {np.median(sizes):g}"
+        else f"{sizes[0]} to {sizes[-1]} rows each, median {_median(sizes, moments.counts):g}"
     )
     units = f"{panel.N} ({shorten(panel.unit_name, 30)}), {each}{one}"
     table = study.columns_report
@@ -116,6 +116,8 @@ def _rows_used(study: StudyView) -> list[str]:
         f"  units     {units}",
         f"  columns   {levels}",
     ]
+    if panel.source_note:
+        lines.insert(1, shorten(f"  source    {panel.source_note}", WIDTH))
     if fit.estimated and np.isfinite(fit.ratio):
         weights = fit.quasi_demeaning
         span = (
@@ -323,3 +325,11 @@ def _join(names: list[Any], width: int, by: str = ", ") -> str:
             return text + more
         text = longer
     return text
+
+
+def _median(sizes: np.ndarray[Any, Any], counts: np.ndarray[Any, Any]) -> float:
+    """Return the median of sizes that occur so many times."""
+    upto = np.cumsum(counts)
+    total = int(upto[-1])
+    middle = np.searchsorted(upto, [(total + 1) // 2, total // 2 + 1])
+    return float(sizes[middle].mean())

@@ -2,6 +2,7 @@
 
 from mixbridge.study.adoption import adopt
 from mixbridge.study.crosscheck import crosscheck
+from mixbridge.study.from_moments import from_moments
 from mixbridge.study.record import Study
 
-__all__ = ["Study", "adopt", "crosscheck"]
+__all__ = ["Study", "adopt", "crosscheck", "from_moments"]

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field, replace
 from functools import cached_property
 from types import MappingProxyType
@@ -10,11 +10,12 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from mixbridge.errors import IdentificationError, OptionError
+from mixbridge.errors import DataError, IdentificationError, OptionError
 from mixbridge.moments import Block, Moments, OpenMoments
 from mixbridge.panel import Panel
 from mixbridge.ratio import Curve, curve_of
-from mixbridge.routes import LEDGER_ROUTES, Differences, Fit, differences_of, fit_route
+from mixbridge.routes import LEDGER_ROUTES, Fit, fit_route
+from mixbridge.study.differences import Gather, differences_for
 
 if TYPE_CHECKING:
     from mixbridge.correlated import Mundlak
@@ -31,12 +32,28 @@ class StudyBase:
     """Rows, moments and fits of a cross-check."""
 
     panel: Panel
-    opened: OpenMoments = field(repr=False)
+    unit_moments: OpenMoments | None = field(repr=False)
     moments: Moments = field(repr=False)
     primary: str = "reml"
     routes: tuple[str, ...] = LEDGER_ROUTES
     confidence: float = 0.95
     unit_means: Mundlak | None = field(default=None, repr=False)
+
+    @property
+    def opened(self) -> OpenMoments:
+        """Counts and means per unit.
+
+        Raises
+        ------
+        DataError
+            If they were not kept.
+        """
+        if self.unit_moments is None:
+            raise DataError(
+                "this question needs the counts and means of every unit, which were not kept: the study has its "
+                "closed moments only. Ask it of a study whose units fit into memory."
+            )
+        return self.unit_moments
 
     @cached_property
     def curve(self) -> Curve:
@@ -168,8 +185,7 @@ class StudyBase:
         return found
 
     def _blocks(self) -> Iterator[Block]:
-        codes = self.panel.codes
-        return ((codes[start : start + y.size], x, y) for start, x, y in self.panel.blocks())
+        return self.panel.blocks_with_codes()
 
     def _period_blocks(self) -> Iterator[PeriodBlock]:
         codes, ordinals = self.panel.codes, self.panel.period_ordinals
@@ -179,15 +195,5 @@ class StudyBase:
             stop = start + y.size
             yield codes[start:stop], x, y, periods[start:stop]
 
-    def _differences(self) -> Callable[[int | None], Differences] | str:
-        if self.panel.period_name is None:
-            return "no period given, so rows have no order to difference in; name the column with period="
-        ordinals = self.panel.period_ordinals
-        if ordinals is None:
-            return self.panel.period_note or "periods have no order"
-
-        def gather(step: int | None) -> Differences:
-            x, y = self.panel.matrix()
-            return differences_of(x, y, self.panel.codes, ordinals, step)
-
-        return gather
+    def _differences(self) -> Gather | str:
+        return differences_for(self.panel)

@@ -49,7 +49,9 @@ class StudyCorrelated(StudyQuestions):
             raise OptionError("this study has unit means already; ask the study without them.")
         record = mundlak(self.panel, self.opened, self.moments, means_of=means_of, raw=self.curve)
         wide = record.augmented
-        return replace(self, panel=wide.panel, opened=wide.opened, moments=wide.moments, unit_means=record)
+        return replace(
+            self, panel=wide.panel, unit_moments=wide.opened, moments=wide.moments, unit_means=record
+        )
 
     def coordinates(
         self, route: str | None = None, *, rule: str | None = None, covariance: str = "model"

@@ -7,8 +7,10 @@ from typing import Literal
 
 from mixbridge.errors import OptionError
 from mixbridge.moments import collect
-from mixbridge.panel import build_panel
+from mixbridge.panel import Panel, build_panel
+from mixbridge.panel.streaming import build_streaming_panel
 from mixbridge.routes import LEDGER_ROUTES, named_route
+from mixbridge.sources.chunk_options import ChunkOptions, comes_in_chunks
 from mixbridge.study.record import Study
 
 __all__ = ["crosscheck"]
@@ -25,6 +27,7 @@ def crosscheck(
     confidence: float = 0.95,
     incomplete_rows: Literal["drop", "refuse"] = "drop",
     trusted: bool = True,
+    chunks: bool | ChunkOptions | None = None,
 ) -> Study:
     """Fit one random-intercept model by every route and set the results side by side.
 
@@ -33,8 +36,9 @@ def crosscheck(
     formula : str
         Fixed part in patsy's notation, ``"honey ~ forage + feeding"``; the grouping factor is `unit`, never
         part of it.
-    data : DataFrame, object with an Arrow stream, or path
-        One row per unit and period.
+    data : DataFrame, object with an Arrow stream, path, or source of chunks
+        One row per unit and period. Beyond memory: a folder of Parquet files, a large Parquet or text file, an
+        Arrow dataset or reader, an iterable of frames, a function that returns one.
     unit : str
         Column of the grouping factor (apiary, firm, school, patient).
     period : str, optional
@@ -50,6 +54,9 @@ def crosscheck(
         Whether rows with missing values are dropped and counted, or refused.
     trusted : bool
         False restricts the formula to column names and a fixed list of transforms.
+    chunks : bool or ChunkOptions, optional
+        Whether rows are read in chunks and never held together, and how. Unless given, what is not one table is,
+        and so are files beyond `mixbridge.sources.chunk_options.IN_ONE_PIECE`. The results are the same.
 
     Returns
     -------
@@ -75,16 +82,26 @@ def crosscheck(
     chosen = tuple(dict.fromkeys(LEDGER_ROUTES if routes is None else routes))
     for key in (*chosen, primary):
         named_route(key)
-    panel = build_panel(
-        formula, data, unit=unit, period=period, incomplete_rows=incomplete_rows, trusted=trusted, env=1
-    )
-    columns = (*panel.names, panel.outcome)
-    codes = panel.codes
-    opened, moments = collect(
-        lambda: ((codes[start : start + y.size], x, y) for start, x, y in panel.blocks()),
-        columns,
-        panel.unit_keys,
-    )
+    reading = comes_in_chunks(data) if chunks is None else chunks
+    panel: Panel
+    if reading is False:
+        panel = build_panel(
+            formula, data, unit=unit, period=period, incomplete_rows=incomplete_rows, trusted=trusted, env=1
+        )
+    else:
+        options = reading if isinstance(reading, ChunkOptions) else ChunkOptions()
+        panel = build_streaming_panel(
+            formula,
+            data,
+            unit=unit,
+            period=period,
+            incomplete_rows=incomplete_rows,
+            trusted=trusted,
+            env=1,
+            chunk_rows=options.rows,
+            memory_limit=options.memory_limit,
+        )
+    opened, moments = collect(panel.blocks_with_codes, (*panel.names, panel.outcome), panel.unit_keys)
     study = Study(
         panel, opened, moments, primary, chosen if primary in chosen else (*chosen, primary), confidence
     )
