@@ -10,7 +10,8 @@ import numpy as np
 from mixbridge.audit.bench import Bench
 from mixbridge.audit.record import NO_PERIOD, Audit, Finding, StudyView
 from mixbridge.audit.registry import CHECKS, Check
-from mixbridge.errors import IdentificationError, OptionError
+from mixbridge.errors import DataError, IdentificationError, OptionError
+from mixbridge.panel.absent import Apart
 
 __all__ = ["audit"]
 
@@ -88,11 +89,15 @@ def audit(
 def _run(check: Check, bench: Bench) -> Sequence[Finding]:
     panel = bench.study.panel
     if check.periods and panel.period_ordinals is None:
+        if panel.period_name is not None and isinstance(panel, Apart):
+            return [
+                _without(check, f"not assessable: {panel.why_apart}", "the rows in order are not at hand")
+            ]
         reason = "" if panel.period_name is None else f" in order ({panel.period_note})"
         return [_without(check, f"{NO_PERIOD}{reason}", "name the column of periods")]
     try:
         return check.run(bench)
-    except IdentificationError as error:
+    except (DataError, IdentificationError) as error:  # a DataError: rows or units are not at hand
         return [_without(check, f"not assessable: {error}", "the data at hand do not allow this row")]
 
 

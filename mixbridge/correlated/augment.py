@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from types import MappingProxyType
+from typing import cast
 
 import numpy as np
 from numpy.typing import NDArray
@@ -35,8 +36,8 @@ class Augmented:
     ----------
     panel : Panel
         The same rows; its blocks hold the added columns too.
-    opened : OpenMoments
-        With the added columns, before the outcome.
+    opened : OpenMoments or None
+        With the added columns, before the outcome; None where the means of units were not kept.
     moments : Moments
         Closed, likewise.
     names : tuple of str
@@ -54,7 +55,7 @@ class Augmented:
     """
 
     panel: Panel
-    opened: OpenMoments = field(repr=False)
+    opened: OpenMoments | None = field(repr=False)
     moments: Moments = field(repr=False)
     names: tuple[str, ...]
     varying: tuple[str, ...]
@@ -73,6 +74,15 @@ class Augmented:
         """Whether means were added for some columns only, by choice."""
         return bool(self.left_out)
 
+    def kept(self) -> OpenMoments:
+        """Return the open moments, or refuse where the means of units were not kept."""
+        if self.opened is None:
+            raise DataError(
+                "this question needs the means of every unit, which were not kept: the study has its closed "
+                "moments only. Ask it of a study whose units fit into memory."
+            )
+        return self.opened
+
     def mean_of(self, column: str) -> str | None:
         """Return the added mean of a column; None if it has none."""
         return next((name for name, source in self.source.items() if source == column), None)
@@ -89,7 +99,7 @@ class Augmented:
 
 def augment(
     panel: Panel,
-    opened: OpenMoments,
+    opened: OpenMoments | None,
     moments: Moments | None = None,
     *,
     means_of: Sequence[str] | None = None,
@@ -99,8 +109,8 @@ def augment(
     Parameters
     ----------
     panel : Panel
-    opened : OpenMoments
-        Of the rows of the panel.
+    opened : OpenMoments or None
+        Of the rows of the panel; without it all that follows from closed moments is there, but no rows.
     moments : Moments, optional
         The same, closed; closed here unless given.
     means_of : sequence of str, optional
@@ -120,7 +130,9 @@ def augment(
     OptionError
         If a name in `means_of` means no column that varies within units.
     """
-    closed = close(opened) if moments is None else moments
+    if moments is None and opened is None:
+        raise DataError("there are no moments to add unit means to: give open or closed ones.")
+    closed = close(opened) if moments is None and opened is not None else cast(Moments, moments)
     if closed.rows != panel.n or closed.design != panel.names:
         raise DataError("moments and panel hold different rows or columns: take both from the same study.")
     varying = varying_columns(closed)
@@ -133,10 +145,14 @@ def augment(
     )
     wide = with_unit_means(closed, chosen)
     left_out = tuple(name for name in varying if name not in chosen)
-    at = np.array([opened.columns.index(column) for column in wide.source.values()], dtype=np.intp)
-    widened = _widen_opened(opened, at, tuple(wide.source))
+    names = tuple(wide.source)
+    widened, values = None, None
+    if opened is not None:
+        at = np.array([opened.columns.index(column) for column in wide.source.values()], dtype=np.intp)
+        widened = _widen_opened(opened, at, names)
+        values = (opened.means[:, at] + opened.shift[at])[opened.keys.get_indexer(panel.unit_keys)]
     return Augmented(
-        panel=_widen_panel(panel, opened, at, tuple(wide.source)),
+        panel=WidenedPanel(panel, values, names),
         opened=widened,
         moments=wide.moments,
         names=wide.moments.design,
@@ -191,11 +207,6 @@ def widen_products(products: UnitProducts, augmented: Augmented) -> UnitProducts
         frame=frame,
         packed=packed,
     )
-
-
-def _widen_panel(panel: Panel, opened: OpenMoments, at: IntArray, names: tuple[str, ...]) -> Panel:
-    place = opened.keys.get_indexer(panel.unit_keys)
-    return WidenedPanel(panel, (opened.means[:, at] + opened.shift[at])[place], names)
 
 
 def _widen_opened(opened: OpenMoments, at: IntArray, names: tuple[str, ...]) -> OpenMoments:

@@ -175,7 +175,7 @@ class Mundlak:
 
 def mundlak(
     panel: Panel,
-    opened: OpenMoments,
+    opened: OpenMoments | None,
     moments: Moments,
     *,
     means_of: Sequence[str] | None = None,

@@ -78,7 +78,7 @@ def corrected_covariance(
     ndarray of shape (3 m + o, 3 m + o)
     """
     rows, outcome, level, constant = _unit_rows(mundlak)
-    counts = mundlak.augmented.opened.counts
+    counts = mundlak.augmented.kept().counts
     weight = counts / (1.0 + counts * fit.ratio)
     m, o = len(at.means), len(at.others)
     q, u, z = rows[:, [*at.means, *at.others]], rows[:, at.varying], rows[:, at.others]
@@ -125,7 +125,7 @@ def _to_reported(at: Columns, m: int, o: int) -> FloatArray:
 
 def _unit_rows(mundlak: Mundlak) -> tuple[FloatArray, FloatArray, FloatArray, int | None]:
     """Return unit means of columns and outcome from their origins, the origins, and the place of the constant."""
-    opened, moments = mundlak.augmented.opened, mundlak.augmented.moments
+    opened, moments = mundlak.augmented.kept(), mundlak.augmented.moments
     names = mundlak.curve.names
     centred = moments.constant is not None
     rows, level = np.zeros((len(opened.keys), len(names))), np.zeros(len(names))

@@ -10,6 +10,7 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
+from mixbridge.errors import DataError
 from mixbridge.panel.accounting import Accounting
 from mixbridge.panel.record import Block, Panel
 
@@ -25,14 +26,14 @@ class WidenedPanel:
     Parameters
     ----------
     given : Panel
-    values : numpy.ndarray of shape (N, q)
-        By unit code.
+    values : numpy.ndarray of shape (N, q) or None
+        By unit code; None where they were not kept, and no rows can be given.
     added : tuple of str
         Names of the q columns.
     """
 
     given: Panel
-    values: FloatArray
+    values: FloatArray | None
     added: tuple[str, ...]
 
     @property
@@ -119,8 +120,9 @@ class WidenedPanel:
 
     def blocks_with_codes(self, rows: int = 8192) -> Iterator[Block]:
         """Yield unit codes, design and outcome block by block."""
+        values = self._kept()
         for codes, x, y in self.given.blocks_with_codes(rows):
-            yield codes, np.hstack([x, self.values[codes]]), y
+            yield codes, np.hstack([x, values[codes]]), y
 
     def blocks(self, rows: int = 8192) -> Iterator[tuple[int, FloatArray, FloatArray]]:
         """Yield position, design and outcome block by block."""
@@ -132,4 +134,12 @@ class WidenedPanel:
     def matrix(self) -> tuple[FloatArray, FloatArray]:
         """Return the whole design matrix and the outcome; for small data."""
         x, y = self.given.matrix()
-        return np.hstack([x, self.values[self.given.codes]]), y
+        return np.hstack([x, self._kept()[self.given.codes]]), y
+
+    def _kept(self) -> FloatArray:
+        if self.values is None:
+            raise DataError(
+                "this question needs rows with the added columns, whose values by unit were not kept: the study "
+                "has its closed moments only. Ask it of a study whose units fit into memory."
+            )
+        return self.values

@@ -13,6 +13,7 @@ import numpy as np
 from mixbridge.errors import DataError, IdentificationError, OptionError
 from mixbridge.moments import Block, Moments, OpenMoments
 from mixbridge.panel import Panel
+from mixbridge.panel.absent import Apart, RowlessPanel
 from mixbridge.ratio import Curve, curve_of
 from mixbridge.routes import LEDGER_ROUTES, Fit, fit_route
 from mixbridge.study.differences import Gather, differences_for
@@ -54,6 +55,11 @@ class StudyBase:
                 "closed moments only. Ask it of a study whose units fit into memory."
             )
         return self.unit_moments
+
+    @property
+    def has_unit_records(self) -> bool:
+        """Whether the rows can be read again and the units are known, as robust covariances need."""
+        return self.unit_moments is not None and not isinstance(self.panel, RowlessPanel)
 
     @cached_property
     def curve(self) -> Curve:
@@ -131,6 +137,8 @@ class StudyBase:
             raise OptionError(
                 "covariance='two_way' needs periods: name the column with period=. "
                 + (self.panel.period_note or "No period was given.")
+                if not isinstance(self.panel, Apart)
+                else f"covariance='two_way' cannot be computed: {self.panel.why_apart}"
             )
         return two_way_covariance(
             curve, products, fit, self._period_blocks, keys=self.panel.unit_keys, multiplier=name or "units"

@@ -47,7 +47,7 @@ class StudyCorrelated(StudyQuestions):
             raise OptionError.not_among("form", form, ("mundlak",))
         if self.unit_means is not None:
             raise OptionError("this study has unit means already; ask the study without them.")
-        record = mundlak(self.panel, self.opened, self.moments, means_of=means_of, raw=self.curve)
+        record = mundlak(self.panel, self.unit_moments, self.moments, means_of=means_of, raw=self.curve)
         wide = record.augmented
         return replace(
             self, panel=wide.panel, unit_moments=wide.opened, moments=wide.moments, unit_means=record

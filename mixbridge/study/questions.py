@@ -152,8 +152,19 @@ class StudyQuestions(StudyBase):
             return contrast_terms(self.curve, fit, self.fit("within"))
         if by != "all":
             raise OptionError.not_among("by", by, ("all", "term"))
-        products = self.products if self.panel.N > 1 else None
-        return contrast_table(contrasts(self.curve, fit, products))
+        products = self.products if self.panel.N > 1 and self.has_unit_records else None
+        table = contrast_table(contrasts(self.curve, fit, products))
+        if not self.has_unit_records:
+            blank = {name: [np.nan] for name in table.columns if table[name].dtype.kind == "f"}
+            row = {
+                "contrast": ["unit means"],
+                "variance": ["cluster-robust"],
+                "between_weights": ["-"],
+                "df": [0],
+            }
+            note = "needs rows or the means of units, which are not at hand"
+            table = pd.concat([table, pd.DataFrame({**blank, **row, "note": [note]})], ignore_index=True)
+        return table
 
     def variance_tests(
         self, seed: int = 20_040, draws: int = 100_000, progress: Callable[[int, int], None] | None = None
