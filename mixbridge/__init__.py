@@ -22,6 +22,7 @@ _LATER = {
     "match_reported": "mixbridge.reconcile.match",
     "read_figures": "mixbridge.reconcile.printed_file",
     "rehearse": "mixbridge.rehearse",
+    "verify": "mixbridge.study.verify",
 }
 
 __all__ = [
@@ -45,6 +46,7 @@ __all__ = [
     "match_reported",
     "read_figures",
     "rehearse",
+    "verify",
 ]
 
 

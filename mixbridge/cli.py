@@ -1,4 +1,4 @@
-"""The command line: ``mixbridge check``, ``match``, ``rehearse`` and ``demo``."""
+"""The command line: ``mixbridge check``, ``match``, ``rehearse``, ``verify`` and ``demo``."""
 
 from __future__ import annotations
 
@@ -83,6 +83,20 @@ a file with a design (TOML); covariates have variances [within, between]:
 exit status: 0 done; 2 the design is impossible or the file cannot be used."""
 
 
+VERIFY = """\
+Recomputes every figure of a record from the closed moments that it carries, without the rows: same,
+differs, or needs rows (the order of periods, cluster-robust figures). So a reader without access to
+confidential rows can check that printed figures follow from the moments; that the moments are those
+of the data it cannot show."""
+
+VERIFY_EXAMPLES = """\
+example:
+  mixbridge check honey.csv --formula 'honey ~ forage' --unit apiary --json > record.json
+  mixbridge verify record.json
+
+exit status: 0 no figure differs; 1 some figure differs; 2 the file cannot be used."""
+
+
 def main(arguments: Sequence[str] | None = None) -> int:
     """Run the command line.
 
@@ -94,7 +108,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     Returns
     -------
     int
-        Exit status: 0 done, 1 a required agreement is missing, 2 unusable input.
+        Exit status: 0 done, 1 a required agreement is missing or a figure differs, 2 unusable input.
     """
     options = _parser().parse_args(arguments)
     action: Callable[[argparse.Namespace], int] = options.action
@@ -186,6 +200,18 @@ def _parser() -> argparse.ArgumentParser:
     )
     rehearse.add_argument("--seed", type=int, default=20_061, help="seed of the draws (default: 20061)")
     rehearse.set_defaults(action=_rehearse)
+    verify = commands.add_parser(
+        "verify",
+        help="recompute the figures of a record from its moments, without rows",
+        description=VERIFY,
+        epilog=VERIFY_EXAMPLES,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    verify.add_argument("record", metavar="RECORD", help="JSON file written by 'mixbridge check --json'")
+    verify.add_argument(
+        "--products", metavar="FILE", help="unit products of the same rows, for cluster-robust figures"
+    )
+    verify.set_defaults(action=_verify)
     demo = commands.add_parser(
         "demo",
         help="cross-check invented data on honey yields",
@@ -246,6 +272,16 @@ def _rehearse(options: argparse.Namespace) -> int:
     print()
     print(found.paragraph())
     return DONE
+
+
+def _verify(options: argparse.Namespace) -> int:
+    from mixbridge.moments.products import UnitProducts
+    from mixbridge.study.verify import verify
+
+    products = None if options.products is None else UnitProducts.load(options.products)
+    found = verify(options.record, products)
+    print(found)
+    return DONE if found.passed else DIFFERS
 
 
 def _requirement(text: str) -> tuple[str, str]:

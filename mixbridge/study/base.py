@@ -39,6 +39,7 @@ class StudyBase:
     routes: tuple[str, ...] = LEDGER_ROUTES
     confidence: float = 0.95
     unit_means: Mundlak | None = field(default=None, repr=False)
+    given_products: UnitProducts | None = field(default=None, repr=False)
 
     @property
     def opened(self) -> OpenMoments:
@@ -59,7 +60,8 @@ class StudyBase:
     @property
     def has_unit_records(self) -> bool:
         """Whether the rows can be read again and the units are known, as robust covariances need."""
-        return self.unit_moments is not None and not isinstance(self.panel, RowlessPanel)
+        rows = self.unit_moments is not None and not isinstance(self.panel, RowlessPanel)
+        return rows or self.given_products is not None
 
     @cached_property
     def curve(self) -> Curve:
@@ -76,6 +78,8 @@ class StudyBase:
         """Products of every unit's rows, taken in one more pass when first asked for."""
         from mixbridge.moments.products import collect_products
 
+        if self.given_products is not None:
+            return self.given_products
         return collect_products(self._blocks, self.opened, self.moments, self.panel.unit_keys)
 
     @property

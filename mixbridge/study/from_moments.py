@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from types import MappingProxyType
+from typing import TYPE_CHECKING
 
 from mixbridge.errors import OptionError
 from mixbridge.moments import Moments, OpenMoments, close
@@ -11,6 +12,9 @@ from mixbridge.panel import Accounting
 from mixbridge.panel.absent import RowlessPanel
 from mixbridge.routes import LEDGER_ROUTES, named_route
 from mixbridge.study.record import Study
+
+if TYPE_CHECKING:
+    from mixbridge.moments.products import UnitProducts
 
 __all__ = ["from_moments"]
 
@@ -26,6 +30,7 @@ def from_moments(
     primary: str = "reml",
     routes: Sequence[str] | None = None,
     confidence: float = 0.95,
+    products: UnitProducts | None = None,
     source_note: str | None = "moments taken elsewhere; the rows are not at hand",
 ) -> Study:
     """Cross-check the routes on moments, without rows.
@@ -44,6 +49,8 @@ def from_moments(
         What became of the rows; the rows in the moments unless given.
     primary, routes, confidence
         As for `mixbridge.crosscheck`.
+    products : UnitProducts, optional
+        Per-unit products of the same rows; with them cluster-robust covariances and predicted effects are there too.
     source_note : str or None
         Where the moments come from, as printed.
 
@@ -89,7 +96,13 @@ def from_moments(
         source_note=source_note,
     )
     study = Study(
-        panel, opened, closed, primary, chosen if primary in chosen else (*chosen, primary), confidence
+        panel,
+        opened,
+        closed,
+        primary,
+        chosen if primary in chosen else (*chosen, primary),
+        confidence,
+        given_products=products,
     )
     _ = study.curve
     return study
