@@ -2,6 +2,8 @@
 
 from importlib.metadata import version as installed_version
 
+import mixbridge
+from mixbridge.reconcile.crosswalk import FIELDS
 from mixbridge.routes import AXES, ROUTES
 
 project = "mixbridge"
@@ -40,7 +42,25 @@ def conventions() -> str:
     return "\n\n".join(entries)
 
 
-myst_substitutions = {"conventions": conventions()}
+def crosswalk() -> str:
+    """Write the words of four fields for each quantity, as a table."""
+    study = mixbridge.crosscheck(
+        "honey ~ forage + feeding + altitude", mixbridge.demo.apiaries(), unit="apiary", routes=["reml"]
+    )
+    table = mixbridge.crosswalk(study.fit("reml")).drop_duplicates("quantity")
+    table = table[~table["quantity"].str.startswith("coefficient of ")]
+    lines = [
+        "| quantity | here | economics | biostatistics | education | psychology |",
+        "|---|---|---|---|---|---|",
+    ]
+    for row in table.to_dict("records"):
+        fields = [f"{row[field]}: {row[field + '_symbol']}" for field in FIELDS]
+        cells = [row["quantity"], f"{row['symbol']} = {row['formula']}", *fields]
+        lines.append("| " + " | ".join(str(cell).replace("|", "\\|") for cell in cells) + " |")
+    return "\n".join(lines)
+
+
+myst_substitutions = {"conventions": conventions(), "crosswalk": crosswalk()}
 
 
 def formulas_as_literals(app, what, name, obj, options, lines):
