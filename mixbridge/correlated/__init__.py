@@ -9,6 +9,7 @@ from mixbridge.correlated.means import WithMeans, with_unit_means
 from mixbridge.correlated.mundlak import Mundlak, mundlak
 from mixbridge.correlated.noisy_means import NoisyMeans, noisy_means
 from mixbridge.correlated.period_values import amemiya_macurdy
+from mixbridge.correlated.projection import Projection, project, projection_size
 from mixbridge.correlated.slopes import SlopeCertificate
 
 __all__ = [
@@ -17,6 +18,7 @@ __all__ = [
     "Instrumented",
     "Mundlak",
     "NoisyMeans",
+    "Projection",
     "SlopeCertificate",
     "WithMeans",
     "amemiya_macurdy",
@@ -24,6 +26,8 @@ __all__ = [
     "hausman_taylor",
     "mundlak",
     "noisy_means",
+    "project",
+    "projection_size",
     "unit_constant_table",
     "widen_products",
     "with_unit_means",

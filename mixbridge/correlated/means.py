@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from mixbridge.moments import Moments, dependency_text, noise, span_of
 
-__all__ = ["WithMeans", "varying_columns", "with_unit_means"]
+__all__ = ["WithMeans", "design_factor", "in_data_units", "varying_columns", "with_unit_means"]
 
 FloatArray = NDArray[np.float64]
 
@@ -58,11 +58,11 @@ def with_unit_means(moments: Moments, means_of: Collection[str] | None = None) -
     columns = moments.columns
     varying = [j for j in _varying(moments) if means_of is None or columns[j] in means_of]
     wide = _widened(moments, varying, _names(moments, varying))
-    full, floor = _design_factor(wide)
+    full, floor = design_factor(wide)
     span = span_of(full, floor, 1e-7 if moments.note.startswith("ill-conditioned") else 1e-12)
     raw = len(moments.design)
     kept = [int(j) - raw for j in span.kept if j >= raw]
-    null, sizes = _in_data_units(wide, span.null)
+    null, sizes = in_data_units(wide, span.null)
     dropped = {}
     for at, dependency in enumerate(span.dependencies):
         name = wide.design[dependency.column]
@@ -134,7 +134,7 @@ def _widened(moments: Moments, varying: list[int], names: tuple[str, ...]) -> Mo
     return changed
 
 
-def _design_factor(moments: Moments) -> tuple[FloatArray, FloatArray]:
+def design_factor(moments: Moments) -> tuple[FloatArray, FloatArray]:
     """Return a factor of X'X in scaled columns (centred beside a constant), and their rounding floors."""
     columns, bound = moments.columns, noise(moments)
     weights = np.sqrt(moments.sizes.astype(float))[:, None]
@@ -150,7 +150,7 @@ def _design_factor(moments: Moments) -> tuple[FloatArray, FloatArray]:
     return np.column_stack(factor), floor
 
 
-def _in_data_units(moments: Moments, null: FloatArray) -> tuple[FloatArray, FloatArray]:
+def in_data_units(moments: Moments, null: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Return combinations of scaled columns in the columns themselves, and the typical size of each."""
     sizes, shift = np.ones(len(moments.design)), np.zeros(len(moments.design))
     for j, name in enumerate(moments.design):

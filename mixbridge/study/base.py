@@ -19,7 +19,7 @@ from mixbridge.routes import LEDGER_ROUTES, Fit, fit_route
 from mixbridge.study.differences import Gather, differences_for
 
 if TYPE_CHECKING:
-    from mixbridge.correlated import Mundlak
+    from mixbridge.correlated import Mundlak, Projection
     from mixbridge.inference.robust import RobustCovariance
     from mixbridge.inference.robust_two_way import PeriodBlock
     from mixbridge.moments.products import UnitProducts
@@ -39,6 +39,7 @@ class StudyBase:
     routes: tuple[str, ...] = LEDGER_ROUTES
     confidence: float = 0.95
     unit_means: Mundlak | None = field(default=None, repr=False)
+    projection: Projection | None = field(default=None, repr=False)
     given_products: UnitProducts | None = field(default=None, repr=False)
 
     @property

@@ -24,34 +24,86 @@ class StudyCorrelated(StudyQuestions):
     """The part of a study about correlated effects."""
 
     def correlated(
-        self, form: Literal["mundlak"] = "mundlak", *, means_of: Sequence[str] | None = None
+        self,
+        form: Literal["mundlak", "chamberlain", "mundlak_sizes", "mundlak_size_linear"] = "mundlak",
+        *,
+        means_of: Sequence[str] | None = None,
     ) -> Self:
-        """Return the study of the same rows with unit means added, in which every route runs again.
+        """Return the study of the same rows with columns that the unit effect may be related to.
 
         Parameters
         ----------
-        form : {"mundlak"}
-            The unit mean, over the rows used, of every design column that varies within units (Mundlak 1978).
+        form : str
+            Every route runs again on the columns. ``mundlak``: the unit mean, over the rows used, of every design
+            column that varies within units (Mundlak 1978). ``chamberlain``: their values in all periods (Chamberlain
+            1982), by pattern of periods seen where units differ in it (Abrevaya 2013). ``mundlak_sizes``: unit means
+            with terms for each unit size (Wooldridge 2019); ``mundlak_size_linear``: with unit size itself and its
+            products with the means.
         means_of : sequence of str, optional
-            Terms or columns whose means are added; all unless given. A partial form takes the unit effects as
-            unrelated to the other covariates.
+            Terms or columns whose means are added, for ``mundlak``; all unless given. A partial form takes the unit
+            effects as unrelated to the other covariates.
 
         Returns
         -------
         Study
-            With `unit_means`, `coordinates`, `mean_tests`, `noisy_means` and `unit_constant` besides the rest.
+            With `unit_means` and `coordinates`, `mean_tests`, `noisy_means` and `unit_constant` besides the rest; or
+            with `projection` and `projection_tests`.
         """
-        from mixbridge.correlated import mundlak
+        from mixbridge.correlated import mundlak, project
+        from mixbridge.correlated.projection import FORMS
 
+        if form not in ("mundlak", *FORMS):
+            raise OptionError.not_among("form", form, ("mundlak", *FORMS))
+        if self.unit_means is not None or self.projection is not None:
+            raise OptionError("this study has added columns already; ask the study without them.")
         if form != "mundlak":
-            raise OptionError.not_among("form", form, ("mundlak",))
-        if self.unit_means is not None:
-            raise OptionError("this study has unit means already; ask the study without them.")
+            if means_of is not None:
+                raise OptionError(f"means_of goes with form 'mundlak' only, not with {form!r}.")
+            found = project(self.panel, self.opened, self.moments, form, raw=self.curve)
+            wide = found.augmented
+            return replace(
+                self, panel=wide.panel, unit_moments=wide.opened, moments=wide.moments, projection=found
+            )
         record = mundlak(self.panel, self.unit_moments, self.moments, means_of=means_of, raw=self.curve)
         wide = record.augmented
         return replace(
             self, panel=wide.panel, unit_moments=wide.opened, moments=wide.moments, unit_means=record
         )
+
+    def projection_size(self) -> dict[str, int]:
+        """Say how large the projection on all periods would be, before it is made.
+
+        Returns
+        -------
+        dict
+            ``columns`` that vary within units, ``periods``, ``coefficients`` (at most) and ``units``.
+        """
+        from mixbridge.correlated import projection_size
+
+        return projection_size(self.panel, self.opened, self.moments)
+
+    def projection_tests(
+        self, route: str | None = None, *, rule: str | None = None, covariance: str = "model"
+    ) -> pd.DataFrame:
+        """Test the restrictions inside the projection: no correlation, coefficients equal over periods or groups.
+
+        Parameters
+        ----------
+        route, rule, covariance
+            As for `coordinates`.
+
+        Returns
+        -------
+        DataFrame
+            F statistics. Coefficients equal over periods make the projection one on unit means. Not rejecting proves
+            nothing.
+        """
+        if self.projection is None:
+            raise OptionError(
+                "this needs a projection: ask study.correlated('chamberlain') for a study that has one."
+            )
+        fit = self.fit(self.primary if route is None else route)
+        return self.projection.tests(fit, rule, self._robust_or_none(fit, covariance), covariance)
 
     def coordinates(
         self, route: str | None = None, *, rule: str | None = None, covariance: str = "model"
@@ -95,13 +147,15 @@ class StudyCorrelated(StudyQuestions):
         return record.mean_tests(fit, rule, self._robust_or_none(fit, covariance), covariance)
 
     def slope_certificate(self) -> SlopeCertificate:
-        """Check at several ratios that slopes beside their unit means are the within slopes.
+        """Check at several ratios that slopes beside the added columns are the within slopes.
 
         Returns
         -------
         SlopeCertificate
             With the cause where it breaks.
         """
+        if self.projection is not None:
+            return self.projection.certificate()
         return self._unit_means().certificate()
 
     def noisy_means(
