@@ -6,6 +6,7 @@ from mixbridge.correlated.coordinates import Coordinates
 from mixbridge.correlated.instrumented import Instrumented
 from mixbridge.correlated.instruments import hausman_taylor
 from mixbridge.correlated.means import WithMeans, with_unit_means
+from mixbridge.correlated.minimum_distance_record import MinimumDistance, minimum_distance
 from mixbridge.correlated.mundlak import Mundlak, mundlak
 from mixbridge.correlated.noisy_means import NoisyMeans, noisy_means
 from mixbridge.correlated.period_values import amemiya_macurdy
@@ -16,6 +17,7 @@ __all__ = [
     "Augmented",
     "Coordinates",
     "Instrumented",
+    "MinimumDistance",
     "Mundlak",
     "NoisyMeans",
     "Projection",
@@ -24,6 +26,7 @@ __all__ = [
     "amemiya_macurdy",
     "augment",
     "hausman_taylor",
+    "minimum_distance",
     "mundlak",
     "noisy_means",
     "project",

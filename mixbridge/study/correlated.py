@@ -14,7 +14,14 @@ from mixbridge.routes import Fit
 from mixbridge.study.questions import StudyQuestions
 
 if TYPE_CHECKING:
-    from mixbridge.correlated import Coordinates, Instrumented, Mundlak, NoisyMeans, SlopeCertificate
+    from mixbridge.correlated import (
+        Coordinates,
+        Instrumented,
+        MinimumDistance,
+        Mundlak,
+        NoisyMeans,
+        SlopeCertificate,
+    )
     from mixbridge.inference.references import Robust
 
 __all__ = ["StudyCorrelated"]
@@ -104,6 +111,37 @@ class StudyCorrelated(StudyQuestions):
             )
         fit = self.fit(self.primary if route is None else route)
         return self.projection.tests(fit, rule, self._robust_or_none(fit, covariance), covariance)
+
+    def minimum_distance(self, route: str | None = None) -> MinimumDistance:
+        """Fit the model with a projected unit effect to the unrestricted reduced form (Chamberlain 1982).
+
+        Parameters
+        ----------
+        route : str, optional
+            The route whose ratio makes the simplest of three kinds of weights; the primary one unless given.
+
+        Returns
+        -------
+        MinimumDistance
+            Slopes, projection and tests with optimal, homoscedastic and random-effects weights, each with a status.
+        """
+        from mixbridge.correlated.minimum_distance_record import minimum_distance
+        from mixbridge.correlated.reduced_form import require_balanced
+
+        if self.unit_means is not None or self.projection is not None:
+            raise OptionError("this study has added columns already; ask the study without them.")
+        require_balanced(self.panel, self.opened)
+        wide = self.correlated("chamberlain")
+        assert wide.projection is not None
+        fit = wide.fit(self.primary if route is None else route)
+        return minimum_distance(
+            self.panel,
+            self.opened,
+            wide.projection,
+            fit=fit,
+            within=self.fit("within"),
+            confidence=self.confidence,
+        )
 
     def coordinates(
         self, route: str | None = None, *, rule: str | None = None, covariance: str = "model"

