@@ -21,7 +21,7 @@ import numpy as np
 import pandas as pd
 from scipy import stats
 
-from benchmarks import calibration_coefficients, calibration_variance
+from benchmarks import calibration_coefficients, calibration_projection, calibration_variance
 from benchmarks.calibration_text import LIMIT, cell, markdown, spread, title
 
 SEEDS = {"variance": 20_260, "coefficients": 30_260, "audit": 20_080}
@@ -311,7 +311,8 @@ def main() -> int:
     if given.write is not None:
         threads = os.environ.get("OMP_NUM_THREADS", "default")
         text = page(parts, given.replicates, given.processes, machine(threads), given.audit_replicates)
-        given.write.write_text(text, encoding="utf-8")
+        more = calibration_projection.kept(given.write)  # that section has a command of its own
+        given.write.write_text(text + (f"\n{more}" if more else ""), encoding="utf-8")
     return 0 if passes(variance, coefficients) else 1
 
 

@@ -260,3 +260,15 @@ def test_tables_have_constant_columns():
     assert list(found.projection.columns) == ["column", "period", "weights", "estimate", "standard_error"]
     assert isinstance(found.tests, pd.DataFrame)
     assert found.tests["p_value"].between(0, 1).all()
+
+
+def test_calibration_of_the_projection_small_and_seeded():
+    """Sizes within four Monte Carlo errors at 60 samples, and feedback is seen by the overidentification test."""
+    from benchmarks.calibration_projection import DESIGNS, calibrate, section
+
+    table = calibrate(DESIGNS[1:2], replicates=60)
+    sizes = table[(table["what"] == "size") & ~table["test"].str.contains("optimal")]
+    assert (sizes["z"].abs() < 4.0).all(), sizes
+    power = table[table["alternative"] == "feedback"].set_index("test")["observed"]
+    assert power["overidentification, optimal distance"] > 0.5
+    assert "### Size" in section(table, 60, 1.0)

@@ -69,7 +69,7 @@ class ReducedForm:
     @property
     def units(self) -> int:
         """Number of units N."""
-        return self.basis.shape[0]
+        return int(self.basis.shape[0])
 
     @property
     def moments(self) -> int:
