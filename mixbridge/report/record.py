@@ -2,20 +2,18 @@
 
 from __future__ import annotations
 
-import math
 from dataclasses import asdict
 from typing import Any
 
-import numpy as np
-import pandas as pd
-
+from mixbridge.report.plain import plain, plain_array, plain_series, plain_table
+from mixbridge.report.record_sections import added_columns, sections_of, software
 from mixbridge.report.screen import StudyView
 from mixbridge.routes import Fit
 
 __all__ = ["RECORD_FORMAT", "RECORD_VERSION", "fit_record", "study_record"]
 
 RECORD_FORMAT = "mixbridge-study"
-RECORD_VERSION = 1
+RECORD_VERSION = 2
 
 
 def study_record(study: StudyView) -> dict[str, Any]:
@@ -32,6 +30,7 @@ def study_record(study: StudyView) -> dict[str, Any]:
         ``"-inf"``, undefined ones None.
     """
     panel = study.panel
+    moments = study.moments.to_record()
     return {
         "format": RECORD_FORMAT,
         "version": RECORD_VERSION,
@@ -41,6 +40,10 @@ def study_record(study: StudyView) -> dict[str, Any]:
         "primary": study.primary,
         "confidence": study.confidence,
         "reference": study.reference,
+        "source": panel.source_note,
+        "terms": {name: [at.start, at.stop] for name, at in panel.terms.items()},
+        "added": added_columns(study),
+        "software": software(),
         "accounting": {
             "rows_given": panel.accounting.rows_given,
             "rows_used": panel.accounting.rows_used,
@@ -50,20 +53,22 @@ def study_record(study: StudyView) -> dict[str, Any]:
             "units": panel.N,
             "one_row_units": study.singletons,
         },
-        "columns": _table(study.columns_report),
+        "columns": plain_table(study.columns_report),
         "ranks": {
             "total": study.curve.rank,
             "within": study.curve.rank_within,
             "between": study.curve.rank_between,
             "unit_constant": study.curve.rank_constant,
         },
-        "ledger": _table(study.ledger),
-        "components": _table(study.components),
+        "ledger": plain_table(study.ledger),
+        "components": plain_table(study.components),
         "fits": {key: fit_record(fit) for key, fit in study.fits.items()},
         "identities": [
-            {key: _plain(value) for key, value in asdict(item).items()} for item in study.identity_results
+            {key: plain(value) for key, value in asdict(item).items()} for item in study.identity_results
         ],
-        "moments": study.moments.to_record(),
+        **sections_of(study),
+        "fingerprint": moments["checksum"],
+        "moments": moments,
     }
 
 
@@ -81,18 +86,18 @@ def fit_record(fit: Fit) -> dict[str, Any]:
     """
     record = {
         "route": fit.route,
-        "conventions": {key: _plain(value) for key, value in fit.conventions.items()},
+        "conventions": {key: plain(value) for key, value in fit.conventions.items()},
         "status": fit.status,
         "notes": list(fit.notes),
-        "coefficients": _series(fit.coefficients),
-        "standard_errors": _series(fit.standard_errors),
-        "covariance": _array(fit.covariance_array),
+        "coefficients": plain_series(fit.coefficients),
+        "standard_errors": plain_series(fit.standard_errors),
+        "covariance": plain_array(fit.covariance_array),
         "not_estimable": dict(fit.not_estimable),
-        "component_covariance": _array(fit.components_covariance),
+        "component_covariance": plain_array(fit.components_covariance),
         "components_method": fit.components_method,
-        "quasi_demeaning": _series(fit.quasi_demeaning),
-        "shrinkage": _series(fit.shrinkage),
-        "forms": [[_plain(value) for value in row] for row in fit.forms_table],
+        "quasi_demeaning": plain_series(fit.quasi_demeaning),
+        "shrinkage": plain_series(fit.shrinkage),
+        "forms": [[plain(value) for value in row] for row in fit.forms_table],
         "certificate": None if fit.certificate is None else _certificate(fit),
     }
     for name in (
@@ -104,9 +109,9 @@ def fit_record(fit: Fit) -> dict[str, Any]:
         "scale",
         "log_likelihood",
     ):
-        record[name] = _plain(getattr(fit, name))
+        record[name] = plain(getattr(fit, name))
     for name in ("residual_df", "rank", "rows", "units"):
-        record[name] = _plain(getattr(fit, name))
+        record[name] = plain(getattr(fit, name))
     return record
 
 
@@ -114,7 +119,7 @@ def _certificate(fit: Fit) -> dict[str, Any]:
     certificate = fit.certificate
     assert certificate is not None
     values = {
-        key: _plain(value)
+        key: plain(value)
         for key, value in asdict(certificate).items()
         if key not in ("stationary", "unresolved")
     }
@@ -124,29 +129,3 @@ def _certificate(fit: Fit) -> dict[str, Any]:
         "unresolved": [list(pair) for pair in certificate.unresolved],
         "statements": certificate.lines(),
     }
-
-
-def _plain(value: Any) -> Any:
-    """Return a JSON value: numbers as they are, infinities as text, undefined numbers as null."""
-    if isinstance(value, (bool, str)) or value is None:
-        return value
-    if isinstance(value, (int, np.integer)):
-        return int(value)
-    if isinstance(value, (float, np.floating)):
-        number = float(value)
-        if math.isnan(number):
-            return None
-        return ("inf" if number > 0 else "-inf") if math.isinf(number) else number
-    return str(value)
-
-
-def _series(series: pd.Series) -> dict[str, Any]:
-    return {str(key): _plain(value) for key, value in series.items()}
-
-
-def _array(values: np.ndarray[Any, Any]) -> list[Any]:
-    return [[_plain(value) for value in row] for row in values]
-
-
-def _table(table: pd.DataFrame) -> list[dict[str, Any]]:
-    return [{str(key): _plain(value) for key, value in row.items()} for row in table.to_dict("records")]

@@ -112,12 +112,11 @@ def _rows_used(study: StudyView) -> list[str]:
         levels = ", ".join(f"{len(names)} {words[level]}" for level, names in known)
     lines = [
         shorten(f"Cross-check of {panel.formula}, one random intercept per {panel.unit_name}", WIDTH),
+        *([shorten(f"  source    {panel.source_note}", WIDTH)] if panel.source_note else []),
         f"  rows      {rows}",
         f"  units     {units}",
         f"  columns   {levels}",
     ]
-    if panel.source_note:
-        lines.insert(1, shorten(f"  source    {panel.source_note}", WIDTH))
     if fit.estimated and np.isfinite(fit.ratio):
         weights = fit.quasi_demeaning
         span = (

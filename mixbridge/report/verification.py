@@ -139,6 +139,8 @@ def compare_records(
 
 
 _MISSING = "(not there)"
+_ROWS_OF_THE_AUDIT = "audit.rows"
+"""Where rows of the data add further rows, one per covariate."""
 
 
 def _walk(
@@ -158,7 +160,8 @@ def _walk(
         for key in dict.fromkeys([*printed, *again]):
             below = f"{place}.{key}" if place else str(key)
             left, right = printed.get(key, _MISSING), again.get(key, _MISSING)
-            yield from _walk(left, right, below, tolerance, stated, away=away, scale=scale)
+            gone = away or (place == _ROWS_OF_THE_AUDIT and key not in again)
+            yield from _walk(left, right, below, tolerance, stated, away=gone, scale=scale)
         return
     if isinstance(printed, list) and isinstance(again, list) and len(printed) == len(again):
         scale = max(_largest(again), *(_largest(row) for row in again if isinstance(row, list)), 0.0)

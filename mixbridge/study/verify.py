@@ -81,14 +81,15 @@ def verify(record: Mapping[str, Any] | str | Path, products: UnitProducts | None
         )
     try:
         moments = Moments.from_record(given["moments"])
+        widest = max((int(stop) for _, stop in given["terms"].values()), default=0)
+        if widest != len(moments.design):
+            raise ValueError(f"its terms have {widest} columns and its moments {len(moments.design)}")
         study = from_moments(
             moments,
             formula=str(given["formula"]),
             unit=str(given["unit"]),
             period=given["period"],
-            terms=None
-            if "terms" not in given
-            else {name: slice(*pair) for name, pair in given["terms"].items()},
+            terms={name: slice(*pair) for name, pair in given["terms"].items()},
             accounting=_accounting(given["accounting"], moments.rows),
             primary=str(given["primary"]),
             routes=tuple(given["fits"]),
@@ -100,7 +101,9 @@ def verify(record: Mapping[str, Any] | str | Path, products: UnitProducts | None
         raise DataError(f"{where} is incomplete or damaged: {type(error).__name__}: {error}.") from error
     again = json.loads(json.dumps(study.to_dict()))
     tolerance = max(1e-9, 1e3 * float(np.finfo(float).eps) * float(study.curve.condition))
-    return compare_records(given, again, tolerance=min(tolerance, 1e-4), stated=STATED)
+    # the columns of a projection are columns like others in the moments: that they are one is a statement
+    stated = STATED if given.get("added") is None else (*STATED, "added", "unit_means")
+    return compare_records(given, again, tolerance=min(tolerance, 1e-4), stated=stated)
 
 
 def _accounting(given: Mapping[str, Any], rows: int) -> Accounting:
