@@ -15,6 +15,7 @@ from pathlib import Path
 
 LAYERS = (
     "errors",
+    "display",
     "sources",
     "panel",
     "moments",

@@ -6,7 +6,7 @@ from dataclasses import asdict
 from typing import Any
 
 from mixbridge.report.plain import plain, plain_array, plain_series, plain_table
-from mixbridge.report.record_sections import added_columns, sections_of, software
+from mixbridge.report.record_sections import added_columns, sections_of, software, summary_of
 from mixbridge.report.screen import StudyView
 from mixbridge.routes import Fit
 
@@ -61,6 +61,7 @@ def study_record(study: StudyView) -> dict[str, Any]:
             "unit_constant": study.curve.rank_constant,
         },
         "ledger": plain_table(study.ledger),
+        "summary": summary_of(study),
         "components": plain_table(study.components),
         "fits": {key: fit_record(fit) for key, fit in study.fits.items()},
         "identities": [

@@ -12,12 +12,13 @@ from typing import Any
 
 import numpy as np
 
+from mixbridge.audit import audit
 from mixbridge.errors import MixbridgeError
 from mixbridge.inference.references import default_rule, pick_reference
 from mixbridge.report.plain import plain, plain_table
 from mixbridge.routes import REFERENCE_ROUTES, Fit
 
-__all__ = ["COMPUTED", "added_columns", "inference_rows", "sections_of", "software"]
+__all__ = ["COMPUTED", "added_columns", "inference_rows", "sections_of", "software", "summary_of"]
 
 COMPUTED = "computed"
 PACKAGES = ("mixbridge", "numpy", "scipy", "pandas", "patsy", "statsmodels")
@@ -65,6 +66,26 @@ def sections_of(study: Any) -> dict[str, Part]:
         "audit": _audit,
     }
     return {name: _guarded(make, study) for name, make in makers.items()}
+
+
+def summary_of(study: Any) -> dict[str, Any]:
+    """Count classes of agreement by term and over all, and verdicts of the identities."""
+    ledger = study.ledger
+    votes = ledger[~ledger["route"].isin(REFERENCE_ROUTES) & (ledger["route"] != study.primary)]
+    verdicts = [item.verdict for item in study.identity_results]
+    counts = {
+        str(term): {
+            str(name): int(number) for name, number in part["verdict"].value_counts(sort=False).items()
+        }
+        for term, part in votes.groupby("term", sort=False)
+    }
+    found: dict[str, Any] = {"other_routes": int(votes["route"].nunique()), "terms": counts}
+    for name in ("identical", "immaterial", "visible", "conflicting"):
+        found[f"other_routes_{name}"] = int((votes["verdict"] == name).sum())
+    found["identities_hold"] = verdicts.count("holds")
+    found["identities_fail"] = verdicts.count("FAILS")
+    found["identities_do_not_apply"] = len(verdicts) - found["identities_hold"] - found["identities_fail"]
+    return found
 
 
 def _guarded(make: Callable[[Any], Part], study: Any) -> Part:
@@ -256,7 +277,7 @@ def _influence(study: Any) -> Part:
 
 
 def _audit(study: Any) -> Part:
-    found = study.audit()
+    found = audit(study, show_units=False)  # a record names no unit
     rows = {
         item.key: {
             "assumption": item.assumption,

@@ -24,7 +24,6 @@ class StudyReport(StudyAudit):
         length: Literal["paragraph", "page", "full"] = "full",
         title: str = "Methods appendix",
         chosen_beforehand: bool | None = None,
-        names: bool = True,
     ) -> Path:
         """Write the methods appendix.
 
@@ -41,13 +40,11 @@ class StudyReport(StudyAudit):
         chosen_beforehand : bool, optional
             Whether the primary route was chosen before the results were seen; if None the appendix says that it is
             not stated.
-        names : bool
-            Whether single units may be named; False for confidential units.
 
         Returns
         -------
         Path
-            Where it was written. The same data and versions give the same bytes.
+            Where it was written. The same data and versions give the same bytes. No single unit is named in it.
         """
         from mixbridge.report.appendix import write_appendix
 
@@ -58,7 +55,6 @@ class StudyReport(StudyAudit):
             length=length,
             title=title,
             chosen_beforehand=chosen_beforehand,
-            names=names,
         )
 
     def paragraph(self, *, audience: Literal["both", "economics", "biostatistics"] = "both") -> str:

@@ -30,11 +30,13 @@ STATED = (
     "software",
     "terms",
     "source",
+    "summary.identities_hold",
+    "summary.identities_do_not_apply",
     "accounting.dropped",
     "accounting.missing",
     "accounting.notes",
 )
-"""What a record says that does not follow from moments."""
+"""What a record says that does not follow from moments, counts with identities on rows among them."""
 
 
 def verify(record: Mapping[str, Any] | str | Path, products: UnitProducts | None = None) -> Verification:

@@ -1,0 +1,58 @@
+"""Cells of a table as every format shows them, and names that occur once in a document."""
+
+from __future__ import annotations
+
+import re
+from numbers import Integral, Real
+
+from mixbridge.display import visible
+from mixbridge.report.document import Cell, Table
+from mixbridge.report.text import number
+
+__all__ = ["Anchors", "cell_text", "full_text", "numeric_columns"]
+
+
+def cell_text(cell: Cell, digits: int) -> str:
+    """Return a cell as shown: a count whole, a number rounded to significant digits, a text on one line."""
+    if isinstance(cell, bool):
+        return "yes" if cell else "no"
+    if isinstance(cell, str):
+        return visible(cell)
+    if isinstance(cell, Integral):
+        return str(int(cell))
+    return number(float(cell), digits)
+
+
+def full_text(cell: Cell) -> str | None:
+    """Return a number with all its digits, so that reading it gives it back; None for a text."""
+    if isinstance(cell, bool | str) or not isinstance(cell, Real):
+        return None
+    return str(int(cell)) if isinstance(cell, Integral) else repr(float(cell))
+
+
+def numeric_columns(table: Table) -> frozenset[int]:
+    """Return the columns that are set flush right: at least half of what they hold is numbers."""
+    found = set()
+    for at in range(len(table.header)):
+        cells = [row[at] for row in table.rows if row[at] not in {"", "-"}]
+        numbers = sum(full_text(cell) is not None for cell in cells)
+        if numbers and 2 * numbers >= len(cells):
+            found.add(at)
+    return frozenset(found)
+
+
+class Anchors:
+    """Names made of lower-case ASCII letters, digits and hyphens, each given once."""
+
+    def __init__(self) -> None:
+        self._given: set[str] = set()
+
+    def give(self, prefix: str, text: str) -> str:
+        """Return a name that was not given before; the same calls in the same order give the same names."""
+        stem = re.sub(r"[^a-z0-9]+", "-", text.lower()).strip("-")[:60].strip("-")
+        stem = f"{prefix}-{stem}" if stem else prefix
+        name, more = stem, 2
+        while name in self._given:
+            name, more = f"{stem}-{more}", more + 1
+        self._given.add(name)
+        return name
