@@ -134,7 +134,9 @@ def _parser() -> argparse.ArgumentParser:
         epilog=CHECK_EXAMPLES,
         formatter_class=argparse.RawDescriptionHelpFormatter,
     )
-    check.add_argument("file", metavar="FILE", help="CSV (.csv, .csv.gz, .tsv) or Parquet file")
+    check.add_argument(
+        "file", metavar="FILE", help="CSV (.csv, .csv.gz, .tsv) or Parquet file, or a folder of Parquet files"
+    )
     check.add_argument(
         "--formula", required=True, help="outcome ~ covariates, for example 'honey ~ forage + feeding'"
     )
@@ -166,6 +168,17 @@ def _parser() -> argparse.ArgumentParser:
     )
     check.add_argument(
         "--json", action="store_true", help="print the whole record, unrounded, instead of the screen"
+    )
+    check.add_argument(
+        "--appendix",
+        metavar="FILE",
+        help="also write the methods appendix; the ending .md, .tex or .html chooses the format",
+    )
+    check.add_argument(
+        "--audience",
+        choices=("both", "economics", "biostatistics"),
+        default="both",
+        help="vocabulary of the appendix; its claims are the same (default: both)",
     )
     check.set_defaults(action=_check)
     match = commands.add_parser(
@@ -242,6 +255,8 @@ def _check(options: argparse.Namespace) -> int:
     )
     required = [_requirement(text) for text in options.require]
     _show(study, options.json)
+    if options.appendix is not None:
+        study.appendix(options.appendix, audience=options.audience)
     status = DONE
     for term, agree in required:
         try:

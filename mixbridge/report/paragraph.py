@@ -38,7 +38,7 @@ def paragraph_of(record: Record, words: Words) -> str:
     sizes = record["moments"]["sizes"]
     each = f"{count(sizes[0], 'row')} each" if len(sizes) == 1 else f"{sizes[0]} to {sizes[-1]} rows each"
     sentences = [
-        f"{record['moments']['outcome']} was modelled by a {words.model}, {record['formula']}, with one "
+        f"{record['moments']['outcome']} was modelled by {words.model}, {record['formula']}, with one "
         f"{words.effect} per "
         f"{record['unit']}, on {account['rows_used']} of {account['rows_given']} rows in "
         f"{count(account['units'], 'unit')} ({each}).",

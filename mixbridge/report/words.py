@@ -39,7 +39,7 @@ class Words:
 
 AUDIENCES: Mapping[str, Words] = {
     "economics": Words(
-        model="error-components (random-effects) model",
+        model="an error-components (random-effects) model",
         effect="unit effect",
         error="idiosyncratic error",
         unit_variance="variance of the unit effects",
@@ -48,7 +48,7 @@ AUDIENCES: Mapping[str, Words] = {
         unrelated="unit effects uncorrelated with the covariates",
     ),
     "biostatistics": Words(
-        model="linear mixed model with a random intercept",
+        model="a linear mixed model with a random intercept",
         effect="random intercept",
         error="residual error",
         unit_variance="random-intercept variance",
@@ -57,7 +57,7 @@ AUDIENCES: Mapping[str, Words] = {
         unrelated="random intercepts unrelated to the covariates",
     ),
     "both": Words(
-        model="random-intercept model (in economics: error components)",
+        model="a random-intercept model (in economics: error components)",
         effect="unit effect (random intercept)",
         error="idiosyncratic error (residual)",
         unit_variance="unit variance (random-intercept variance)",

@@ -31,7 +31,7 @@ def model_section(record: Record, words: Words) -> tuple[Block, ...]:
     blocks: list[Block] = [
         Heading("Model"),
         Paragraph(
-            f"A {words.model} was fitted for {outcome}, with one {words.effect} per {unit}; i counts "
+            f"{words.model[0].upper()}{words.model[1:]} was fitted for {outcome}, with one {words.effect} per {unit}; i counts "
             "units and t "
             f"{subject} within them. Fixed part: {record['formula']}."
         ),
