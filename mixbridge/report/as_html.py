@@ -11,7 +11,7 @@ from importlib.resources import files
 from types import MappingProxyType
 
 from mixbridge.display import visible
-from mixbridge.report.cells import Anchors, cell_text, full_text, numeric_columns
+from mixbridge.report.cells import Anchors, cell_text, full_text, numeric_columns, wordy
 from mixbridge.report.document import (
     Block,
     Bullets,
@@ -32,8 +32,14 @@ __all__ = ["html"]
 LISTED = 2
 """Levels of headings in the contents."""
 
-WRAPPED, WIDE = 24, 80
-"""A text of more characters than these is broken over lines, and gets a wide column."""
+WIDTHS = {"wrap": 24, "wide": 80, "essay": 240}
+"""A text of more characters than these is broken over lines, and gets a wide or a very wide column."""
+
+MANY = 12
+"""A table of more columns than this is printed on a page of its own, on its side."""
+
+BRIEF = 12
+"""A table of up to this many rows is not broken across printed pages."""
 
 _TYPES = {"json": "application/json", "csv": "text/csv", "md": "text/markdown"}
 _INDEXED = re.compile(INDEXED)
@@ -130,7 +136,7 @@ def _block(block: Block, anchors: Anchors, headings: list[tuple[int, str, str]])
         case Formula(_, text):
             return f'<div class="formula" role="math">{_formula(text)}</div>'
         case Code(text):
-            return f"<pre><code>{_isolated(visible(text, lines=True))}</code></pre>"
+            return f"<pre><code>{_words_whole(visible(text, lines=True))}</code></pre>"
         case Table():
             return _table(block, anchors)
         case Picture(name, svg, alternative, caption):
@@ -158,38 +164,54 @@ def _contents(headings: list[tuple[int, str, str]]) -> str:
 
 
 def _table(table: Table, anchors: Anchors) -> str:
+    """Return a table; a wordy one is laid out entry by entry, with roles that say what the layout no longer shows."""
     anchor = anchors.give("table", table.name)
-    right = numeric_columns(table)
+    right, cards = numeric_columns(table), wordy(table)
     head = "".join(
-        f'<th scope="col"{_classes(text, at in right)}{_whole(text)}>{_plain(text)}</th>'
+        f'<th scope="col"{_role("columnheader", cards)}{_classes(text, at in right)}{_whole(text)}>{_plain(text)}</th>'
         for at, text in enumerate(table.header)
     )
     rows = "\n".join(
-        "<tr>" + "".join(_cell(cell, at, table.digits, at in right) for at, cell in enumerate(row)) + "</tr>"
+        f"<tr{_role('row', cards)}>"
+        + "".join(
+            _cell(cell, table.digits, at in right, first=at == 0, label=table.header[at] if cards else None)
+            for at, cell in enumerate(row)
+        )
+        + "</tr>"
         for row in table.rows
     )
     notes = "".join(f'<p class="note">{_marked(note)}</p>' for note in table.notes)
     caption = visible(table.caption) or visible(table.name)
+    kind = "table cards" if cards else "table many" if len(table.header) > MANY else "table"
+    kind += " brief" if len(table.rows) <= BRIEF and not cards else ""
+    group = _role("rowgroup", cards)
     return (
-        f'<figure class="table" id="{anchor}"><div class="scroll" role="group" tabindex="0" '
-        f'aria-labelledby="{anchor}-caption">\n<table data-name="{anchor.removeprefix("table-")}">'
+        f'<figure class="{kind}" id="{anchor}"><div class="scroll" role="group" tabindex="0" '
+        f'aria-labelledby="{anchor}-caption">\n<table{_role("table", cards)} data-name="{anchor.removeprefix("table-")}">'
         f'<caption id="{anchor}-caption"><span>{_marked(caption)}</span></caption>\n'
-        f"<thead><tr>{head}</tr></thead>\n<tbody>\n{rows}\n</tbody>\n</table></div>{notes}</figure>"
+        f"<thead{group}><tr{_role('row', cards)}>{head}</tr></thead>\n<tbody{group}>\n{rows}\n</tbody>\n</table></div>"
+        f"{notes}</figure>"
     )
 
 
-def _cell(cell: Cell, at: int, digits: int, right: bool) -> str:
+def _cell(cell: Cell, digits: int, right: bool, *, first: bool, label: str | None) -> str:
     shown, full = cell_text(cell, digits), full_text(cell)
     kept = f' data-value="{full}"' if full is not None else _whole(cell) if isinstance(cell, str) else ""
-    tag, scope = ("td", "") if at else ("th", ' scope="row"')
-    return f"<{tag}{scope}{_classes(shown, right)}{kept}>{_plain(shown)}</{tag}>"
+    tag, scope = ("th", ' scope="row"') if first else ("td", "")
+    cards = label is not None
+    kept += f' data-label="{escape(visible(label))}"' if label is not None and not first else ""
+    role = _role("rowheader" if first else "cell", cards)
+    return f"<{tag}{scope}{role}{_classes(shown, right)}{kept}>{_plain(shown)}</{tag}>"
+
+
+def _role(name: str, stated: bool) -> str:
+    return f' role="{name}"' if stated else ""
 
 
 def _classes(text: str, right: bool) -> str:
     """Return the attribute for what is set flush right and for what is broken over lines."""
     names = ["n"] if right else []
-    names += ["wrap"] if len(text) > WRAPPED else []
-    names += ["wide"] if len(text) > WIDE else []
+    names += [name for name, most in WIDTHS.items() if len(text) > most]
     return f' class="{" ".join(names)}"' if names else ""
 
 
@@ -230,6 +252,12 @@ def _lowered(text: str, pattern: re.Pattern[str]) -> Iterator[str]:
         yield f"{escape(base, quote=False)}<sub>{escape(index, quote=False)}</sub>"
         at = match.end()
     yield _isolated(text[at:])
+
+
+def _words_whole(text: str) -> str:
+    """Return lines in which no option breaks after its hyphens."""
+    parts = re.split(rf"((?<!\S)-\S{{1,24}}(?!\S))", text)
+    return "".join(f"<span>{_isolated(part)}</span>" if at % 2 else _isolated(part) for at, part in enumerate(parts))
 
 
 def _plain(text: str) -> str:

@@ -9,7 +9,10 @@ from mixbridge.display import visible
 from mixbridge.report.document import Cell, Table
 from mixbridge.report.text import number
 
-__all__ = ["Anchors", "cell_text", "full_text", "numeric_columns"]
+__all__ = ["Anchors", "cell_text", "full_text", "numeric_columns", "wordy"]
+
+SENTENCE, ENTRY = 80, 320
+"""Characters of a cell that make it a sentence; characters of a row, on average, that make it an entry."""
 
 
 def cell_text(cell: Cell, digits: int) -> str:
@@ -39,6 +42,15 @@ def numeric_columns(table: Table) -> frozenset[int]:
         if numbers and 2 * numbers >= len(cells):
             found.add(at)
     return frozenset(found)
+
+
+def wordy(table: Table) -> bool:
+    """Return whether rows hold so many words that they are better read as entries than across columns."""
+    if not table.rows:
+        return False
+    words = [[len(cell) if isinstance(cell, str) else 0 for cell in row] for row in table.rows]
+    sentences = sum(max(column) > SENTENCE for column in zip(*words, strict=True))
+    return sentences >= 2 and sum(map(sum, words)) > ENTRY * len(words)
 
 
 class Anchors:

@@ -12,6 +12,9 @@ from mixbridge.errors import DataError
 
 __all__ = ["inline_svg"]
 
+SCALE = 1.25
+"""Drawings are made for paper; a screen is read from farther away."""
+
 _LEFT_OUT = {"script", "foreignObject", "metadata", "style", "iframe", "audio", "video", "a", "title", "desc"}
 _EVERYTHING = re.compile(r"\*\s*\{([^{}]*)\}")
 _INSIDE = re.compile(r"url\(\s*['\"]?#([^)'\"]+)['\"]?\s*\)")
@@ -21,8 +24,8 @@ def inline_svg(svg: str, prefix: str, alternative: str) -> str:
     """Return a drawing as one ``svg`` element for a page.
 
     Scripts, handlers of events, foreign content and all that refers to another place are left out; identifiers get a
-    prefix; a style for everything (``*{...}``) becomes the style of the root, which its parts inherit. The size is
-    the box of the drawing, so that it takes the width it is given.
+    prefix; a style for everything (``*{...}``) becomes the style of the root, which its parts inherit. The element has
+    a width and takes its height from the box of the drawing.
 
     Parameters
     ----------
@@ -58,10 +61,11 @@ def inline_svg(svg: str, prefix: str, alternative: str) -> str:
     )
     style = "" if "url(" in style else style
     box = root.get("viewBox") or f"0 0 {_length(root.get('width'))} {_length(root.get('height'))}"
+    width = SCALE * float(_length(root.get("width") or box.split()[2]))
     label = escape(visible(alternative))
     attributes = f' style="{escape(style)}"' if style else ""
     inner = escape((root.text or "").strip(), quote=False) + "".join(_written(part, prefix) for part in root)
-    return f'<svg viewBox="{escape(box)}" role="img" aria-label="{label}"{attributes}>{inner}</svg>'
+    return f'<svg viewBox="{escape(box)}" width="{width:.0f}pt" role="img" aria-label="{label}"{attributes}>{inner}</svg>'
 
 
 def _written(part: ElementTree.Element, prefix: str) -> str:
@@ -103,5 +107,5 @@ def _local(name: object) -> str:
 
 
 def _length(text: str | None) -> str:
-    found = re.match(r"[\d.]+", text or "")
-    return found[0] if found else "100"
+    found = re.match(r"\d+(\.\d+)?", (text or "").strip())
+    return found[0] if found else "300"

@@ -1,11 +1,11 @@
-"""A table as LaTeX that breaks across pages and stays within the width of the page."""
+"""A table as LaTeX that breaks across pages and stays within the width of the page; wordy ones entry by entry."""
 
 from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-from mixbridge.report.cells import cell_text, numeric_columns
+from mixbridge.report.cells import cell_text, numeric_columns, wordy
 from mixbridge.report.document import Table
 from mixbridge.report.tex_text import tex_text
 
@@ -21,6 +21,9 @@ GAP = 0.7
 WRAPPED = 5.5
 """A column of text may be as narrow as this many em, if its words allow."""
 
+SHORT = 10.5
+"""A column of text up to this many em is wrapped only where nothing else helps."""
+
 LONGEST = 14.0
 """No word makes a column wider than this many em: longer ones are broken."""
 
@@ -34,6 +37,7 @@ class _Column:
     cells: tuple[str, ...]
     right: bool
     natural: float
+    kept: float
     least: float
 
 
@@ -41,7 +45,7 @@ def tex_table(table: Table) -> str:
     """Return a table as one or more ``longtable`` environments.
 
     Type shrinks from small to scriptsize, then columns of text are wrapped; columns that still find no room go to
-    further tables that repeat the first column and say which columns they hold.
+    further tables that repeat the first column. A table with sentences in several columns is set entry by entry.
 
     Parameters
     ----------
@@ -50,8 +54,11 @@ def tex_table(table: Table) -> str:
     Returns
     -------
     str
-        ASCII. Its packages are ``array`` and ``longtable``.
+        ASCII. Its packages are ``array`` and ``longtable``; ``entries`` and the rules are in the preamble.
     """
+    notes = [f"{{\\footnotesize {tex_text(note)}\\par}}" for note in table.notes]
+    if wordy(table):
+        return "\n".join([_entries(table), *notes])
     right = numeric_columns(table)
     columns = [
         _column([table.header[at], *(cell_text(row[at], table.digits) for row in table.rows)], at in right)
@@ -66,7 +73,6 @@ def tex_table(table: Table) -> str:
         if len(groups) > 1:
             caption = f"{caption} (Part {place + 1} of {len(groups)}.)" if place == 0 else f"{caption} (Part {place + 1}.)"
         parts.append(_longtable(caption, group))
-    notes = [f"{{\\footnotesize {tex_text(note)}\\par}}" for note in table.notes]
     return "\n".join([*parts, *notes])
 
 
@@ -76,7 +82,22 @@ def _column(texts: Sequence[str], right: bool) -> _Column:
     pieces = [texts[0], *([] if right else texts[1:])]
     word = min(max(_width(word) for text in pieces for word in text.replace("_", "_ ").split(" ")), LONGEST)
     least = max([word, *map(_width, texts[1:])]) if right else min(natural, max(WRAPPED, word))
-    return _Column(tuple(map(tex_text, texts)), right, natural + 0.2, least + 0.2)
+    kept = natural if natural <= SHORT and not right else least
+    return _Column(tuple(map(tex_text, texts)), right, natural + 0.2, kept + 0.2, least + 0.2)
+
+
+def _entries(table: Table) -> str:
+    """Return each row as a paragraph: its first cell, then headings and cells."""
+    labels = [tex_text(text) for text in table.header]
+    items = []
+    for row in table.rows:
+        first, *cells = (tex_text(cell_text(cell, table.digits)) for cell in row)
+        parts = [
+            rf"\emph{{{label}:}} {cell}" for label, cell in zip(labels[1:], cells, strict=True) if cell not in {"", "-"}
+        ]
+        items.append(rf"\item[{{{first}}}] " + "; ".join(parts))
+    lines = [rf"\begin{{entries}}{{{tex_text(table.caption)}}}", *items, r"\end{entries}"]
+    return "\n".join(lines)
 
 
 def _width(text: str) -> float:
@@ -135,18 +156,19 @@ def _longtable(caption: str, columns: list[_Column]) -> str:
 def _widths(columns: list[_Column]) -> tuple[str, list[float]]:
     """Return the size of type and the widths of columns in em."""
     gaps = GAP * (len(columns) - 1)
-    natural, least = [column.natural for column in columns], [column.least for column in columns]
-    for size, room, wrapped in SIZES:
-        if sum(natural) + gaps <= room:
-            return size, natural
-        if sum(least) + gaps <= wrapped * room:
-            return size, _shared(natural, least, room - gaps - sum(least))
+    natural, kept, least = zip(*((column.natural, column.kept, column.least) for column in columns), strict=True)
+    for narrow in (kept, least):
+        for size, room, wrapped in SIZES:
+            if sum(natural) + gaps <= room:
+                return size, list(natural)
+            if sum(narrow) + gaps <= wrapped * room:
+                return size, _shared(natural, narrow, room - gaps - sum(narrow))
     size, room, _ = SIZES[-1]
     shrink = (room - gaps) / sum(least)  # one or two columns that are wider than the page: their words are broken
     return size, [width * shrink for width in least]
 
 
-def _shared(natural: list[float], least: list[float], spare: float) -> list[float]:
+def _shared(natural: Sequence[float], least: Sequence[float], spare: float) -> list[float]:
     """Give the room that is left to the columns that want more, in proportion to what they want."""
     wanted = [most - few for most, few in zip(natural, least, strict=True)]
     share = min(1.0, spare / sum(wanted)) if sum(wanted) else 0.0
