@@ -51,6 +51,23 @@ def test_the_check_command_runs(capsys):
     assert "forage" in capsys.readouterr().out
 
 
+def test_the_picture_is_the_one_that_is_drawn():
+    """Letters are placed by the fonts and versions at hand, so that the words of the picture are compared, in order."""
+
+    def words(svg):
+        return re.findall(r"<text[^>]*>([^<]*)</text>", svg)
+
+    kept = renew.PICTURE.read_text(encoding="utf-8")
+    assert words(kept) == words(renew.picture())
+    assert "swamy_arora" in words(kept)
+
+
+def test_the_worked_study_prints_what_it_shows():
+    text = renew.WORKED_PAGE.read_text(encoding="utf-8")
+    assert len(renew.WORKED.findall(text)) >= 8
+    assert renew.worked(text) == text
+
+
 def test_two_commands_set_everything_up():
     """CI runs them word for word; here only that both stand there, each complete."""
     commands = [line for block in blocks("sh") for line in block.splitlines() if "python3 -m venv" in line]

@@ -86,7 +86,7 @@ def alternative(study: Any, name: str, **options: object) -> str:
 
 def svg(study: Any, name: str, **options: object) -> str:
     """Return a figure as SVG: the same bytes for the same study, text kept as text."""
-    axes = draw(study, name, ax=None, **options)  # type: ignore[misc]  # options are checked there
+    axes = draw(study, name, ax=None, **options)
     with styled():
         return svg_of(axes)
 
