@@ -22,6 +22,7 @@ _LATER = {
     "match_reported": "mixbridge.reconcile.match",
     "read_figures": "mixbridge.reconcile.printed_file",
     "rehearse": "mixbridge.rehearse",
+    "shared_moments": "mixbridge.study.suppression",
     "verify": "mixbridge.study.verify",
 }
 
@@ -46,6 +47,7 @@ __all__ = [
     "match_reported",
     "read_figures",
     "rehearse",
+    "shared_moments",
     "verify",
 ]
 

@@ -14,7 +14,9 @@ import pandas as pd
 from numpy.typing import ArrayLike, NDArray
 
 from mixbridge.errors import DataError
+from mixbridge.moments.classes import means_products, size_classes
 from mixbridge.moments.factors import eigen_factor, factor_from_products, factor_from_rows, stack_factors
+from mixbridge.moments.files import same_coding
 from mixbridge.moments.opened import Block, Blocks, OpenMoments, gather, within_factor
 
 __all__ = ["Moments", "close", "collect"]
@@ -56,6 +58,8 @@ class Moments:
         Per size F_T with ``F_T'F_T = B_T = sum zbar zbar'`` of ``(1, scaled z)``.
     note : str
         How the within factor was obtained.
+    coding : str or None
+        As in `OpenMoments`.
     """
 
     design: tuple[str, ...]
@@ -69,6 +73,7 @@ class Moments:
     within: FloatArray
     between: FloatArray
     note: str
+    coding: str | None = None
 
     @property
     def rows(self) -> int:
@@ -172,6 +177,7 @@ class Moments:
         sizes = sorted(parts)
         pooled = replace(
             self,
+            coding=same_coding(self.coding, other.coding),
             magnitude=np.sqrt(
                 (self.rows * self.magnitude**2 + other.rows * other.magnitude**2) / (self.rows + other.rows)
             ),
@@ -235,6 +241,7 @@ class Moments:
                 within=np.array(body["within"], dtype=float),
                 between=np.array(body["between"], dtype=float),
                 note=body["note"],
+                coding=body.get("coding"),
             )
         )
 
@@ -259,7 +266,13 @@ class Moments:
         -------
         Moments
         """
-        return cls.from_record(json.loads(Path(path).read_text(encoding="utf-8")))
+        try:
+            record = json.loads(Path(path).read_text(encoding="utf-8"))
+        except OSError as error:
+            raise DataError(f"{path} cannot be read: {error.strerror}.") from error
+        except ValueError as error:
+            raise DataError(f"{path} is not a file of closed moments, or it is damaged.") from error
+        return cls.from_record(record if isinstance(record, dict) else {})
 
 
 def collect(blocks: Blocks, columns: tuple[str, ...], keys: pd.Index) -> tuple[OpenMoments, Moments]:
@@ -328,9 +341,9 @@ def close(opened: OpenMoments) -> Moments:
     keep = np.array([j for j in range(len(opened.columns)) if j != constant])
     shift = opened.shift + (opened.counts.astype(float) @ opened.means) / opened.rows
     move = shift - opened.shift
-    sizes, counts, order = _size_classes(opened.counts)
+    sizes, counts, order = size_classes(opened.counts)
     classes = np.split(order, np.cumsum(counts)[:-1])
-    products = np.array([_means_products(opened.means, units, move) for units in classes])
+    products = np.array([means_products(opened.means, units, move) for units in classes])
     between_squares = sizes @ np.diagonal(products, axis1=1, axis2=2)[:, 1:]
     spread = np.sqrt((np.diag(opened.within) + between_squares)[keep] / opened.rows)
     scale = np.exp2(np.round(np.log2(np.where(spread > 0.0, spread, 1.0))))
@@ -365,31 +378,9 @@ def close(opened: OpenMoments) -> Moments:
             within=factor[:, keep] / scale,
             between=between,
             note=note,
+            coding=opened.coding,
         )
     )
-
-
-def _size_classes(counts: IntArray) -> tuple[IntArray, IntArray, IntArray]:
-    """Return the distinct unit sizes, the number of units of each, and the units in order of size."""
-    short = counts.astype(np.uint16) if counts.max() < 2**16 else counts  # sorted by radix
-    order = np.argsort(short, kind="stable")
-    ordered = counts[order]
-    starts = np.flatnonzero(np.diff(ordered, prepend=0))
-    return ordered[starts], np.diff(starts, append=counts.size), order
-
-
-def _means_products(means: FloatArray, units: IntArray, move: FloatArray) -> FloatArray:
-    """Return the products of ``(1, mean - move)`` over some units."""
-    k = means.shape[1]
-    products = np.zeros((k + 1, k + 1))
-    products[0, 0] = units.size
-    for start in range(0, units.size, BLOCK_ROWS):
-        rows = np.take(means, units[start : start + BLOCK_ROWS], axis=0)
-        rows -= move
-        products[1:, 1:] += rows.T @ rows
-        products[0, 1:] += np.ones(rows.shape[0]) @ rows
-    products[1:, 0] = products[0, 1:]
-    return products
 
 
 def _frozen(moments: Moments) -> Moments:

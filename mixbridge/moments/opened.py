@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass, field, replace
+from pathlib import Path
 
 import numpy as np
 import pandas as pd
@@ -19,6 +20,7 @@ except ImportError:  # pragma: no cover
 
 from mixbridge.errors import DataError
 from mixbridge.moments.factors import stack_factors
+from mixbridge.moments.files import keys_from, plain_keys, read_arrays, same_coding, write_arrays
 
 __all__ = ["Block", "Blocks", "OpenMoments", "add_by_unit", "gather", "within_factor"]
 
@@ -28,6 +30,8 @@ Block = tuple[IntArray, FloatArray, FloatArray]
 """Unit codes of some rows, their design columns (b, p) and their outcome (b,)."""
 Blocks = Callable[[], Iterable[Block]]
 """Gives the blocks of all rows afresh each time it is called."""
+FORMAT = "mixbridge-open-moments"
+ARRAYS = ("counts", "shift", "means", "within", "loss")
 UNITS_AT_ONCE = 8192
 CACHED = 2**22
 """Bytes of a table that may stay in a processor's own cache."""
@@ -62,6 +66,8 @@ class OpenMoments:
         ``F'F = W`` taken from the rows, where a second pass was made.
     magnitude : ndarray of shape (k,)
         Root mean square of each column over all rows; rounding of the stored data is relative to it.
+    coding : str or None
+        Digest of how categories are coded and of what transforms learned; None where it is not known.
     """
 
     columns: tuple[str, ...]
@@ -72,6 +78,7 @@ class OpenMoments:
     within: FloatArray
     loss: FloatArray
     factor: FloatArray | None = field(default=None)
+    coding: str | None = None
 
     @property
     def magnitude(self) -> FloatArray:
@@ -97,6 +104,7 @@ class OpenMoments:
                 f"{list(self.columns)} against {list(other.columns)}. "
                 "Build both from the same formula and levels."
             )
+        coding = same_coding(self.coding, other.coding)
         moved = other.means + (other.shift - self.shift)
         place = self.keys.get_indexer(other.keys)
         shared = np.flatnonzero(place >= 0)
@@ -126,7 +134,29 @@ class OpenMoments:
             within=self.within + other.within + extra.T @ extra,
             loss=np.maximum(self.loss, other.loss),
             factor=factor,
+            coding=coding,
         )
+
+    def save(self, path: str | Path) -> None:
+        """Write the moments as one open file: see `mixbridge.moments.files`."""
+        meta = {
+            "format": FORMAT,
+            "version": 1,
+            "columns": list(self.columns),
+            "coding": self.coding,
+            "has_factor": self.factor is not None,
+            "keys": plain_keys(self.keys),
+        }
+        arrays = {name: getattr(self, name) for name in ARRAYS}
+        if self.factor is not None:
+            arrays["factor"] = self.factor
+        write_arrays(path, meta, arrays)
+
+    @classmethod
+    def load(cls, path: str | Path) -> OpenMoments:
+        """Read moments written by `save`; refuses a file that is damaged, changed or of another kind."""
+        meta, arrays = read_arrays(path, FORMAT, 1, (*ARRAYS, "factor"), optional=("factor",))
+        return cls(tuple(meta["columns"]), keys_from(meta["keys"]), coding=meta["coding"], **arrays)
 
     def with_factor(self, factor: FloatArray) -> OpenMoments:
         """Return the same moments with a within factor taken from the rows.
@@ -143,7 +173,9 @@ class OpenMoments:
         return replace(self, factor=factor)
 
 
-def gather(blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index) -> OpenMoments:
+def gather(
+    blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index, origin: FloatArray | None = None
+) -> OpenMoments:
     """Take the moments of rows that come in blocks, in one pass.
 
     Parameters
@@ -154,6 +186,9 @@ def gather(blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index) ->
         Names of the design columns and, last, of the outcome.
     keys : pandas.Index
         Unit keys by code. Units without a row are left out.
+    origin : ndarray of shape (k,), optional
+        What the means are measured from: the first row seen unless given. Parts that will be merged take one
+        origin, so that the mean of a column constant within units is the same number in each of them.
 
     Returns
     -------
@@ -208,7 +243,7 @@ def gather(blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index) ->
     if counts.size == 0:
         raise DataError("there are no rows to take moments of.")
     _refuse_non_finite(total, columns)
-    shift = np.append(anchors[0], anchors_y[0])
+    shift = np.append(anchors[0], anchors_y[0]) if origin is None else origin
     means = np.empty((counts.size, p + 1))
     within = total.copy()
     for start in range(0, counts.size, UNITS_AT_ONCE):

@@ -2,13 +2,9 @@
 
 from __future__ import annotations
 
-import hashlib
-import json
-import zipfile
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -19,6 +15,7 @@ from scipy.linalg.blas import dtrsm
 from mixbridge.errors import DataError
 from mixbridge.moments.closed import Moments, collect
 from mixbridge.moments.factors import upper_factor
+from mixbridge.moments.files import keys_from, plain_keys, read_arrays, same_coding, write_arrays
 from mixbridge.moments.opened import Block, Blocks, OpenMoments, add_by_unit
 
 __all__ = ["UnitProducts", "collect_products"]
@@ -27,6 +24,7 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.intp]
 
 FORMAT = "mixbridge-unit-products"
+ARRAYS = ("shift", "scale", "sizes", "means", "frame", "packed")
 DEPENDENT = 1e-10
 """Share of a column that is left after the earlier ones, below which it stays unscaled in the frame."""
 CENTRED = 1e-12
@@ -58,6 +56,8 @@ class UnitProducts:
         Upper triangular.
     packed : ndarray of shape (N, k (k + 1) / 2)
         Upper triangle, row by row, of ``sum_t f_it f_it'``.
+    coding : str or None
+        As in `OpenMoments`.
     """
 
     design: tuple[str, ...]
@@ -70,6 +70,7 @@ class UnitProducts:
     means: FloatArray
     frame: FloatArray
     packed: FloatArray
+    coding: str | None = None
 
     def __post_init__(self) -> None:
         """Make the arrays read-only."""
@@ -159,6 +160,7 @@ class UnitProducts:
                 "unit products of different designs cannot be pooled: "
                 f"{list(self.design)} -> {self.outcome!r} against {list(other.design)} -> {other.outcome!r}."
             )
+        coding = same_coding(self.coding, other.coding)
         shared = self.keys.intersection(other.keys)
         if len(shared):
             raise DataError(
@@ -172,53 +174,39 @@ class UnitProducts:
             move = solve_triangular(self.frame, (other.frame * ratio).T, trans="T").T
             full = np.matmul(move.T, np.matmul(other.framed(), move))
             packed = full[(slice(None), *np.triu_indices(k))]
-        return self._with(
+        pooled = self._with(
             self.keys.append(other.keys),
             np.concatenate([self.sizes, other.sizes]),
             np.vstack([self.means, other.means * ratio + (other.shift - self.shift) / self.scale]),
             np.vstack([self.packed, packed]),
         )
+        return replace(pooled, coding=coding)
 
     def save(self, path: str | Path) -> None:
-        """Write the products as one uncompressed npz file: arrays, names and keys as JSON, a checksum; no pickle."""
-        arrays = {
-            name: getattr(self, name) for name in ("shift", "scale", "sizes", "means", "frame", "packed")
-        }
-        meta: dict[str, Any] = {
+        """Write the products as one open file: see `mixbridge.moments.files`."""
+        meta = {
             "format": FORMAT,
             "version": 1,
             "design": list(self.design),
             "constant": self.constant,
             "outcome": self.outcome,
-            "keys": _plain_keys(self.keys),
+            "coding": self.coding,
+            "keys": plain_keys(self.keys),
         }
-        meta["checksum"] = _checksum(meta, arrays)
-        with Path(path).open("wb") as file:
-            np.savez(file, allow_pickle=False, meta=np.array(json.dumps(meta)), **arrays)
+        write_arrays(path, meta, {name: getattr(self, name) for name in ARRAYS})
 
     @classmethod
     def load(cls, path: str | Path) -> UnitProducts:
-        """Read products written by `save`; refuses a file whose checksum does not fit."""
-        try:
-            with np.load(path, allow_pickle=False) as file:
-                meta = json.loads(str(file["meta"]))
-                arrays = {
-                    name: file[name] for name in ("shift", "scale", "sizes", "means", "frame", "packed")
-                }
-        except (KeyError, ValueError, EOFError, zipfile.BadZipFile) as error:
-            raise DataError(f"{path} is not a file of unit products, or it is damaged.") from error
-        if not isinstance(meta, dict) or meta.get("format") != FORMAT or meta.get("version") != 1:
-            raise DataError(f"{path} does not hold unit products of version 1.")
-        checksum = meta.pop("checksum", None)
-        if checksum != _checksum(meta, arrays):
-            raise DataError(
-                "the checksum of the unit products does not fit their content: the file was changed or damaged."
-            )
-        keys = meta["keys"]
-        index = pd.Index(keys["values"])
-        if keys["dtype"] != str(index.dtype):
-            index = index.astype(keys["dtype"])
-        return cls(tuple(meta["design"]), meta["constant"], meta["outcome"], keys=index, **arrays)
+        """Read products written by `save`; refuses a file that is damaged, changed or of another kind."""
+        meta, arrays = read_arrays(path, FORMAT, 1, ARRAYS)
+        return cls(
+            tuple(meta["design"]),
+            meta["constant"],
+            meta["outcome"],
+            keys=keys_from(meta["keys"]),
+            coding=meta["coding"],
+            **arrays,
+        )
 
     def _with(
         self, keys: pd.Index, sizes: NDArray[np.int64], means: FloatArray, packed: FloatArray
@@ -234,6 +222,7 @@ class UnitProducts:
             means,
             self.frame,
             packed,
+            self.coding,
         )
 
 
@@ -312,6 +301,7 @@ def collect_products(
         (means - (moments.shift - shift)) / moments.scale,
         frame,
         packed,
+        moments.coding,
     )
 
 
@@ -378,22 +368,3 @@ def _places(k: int) -> IntArray:
     rows, columns = np.triu_indices(k)
     places[rows, columns] = places[columns, rows] = np.arange(rows.size)
     return places
-
-
-def _plain_keys(keys: pd.Index) -> dict[str, Any]:
-    """Return keys as JSON values and the name of their type."""
-    values = keys.astype(str).tolist() if keys.dtype.kind in "mM" else keys.tolist()
-    if not all(isinstance(value, (str, int, float)) for value in values):
-        raise DataError(
-            "only units keyed by numbers, texts or dates can be saved; use such a column as the unit."
-        )
-    return {"dtype": str(keys.dtype) if keys.dtype.name != "category" else "object", "values": values}
-
-
-def _checksum(meta: dict[str, Any], arrays: dict[str, FloatArray]) -> str:
-    digest = hashlib.sha256(json.dumps(meta, sort_keys=True).encode())
-    for name in sorted(arrays):
-        array = np.ascontiguousarray(arrays[name])
-        digest.update(f"{name} {array.dtype.str} {array.shape}".encode())
-        digest.update(array.tobytes())
-    return digest.hexdigest()
