@@ -10,6 +10,7 @@ from typing import Protocol
 import numpy as np
 import pandas as pd
 
+from mixbridge.display import Printed
 from mixbridge.errors import OptionError
 from mixbridge.moments import Moments, OpenMoments
 from mixbridge.moments.products import UnitProducts
@@ -118,7 +119,7 @@ class Finding:
 
 
 @dataclass(frozen=True, slots=True)
-class Audit:
+class Audit(Printed):
     """Every assumption that the routes share, with what the data can and cannot show.
 
     Attributes

@@ -16,13 +16,19 @@ STYLE = (
     ".mixbridge table{border-collapse:collapse;margin:.5em 0;font-variant-numeric:tabular-nums;border:0}"
     ".mixbridge caption{caption-side:top;text-align:left;padding:.2em 0 .4em;color:inherit;font-weight:600}"
     ".mixbridge th,.mixbridge td{padding:.15em .8em;text-align:left;border:0;vertical-align:top;"
-    "background:none;white-space:normal;max-width:32em;overflow-wrap:anywhere}"
-    ".mixbridge .n{text-align:right;white-space:nowrap}"
+    "background:none;white-space:nowrap}"
+    ".mixbridge .n{text-align:right}"
+    ".mixbridge .w{white-space:normal;overflow-wrap:anywhere;min-width:14em;max-width:32em}"
+    ".mixbridge pre.w{white-space:pre-wrap;max-width:none}"
     ".mixbridge thead th{border-bottom:1px solid currentColor}"
     ".mixbridge tbody th{font-weight:400}"
     ".mixbridge summary{cursor:pointer}"
     "</style>"
 )
+
+
+WRAPPED, LINE = 28, 110
+"""Characters from which a cell, and from which a line of text, is broken."""
 
 
 def fragment(*parts: str) -> str:
@@ -31,8 +37,10 @@ def fragment(*parts: str) -> str:
 
 
 def preformatted(text: str) -> str:
-    """Return lines of text as they stand."""
-    return f"<pre>{escape(visible(text, lines=True))}</pre>"
+    """Return lines of text as they stand; where one is very long, lines are broken at the width of the notebook."""
+    shown = visible(text, lines=True)
+    kind = ' class="w"' if any(len(line) > LINE for line in shown.split("\n")) else ""
+    return f"<pre{kind}>{escape(shown)}</pre>"
 
 
 def table(
@@ -63,14 +71,16 @@ def table(
     """
 
     def cell(at: int, text: str, tag: str, scope: str = "") -> str:
-        flush = ' class="n"' if at in right else ""
-        return f"<{tag}{scope}{flush}>{escape(visible(text))}</{tag}>"
+        kind = "n" if at in right else "w" if len(text) > WRAPPED else ""
+        classed = f' class="{kind}"' if kind else ""
+        return f"<{tag}{scope}{classed}>{escape(visible(text))}</{tag}>"
 
     head = "".join(cell(at, text, "th", ' scope="col"') for at, text in enumerate(header))
     body = "".join(
         "<tr>"
         + "".join(
-            cell(at, text, "td") if at else cell(at, text, "th", ' scope="row"') for at, text in enumerate(row)
+            cell(at, text, "td") if at else cell(at, text, "th", ' scope="row"')
+            for at, text in enumerate(row)
         )
         + "</tr>"
         for row in rows

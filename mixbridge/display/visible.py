@@ -20,7 +20,7 @@ _SPACE = re.compile("[ \t-\r\x1c-\x1f\x85\u2028\u2029]+")  # spaces that forbid 
 
 
 def visible(text: str, *, lines: bool = False) -> str:
-    """Return a text that shows all it holds and reorders nothing around it.
+    r"""Return a text that shows all it holds and reorders nothing around it.
 
     Control characters, controls of the direction of writing that could turn around the text after them, halves of
     surrogate pairs and noncharacters are written out, such as ``⟨U+202E⟩``. Runs of white space become one space.
@@ -40,7 +40,7 @@ def visible(text: str, *, lines: bool = False) -> str:
 
     Examples
     --------
-    >>> visible("apiary\\u202e7\\n")
+    >>> visible("apiary\u202e7\n")
     'apiary⟨U+202E⟩7'
     """
     shown = _HIDDEN.sub(lambda match: f"⟨U+{ord(match[0]):04X}⟩", text)

@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from mixbridge.display import Printed
 from mixbridge.errors import IdentificationError, OptionError
 from mixbridge.inference.hypothesis_text import read_hypothesis
 from mixbridge.inference.kenward_roger import kenward_roger
@@ -22,7 +23,7 @@ FloatArray = NDArray[np.float64]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class HypothesisResult:
+class HypothesisResult(Printed):
     """Result of one test.
 
     Attributes

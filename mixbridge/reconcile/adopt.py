@@ -11,6 +11,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from mixbridge.display import Printed
 from mixbridge.errors import IdentificationError, MixbridgeError, OptionError
 from mixbridge.reconcile.adopt_check import (
     DIFFERS,
@@ -64,7 +65,7 @@ class MakeStudy(Protocol[StudyOut_co]):
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Adopted(Generic[StudyT]):
+class Adopted(Printed, Generic[StudyT]):
     """A fitted model of another program with a study of the same rows, and what was found about that fit.
 
     Attributes

@@ -21,6 +21,7 @@ from dataclasses import dataclass
 import numpy as np
 import pandas as pd
 
+from mixbridge.display import Printed
 from mixbridge.errors import OptionError
 from mixbridge.inference.contrasts import Contrast
 from mixbridge.inference.references import row_of
@@ -40,7 +41,7 @@ OFF_CURVE = ("between", "first_difference")
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Attribution:
+class Attribution(Printed):
     """One gap, split.
 
     Attributes

@@ -8,6 +8,7 @@ from typing import Literal
 
 import numpy as np
 
+from mixbridge.display import Printed
 from mixbridge.errors import OptionError
 from mixbridge.reconcile.match_chance import chance_of
 from mixbridge.reconcile.match_consistency import consistency_of
@@ -29,7 +30,7 @@ LOOKED_AT = 400
 
 
 @dataclass(frozen=True, slots=True)
-class Match(MatchRecord):
+class Match(MatchRecord, Printed):
     """Printed figures against every route and convention; print it for the screen."""
 
     def __str__(self) -> str:

@@ -17,6 +17,7 @@ import pandas as pd
 import scipy
 from numpy.typing import NDArray
 
+from mixbridge.display import Printed
 from mixbridge.errors import OptionError
 from mixbridge.inference.pivot import RatioSet, no_pivot, pivot_of
 from mixbridge.ratio import Curve
@@ -33,7 +34,7 @@ SIGNS = {1: "above zero", -1: "below zero", 0: "holding zero"}
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Path:
+class Path(Printed):
     """One coefficient along the curve.
 
     Attributes

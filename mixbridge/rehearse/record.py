@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 import pandas as pd
 
+from mixbridge.display import Printed
 from mixbridge.errors import OptionError
 from mixbridge.rehearse import tables, text
 from mixbridge.rehearse.figure import figure_of
@@ -20,7 +21,7 @@ __all__ = ["Rehearsal"]
 
 
 @dataclass(frozen=True, eq=False)
-class Rehearsal:
+class Rehearsal(Printed):
     """How every route behaves on one design under a stated truth.
 
     Tables are made once; do not change them in place.

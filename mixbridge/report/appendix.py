@@ -161,7 +161,10 @@ def _pictures(study: Any) -> tuple[Picture, ...]:
         if name not in FIGURES:
             continue
         try:
-            found.append(Picture(name, svg(study, name), alternative(study, name), FIGURES[name]))
+            options = {"names": False} if name == "leave_one_out" else {}  # an appendix names no unit
+            found.append(
+                Picture(name, svg(study, name, **options), alternative(study, name, **options), FIGURES[name])
+            )
         except MixbridgeError:  # the sections say why these figures are not there
             continue
     return tuple(found)

@@ -120,9 +120,11 @@ def _part(name: str) -> str:
     return files("mixbridge.report").joinpath("page", name).read_text(encoding="utf-8")
 
 
-def _block(block: Block, anchors: Anchors, headings: list[tuple[int, str, str]]) -> str:
+def _block(block: Block, anchors: Anchors, headings: list[tuple[int, str, str]]) -> str:  # noqa: PLR0911
     match block:
         case Heading(text, level):
+            if not visible(text).strip():
+                return ""
             # No level is left out on the way down, so that the outline can be walked.
             level = min(max(level, 1), headings[-1][0] + 1 if headings else 1, 5)
             name = anchors.give("section", text)
@@ -168,7 +170,7 @@ def _table(table: Table, anchors: Anchors) -> str:
     anchor = anchors.give("table", table.name)
     right, cards = numeric_columns(table), wordy(table)
     head = "".join(
-        f'<th scope="col"{_role("columnheader", cards)}{_classes(text, at in right)}{_whole(text)}>{_plain(text)}</th>'
+        _element("columnheader", visible(text), cards, f"{_classes(text, at in right)}{_whole(text)}")
         for at, text in enumerate(table.header)
     )
     rows = "\n".join(
@@ -187,7 +189,8 @@ def _table(table: Table, anchors: Anchors) -> str:
     group = _role("rowgroup", cards)
     return (
         f'<figure class="{kind}" id="{anchor}"><div class="scroll" role="group" tabindex="0" '
-        f'aria-labelledby="{anchor}-caption">\n<table{_role("table", cards)} data-name="{anchor.removeprefix("table-")}">'
+        f'aria-labelledby="{anchor}-caption">\n'
+        f'<table{_role("table", cards)} data-name="{anchor.removeprefix("table-")}">'
         f'<caption id="{anchor}-caption"><span>{_marked(caption)}</span></caption>\n'
         f"<thead{group}><tr{_role('row', cards)}>{head}</tr></thead>\n<tbody{group}>\n{rows}\n</tbody>\n</table></div>"
         f"{notes}</figure>"
@@ -197,11 +200,20 @@ def _table(table: Table, anchors: Anchors) -> str:
 def _cell(cell: Cell, digits: int, right: bool, *, first: bool, label: str | None) -> str:
     shown, full = cell_text(cell, digits), full_text(cell)
     kept = f' data-value="{full}"' if full is not None else _whole(cell) if isinstance(cell, str) else ""
-    tag, scope = ("th", ' scope="row"') if first else ("td", "")
-    cards = label is not None
     kept += f' data-label="{escape(visible(label))}"' if label is not None and not first else ""
-    role = _role("rowheader" if first else "cell", cards)
-    return f"<{tag}{scope}{role}{_classes(shown, right)}{kept}>{_plain(shown)}</{tag}>"
+    role = "rowheader" if first else "cell"
+    return _element(role, shown, label is not None, f"{_classes(shown, right)}{kept}")
+
+
+_SCOPES = {"columnheader": "col", "rowheader": "row"}
+
+
+def _element(role: str, shown: str, stated: bool, attributes: str) -> str:
+    """Return one cell; a heading without words is a cell like others."""
+    if not shown.strip():
+        role = "cell"
+    tag, scope = ("th", f' scope="{_SCOPES[role]}"') if role in _SCOPES else ("td", "")
+    return f"<{tag}{scope}{_role(role, stated)}{attributes}>{_isolated(shown)}</{tag}>"
 
 
 def _role(name: str, stated: bool) -> str:
@@ -220,7 +232,9 @@ def _whole(text: str) -> str:
     if visible(text) == text:
         return ""
     kept = text.encode("utf-8", "replace").decode("utf-8")
-    kept = "".join(sign if sign in "\t\n" or sign >= " " else "\ufffd" for sign in kept.replace("\r", "\n"))
+    kept = "".join(
+        sign if sign in "\t\n" or sign >= " " else "\ufffd" for sign in re.sub("\r\n?", "\n", kept)
+    )
     return f' data-text="{escape(kept)}"'
 
 
@@ -230,7 +244,9 @@ def _attached(attachments: Mapping[str, str]) -> str:
         kind = _TYPES.get(name.rpartition(".")[2], "text/plain")
         data = base64.b64encode(text.encode("utf-8")).decode("ascii")
         shown = escape(visible(name))
-        links.append(f'<li><a download="{shown}" href="data:{kind};charset=utf-8;base64,{data}">{shown}</a></li>')
+        links.append(
+            f'<li><a download="{shown}" href="data:{kind};charset=utf-8;base64,{data}">{shown}</a></li>'
+        )
     return f'<div class="attachments"><p>Attached:</p><ul>{"".join(links)}</ul></div>\n' if links else ""
 
 
@@ -256,13 +272,10 @@ def _lowered(text: str, pattern: re.Pattern[str]) -> Iterator[str]:
 
 def _words_whole(text: str) -> str:
     """Return lines in which no option breaks after its hyphens."""
-    parts = re.split(rf"((?<!\S)-\S{{1,24}}(?!\S))", text)
-    return "".join(f"<span>{_isolated(part)}</span>" if at % 2 else _isolated(part) for at, part in enumerate(parts))
-
-
-def _plain(text: str) -> str:
-    """Return the text of a cell, on one line, as it stands."""
-    return _isolated(visible(text))
+    parts = re.split(r"((?<!\S)-\S{1,24}(?!\S))", text)
+    return "".join(
+        f"<span>{_isolated(part)}</span>" if at % 2 else _isolated(part) for at, part in enumerate(parts)
+    )
 
 
 def _isolated(text: str) -> str:

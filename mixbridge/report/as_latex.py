@@ -60,23 +60,31 @@ def latex(document: Document) -> str:
     preamble = files("mixbridge.report").joinpath("page", "preamble.tex").read_text(encoding="utf-8")
     parts = [
         f"{preamble}\\begin{{document}}\n{{\\LARGE\\raggedright {tex_text(document.title)}\\par}}\n\\medskip",
-        *(_block(block) for block in document.blocks),
+        *(
+            _block(block, after_heading=isinstance(before, Heading))
+            for before, block in zip((None, *document.blocks), document.blocks, strict=False)
+        ),
         "\\end{document}",
     ]
     return "\n\n".join(part for part in parts if part) + "\n"
 
 
-def _block(block: Block) -> str:
+def _block(block: Block, *, after_heading: bool) -> str:  # noqa: PLR0911
     match block:
         case Heading(text, level):
             name = _LEVELS[min(max(level, 1), len(_LEVELS)) - 1]
-            return rf"\roomforheading\{name}{{{tex_text(text)}}}"
+            room = "" if after_heading else r"\roomforheading"
+            return rf"{room}\{name}{{{tex_text(text)}}}"
         case Paragraph(text, tone):
             body = tex_text(text)
             return f"\\begin{{caution}}\n{body}\n\\end{{caution}}" if tone == "caution" else body
         case Bullets(items):
             points = "\n".join(rf"\item {tex_text(item)}" for item in items)
-            return f"\\begin{{itemize}}\\setlength{{\\itemsep}}{{0pt}}\n{points}\n\\end{{itemize}}" if items else ""
+            return (
+                f"\\begin{{itemize}}\\setlength{{\\itemsep}}{{0pt}}\n{points}\n\\end{{itemize}}"
+                if items
+                else ""
+            )
         case Formula(tex, _):
             return f"\\[\n\\fitted{{{tex}}}\n\\]"
         case Code(text):

@@ -37,7 +37,7 @@ _LINKS = re.compile(r"(?<=\w)(:)(?=//)|(?<=\bwww)(\.)", re.IGNORECASE)
 
 
 def markdown(document: Document) -> str:
-    """Return a document as Markdown.
+    r"""Return a document as Markdown.
 
     Headings begin with ``#``, cautions are quoted, formulas and commands stand in fenced blocks, and a picture is
     given by its caption and its alternative in words, since Markdown holds no picture. What a text holds is shown
@@ -59,17 +59,17 @@ def markdown(document: Document) -> str:
     >>> print(markdown(Document("Methods", (Paragraph("Units: a_1 and <b>."),))))
     # Methods
     <BLANKLINE>
-    Units: a\\_1 and &lt;b&gt;.
+    Units: a\_1 and &lt;b&gt;.
     <BLANKLINE>
     """
-    parts = [f"# {_line(document.title)}", *(_block(block) for block in document.blocks)]
+    parts = [f"# {_heading(document.title)}", *(_block(block) for block in document.blocks)]
     return "\n\n".join(part for part in parts if part) + "\n"
 
 
-def _block(block: Block) -> str:
+def _block(block: Block) -> str:  # noqa: PLR0911
     match block:
         case Heading(text, level):
-            return f"{'#' * min(max(level, 1) + 1, 6)} {_line(text)}"
+            return f"{'#' * min(max(level, 1) + 1, 6)} {_heading(text)}"
         case Paragraph(text, tone):
             return f"> {_line(text)}" if tone == "caution" else _line(text)
         case Bullets(items):
@@ -118,18 +118,26 @@ def _fenced(text: str, kind: str) -> str:
     return f"{fence}{kind}\n{shown}\n{fence}"
 
 
+def _heading(text: str) -> str:
+    """Return the text of a heading, where number signs at the end would close it."""
+    return re.sub(r"(?<=[ #])#$", r"\\#", _line(text))
+
+
 def _line(text: str) -> str:
     """Return a text that begins a line, where some signs would begin a list, a heading or a rule."""
     shown = visible(text)
     start = _START.match(shown)
     if start is None:
-        return _inline(shown)
+        return _escaped(shown)
     if start[1]:
-        return f"{start[1]}\\{start[2]}{_inline(shown[start.end() :])}"
-    return f"\\{start[0]}{_inline(shown[start.end() :])}"
+        return f"{start[1]}\\{start[2]}{_escaped(shown[start.end() :])}"
+    return f"\\{start[0]}{_escaped(shown[start.end() :])}"
 
 
 def _inline(text: str) -> str:
-    """Return a text whose signs stand for themselves."""
-    shown = _SIGNS.sub(lambda match: _INLINE[match[0]], visible(text))
-    return _LINKS.sub(lambda match: f"\\{match[0]}", shown)
+    """Return a text on one line whose signs stand for themselves."""
+    return _escaped(visible(text))
+
+
+def _escaped(shown: str) -> str:
+    return _LINKS.sub(lambda match: f"\\{match[0]}", _SIGNS.sub(lambda match: _INLINE[match[0]], shown))

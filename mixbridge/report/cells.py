@@ -6,7 +6,7 @@ import re
 from numbers import Integral, Real
 
 from mixbridge.display import visible
-from mixbridge.report.document import Cell, Table
+from mixbridge.report.document import Table
 from mixbridge.report.text import number
 
 __all__ = ["Anchors", "cell_text", "full_text", "numeric_columns", "wordy"]
@@ -15,7 +15,7 @@ SENTENCE, ENTRY = 80, 320
 """Characters of a cell that make it a sentence; characters of a row, on average, that make it an entry."""
 
 
-def cell_text(cell: Cell, digits: int) -> str:
+def cell_text(cell: object, digits: int) -> str:
     """Return a cell as shown: a count whole, a number rounded to significant digits, a text on one line."""
     if isinstance(cell, bool):
         return "yes" if cell else "no"
@@ -23,10 +23,10 @@ def cell_text(cell: Cell, digits: int) -> str:
         return visible(cell)
     if isinstance(cell, Integral):
         return str(int(cell))
-    return number(float(cell), digits)
+    return number(float(cell), digits) if isinstance(cell, Real) else visible(str(cell))
 
 
-def full_text(cell: Cell) -> str | None:
+def full_text(cell: object) -> str | None:
     """Return a number with all its digits, so that reading it gives it back; None for a text."""
     if isinstance(cell, bool | str) or not isinstance(cell, Real):
         return None

@@ -65,7 +65,8 @@ def inline_svg(svg: str, prefix: str, alternative: str) -> str:
     label = escape(visible(alternative))
     attributes = f' style="{escape(style)}"' if style else ""
     inner = escape((root.text or "").strip(), quote=False) + "".join(_written(part, prefix) for part in root)
-    return f'<svg viewBox="{escape(box)}" width="{width:.0f}pt" role="img" aria-label="{label}"{attributes}>{inner}</svg>'
+    size = f'viewBox="{escape(box)}" width="{width:.0f}pt"'
+    return f'<svg {size} role="img" aria-label="{label}"{attributes}>{inner}</svg>'
 
 
 def _written(part: ElementTree.Element, prefix: str) -> str:
@@ -74,9 +75,7 @@ def _written(part: ElementTree.Element, prefix: str) -> str:
     name = _local(part.tag)
     if name in _LEFT_OUT or not re.fullmatch(r"[A-Za-z][\w-]*", name):
         return tail
-    attributes = "".join(
-        f' {key}="{escape(value)}"' for key, value in _kept(part.items(), prefix)
-    )
+    attributes = "".join(f' {key}="{escape(value)}"' for key, value in _kept(part.items(), prefix))
     inner = escape(part.text or "", quote=False) + "".join(_written(child, prefix) for child in part)
     return f"<{name}{attributes}>{inner}</{name}>{tail}" if inner else f"<{name}{attributes}/>{tail}"
 

@@ -10,7 +10,7 @@ _GREEK = {
     "ρ": "rho", "ς": "varsigma", "σ": "sigma", "τ": "tau", "υ": "upsilon", "φ": "varphi", "χ": "chi",
     "ψ": "psi", "ω": "omega", "ϕ": "phi", "ϵ": "epsilon", "ϑ": "vartheta", "ϱ": "varrho", "µ": "mu",
     "Γ": "Gamma", "Δ": "Delta", "Θ": "Theta", "Λ": "Lambda", "Ξ": "Xi", "Π": "Pi", "Σ": "Sigma",
-    "Υ": "Upsilon", "Φ": "Phi", "Ψ": "Psi", "Ω": "Omega", "Ω": "Omega",
+    "Υ": "Upsilon", "Φ": "Phi", "Ψ": "Psi", "Ω": "Omega",
 }  # fmt: skip
 _GREEK_AS_LATIN = dict(zip("ΑΒΕΖΗΙΚΜΝΟΡΤΧο", "ABEZHIKMNOPTXo", strict=True))
 

@@ -71,7 +71,11 @@ def tex_table(table: Table) -> str:
     for place, group in enumerate(groups):
         caption = table.caption
         if len(groups) > 1:
-            caption = f"{caption} (Part {place + 1} of {len(groups)}.)" if place == 0 else f"{caption} (Part {place + 1}.)"
+            caption = (
+                f"{caption} (Part {place + 1} of {len(groups)}.)"
+                if place == 0
+                else f"{caption} (Part {place + 1}.)"
+            )
         parts.append(_longtable(caption, group))
     return "\n".join([*parts, *notes])
 
@@ -93,7 +97,9 @@ def _entries(table: Table) -> str:
     for row in table.rows:
         first, *cells = (tex_text(cell_text(cell, table.digits)) for cell in row)
         parts = [
-            rf"\emph{{{label}:}} {cell}" for label, cell in zip(labels[1:], cells, strict=True) if cell not in {"", "-"}
+            rf"\emph{{{label}:}} {cell}"
+            for label, cell in zip(labels[1:], cells, strict=True)
+            if cell not in {"", "-"}
         ]
         items.append(rf"\item[{{{first}}}] " + "; ".join(parts))
     lines = [rf"\begin{{entries}}{{{tex_text(table.caption)}}}", *items, r"\end{entries}"]
@@ -103,7 +109,13 @@ def _entries(table: Table) -> str:
 def _width(text: str) -> float:
     """Return about how wide a text is set, in em; a little more rather than less."""
     return sum(
-        0.31 if sign in _NARROW else 0.86 if sign in _WIDE else 0.72 if sign.isupper() or ord(sign) > 0x24F else 0.53
+        0.31
+        if sign in _NARROW
+        else 0.86
+        if sign in _WIDE
+        else 0.72
+        if sign.isupper() or ord(sign) > 0x24F
+        else 0.53
         for sign in text
     )
 
@@ -127,7 +139,9 @@ def _longtable(caption: str, columns: list[_Column]) -> str:
         rf">{{\{'raggedleft' if column.right else 'raggedright'}\arraybackslash}}p{{{width:.2f}em}}"
         for column, width in zip(columns, widths, strict=True)
     )
-    heading, *rows = (" & ".join(cells) + r" \\" for cells in zip(*(column.cells for column in columns), strict=True))
+    heading, *rows = (
+        " & ".join(cells) + r" \\" for cells in zip(*(column.cells for column in columns), strict=True)
+    )
     count = len(columns)
     return "\n".join(
         [
@@ -156,7 +170,9 @@ def _longtable(caption: str, columns: list[_Column]) -> str:
 def _widths(columns: list[_Column]) -> tuple[str, list[float]]:
     """Return the size of type and the widths of columns in em."""
     gaps = GAP * (len(columns) - 1)
-    natural, kept, least = zip(*((column.natural, column.kept, column.least) for column in columns), strict=True)
+    natural, kept, least = zip(
+        *((column.natural, column.kept, column.least) for column in columns), strict=True
+    )
     for narrow in (kept, least):
         for size, room, wrapped in SIZES:
             if sum(natural) + gaps <= room:
@@ -164,7 +180,9 @@ def _widths(columns: list[_Column]) -> tuple[str, list[float]]:
             if sum(narrow) + gaps <= wrapped * room:
                 return size, _shared(natural, narrow, room - gaps - sum(narrow))
     size, room, _ = SIZES[-1]
-    shrink = (room - gaps) / sum(least)  # one or two columns that are wider than the page: their words are broken
+    shrink = (room - gaps) / sum(
+        least
+    )  # one or two columns that are wider than the page: their words are broken
     return size, [width * shrink for width in least]
 
 

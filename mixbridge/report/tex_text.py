@@ -23,17 +23,17 @@ _SYMBOL = re.compile(
     rf"(?P<below>[{_BELOW}]*)(?P<raised>[{_RAISED}]*)"
     rf"|(?P<alone_raised>[{_RAISED}]+)|(?P<alone_below>[{_BELOW}]+)"
     rf"|(?P<accented>[A-Za-z][{''.join(ACCENTS)}])"
-    rf"|(?P<minus>(?<![\w.)\]-])-(?=\.?\d))"
+    rf"|(?P<minus>(?<![\w.)\]-])-(?=\.?\d|inf\b))"
 )
 _PAIRS = re.compile(r"([-,'!?])(?=[-,'`])")
 
 
 def tex_text(text: str) -> str:
-    """Return a text on one line for the body of a LaTeX document.
+    r"""Return a text on one line for the body of a LaTeX document.
 
     Greek letters and signs of mathematics are set as such, ``σ_α²`` and the other symbols of the model with their
     index below, a hyphen before a digit as a minus sign, letters with accents by the accent. A character for which
-    ordinary LaTeX has nothing is named by its code point, in the macro ``\\codepoints`` of the preamble.
+    ordinary LaTeX has nothing is named by its code point, in the macro ``\codepoints`` of the preamble.
 
     Parameters
     ----------
@@ -48,13 +48,13 @@ def tex_text(text: str) -> str:
     Examples
     --------
     >>> print(tex_text("50% of σ_α² < β̂_1 & é"))
-    50\\% of \\ensuremath{\\sigma_{\\alpha}^{2}} \\textless{} \\ensuremath{\\hat{\\beta}}\\_\\allowbreak{}1 \\& \\'{e}
+    50\% of \ensuremath{\sigma_{\alpha}^{2}} \textless{} \ensuremath{\hat{\beta}}\_\allowbreak{}1 \& \'{e}
     """
     return " ".join(_word(word, prose=True) for word in _composed(visible(text)).split(" "))
 
 
 def tex_lines(text: str) -> str:
-    """Return lines as they stand, in a fixed width, each able to break after its spaces.
+    r"""Return lines as they stand, in a fixed width, each able to break after its spaces.
 
     Parameters
     ----------
@@ -64,7 +64,7 @@ def tex_lines(text: str) -> str:
     Returns
     -------
     str
-        Lines that end with ``\\\\``, to stand in a paragraph of its own in a typewriter font.
+        Lines that end with ``\\``, to stand in a paragraph of its own in a typewriter font.
     """
     lines = []
     for line in _composed(visible(text, lines=True)).split("\n"):
@@ -162,7 +162,8 @@ def _single(word: str, at: int, *, prose: bool) -> str | None:
 
 def _accented(sign: str) -> str | None:
     """Return a Latin letter with its accents, or None."""
-    letter, *marks = unicodedata.normalize("NFD", sign)
+    separate = unicodedata.normalize("NFD", sign)
+    letter, marks = separate[0], separate[1:]
     if not marks or not (letter in LETTERS or (letter.isascii() and letter.isalpha())):
         return None
     if not set(marks) <= set(ACCENTS):

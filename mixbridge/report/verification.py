@@ -12,6 +12,7 @@ from typing import Any
 
 import pandas as pd
 
+from mixbridge.display import Printed
 from mixbridge.report.text import WIDTH, columns, shorten
 
 __all__ = ["DIFFERS", "NEEDS_ROWS", "SAME", "STATED", "Checked", "Verification", "compare_records"]
@@ -56,7 +57,7 @@ class Checked:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Verification:
+class Verification(Printed):
     """What came of checking a record.
 
     Attributes

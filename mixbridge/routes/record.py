@@ -10,6 +10,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from mixbridge.display import fragment, preformatted, table
 from mixbridge.routes.certificate import Certificate
 
 __all__ = ["FITTED", "NOT_POSITIVE", "NO_DF", "TRUNCATED", "Fit"]
@@ -197,6 +198,17 @@ class Fit:
             f"<Fit {self.route}: {self.status}; unit variance {self.unit_variance:.6g}, "
             f"idiosyncratic variance {self.idiosyncratic_variance:.6g}, ratio {self.ratio:.6g}>"
         )
+
+    def _repr_html_(self) -> str:
+        """Return what is printed, for a notebook: the coefficients as a table, the rest as lines."""
+        rows = [
+            (term, *("-" if np.isnan(value) else f"{value:.6g}" for value in (estimate, error)))
+            for term, estimate, error in zip(self.terms, self.beta, self.standard_errors, strict=True)
+        ]
+        caption, *lines = str(self).split("\n")
+        rest = "\n".join(line.removeprefix("  ") for line in lines[len(rows) + 1 :])
+        header = ("term", "estimate", "standard error")
+        return fragment(table(caption, header, rows, right=(1, 2)), preformatted(rest))
 
     def __str__(self) -> str:
         """Return coefficients, components, conventions that differ from the defaults, notes and certificate as text."""

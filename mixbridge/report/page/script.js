@@ -21,6 +21,7 @@
     const body = table.tBodies[0], rows = [...body.rows], heads = [...table.tHead.rows[0].cells];
     if (rows.length < 2) return;
     heads.forEach((head, column) => {
+      if (head.tagName !== "TH") return;
       const button = document.createElement("button");
       button.type = "button";
       button.append(...head.childNodes);
