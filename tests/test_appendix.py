@@ -261,6 +261,14 @@ def test_unknown_options_are_refused(options, match):
         compose(demo().to_dict(), **options)
 
 
+def test_no_unit_is_named_in_any_format(tmp_path):
+    data = mixbridge.demo.apiaries()
+    data["apiary"] = "secret-" + data["apiary"]
+    study = mixbridge.crosscheck("honey ~ forage + feeding + altitude", data, unit="apiary", period="season")
+    for suffix in (".md", ".tex", ".html"):
+        assert "secret-" not in study.appendix(tmp_path / f"a{suffix}").read_text(encoding="utf-8")
+
+
 def test_other_endings_and_places_that_cannot_be_written_are_refused(tmp_path):
     with pytest.raises(mixbridge.OptionError, match=r"\.md, \.tex, \.html"):
         demo().appendix(tmp_path / "a.docx")

@@ -31,8 +31,8 @@ def model_section(record: Record, words: Words) -> tuple[Block, ...]:
     blocks: list[Block] = [
         Heading("Model"),
         Paragraph(
-            f"{words.model[0].upper()}{words.model[1:]} was fitted for {outcome}, with one {words.effect} per {unit}; i counts "
-            "units and t "
+            f"{words.model[0].upper()}{words.model[1:]} was fitted for {outcome}, with one {words.effect} per "
+            f"{unit}; i counts units and t "
             f"{subject} within them. Fixed part: {record['formula']}."
         ),
         Formula(
