@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from copy import deepcopy
 from dataclasses import dataclass
 from functools import cached_property
 from typing import TYPE_CHECKING, Any, Literal
@@ -162,6 +163,10 @@ class Study(StudyReport):
         Everything in it can be recomputed from these moments. JSON-ready; what is not a finite number is a
         string or None.
         """
+        return deepcopy(self._record)
+
+    @cached_property
+    def _record(self) -> dict[str, Any]:
         from mixbridge.report.record import study_record
 
         return study_record(self)
