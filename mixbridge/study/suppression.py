@@ -60,7 +60,7 @@ def shared_moments(study: Study, threshold: int = 5) -> Shared:
     >>> study = mixbridge.crosscheck("honey ~ forage", mixbridge.demo.apiaries(), unit="apiary")
     >>> shared = mixbridge.shared_moments(study, 5)
     >>> int(shared.study.moments.counts.min())
-    6
+    5
     """
     found = suppress(study.products, threshold)
     rest = from_moments(
