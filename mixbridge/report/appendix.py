@@ -132,6 +132,7 @@ def _page(record: Record, words: Words, chosen_beforehand: bool | None) -> list[
 def _full(
     record: Record, words: Words, chosen_beforehand: bool | None, pictures: tuple[Picture, ...]
 ) -> list[Block]:
+    figures: tuple[Block, ...] = (Heading("Figures"), *pictures) if pictures else ()
     return [
         *sections.model_section(record, words),
         *sections.data_section(record, words),
@@ -146,7 +147,7 @@ def _full(
         *sections.identity_section(record, words),
         *sections.audit_section(record, words),
         *sections.sensitivity_section(record, words),
-        *((Heading("Figures"), *pictures) if pictures else ()),
+        *figures,
     ]
 
 
