@@ -5,7 +5,19 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 
-from benchmarks import arrays, deletions, frames, growth, inference, likelihood, matching, memory, resampling
+from benchmarks import (
+    arrays,
+    deletions,
+    distributed,
+    frames,
+    growth,
+    inference,
+    likelihood,
+    matching,
+    memory,
+    resampling,
+    streaming,
+)
 from benchmarks.profiles import Profile
 from benchmarks.results import Result
 
@@ -36,6 +48,8 @@ PROBLEMS = {
     "early": Problem("How often a general optimiser of REML stops early", matching.early),
     "deletions": Problem("Leave-one-unit-out", deletions.deletions),
     "rehearsal": Problem("Rehearsal of a design", deletions.rehearsal),
+    "streaming": Problem("Rows in chunks from Parquet files", streaming.streaming),
+    "distributed": Problem("Rows on two workers and in a database", distributed.distributed),
     "resampling": Problem("Parametric bootstrap in moment space", resampling.resampling),
 }
 """Add a function that takes a profile and returns a result, and a line here."""

@@ -11,6 +11,8 @@ import pytest
 from mixbridge.errors import DataError, FormulaError, OptionError
 from mixbridge.panel import build_panel
 from mixbridge.panel.streaming import build_streaming_panel
+from mixbridge.panel.streaming_attempts import bytes_per_unit
+from mixbridge.sources.chunk_options import ChunkOptions
 from mixbridge.sources.chunks_opening import open_chunks
 
 pa = pytest.importorskip("pyarrow")
@@ -36,7 +38,8 @@ def split(data, *cuts):
 
 
 def streamed(source, formula="honey ~ forage", **options):
-    return build_streaming_panel(formula, source, unit="hive", **options)
+    chosen = {name: options.pop(name) for name in ("incomplete_rows", "period") if name in options}
+    return build_streaming_panel(formula, source, unit="hive", options=ChunkOptions(**options), **chosen)
 
 
 def test_a_corrupt_row_group_is_named(tmp_path):
@@ -158,10 +161,12 @@ def test_what_needs_all_rows_is_refused(formula, reason):
 
 def test_memory_is_estimated_before_moments_are_taken():
     with pytest.raises(DataError, match=r"moments of 12 units with 6 columns .* memory_limit = 0\.0 MiB"):
-        streamed(split(make(), 30), "honey ~ forage + C(season)", memory_limit=12 * 8 * 32 - 1)
+        streamed(split(make(), 30), "honey ~ forage + C(season)", memory_limit=12 * bytes_per_unit(6) - 1)
     with pytest.raises(DataError, match="read so far have 12 units"):
         streamed(split(make(), 30), memory_limit=100)
-    assert streamed(split(make(), 30), "honey ~ forage + C(season)", memory_limit=12 * 8 * 32).N == 12
+    assert (
+        streamed(split(make(), 30), "honey ~ forage + C(season)", memory_limit=12 * bytes_per_unit(6)).N == 12
+    )
 
 
 def test_repeated_pairs_are_found_across_chunks():
@@ -171,7 +176,7 @@ def test_repeated_pairs_are_found_across_chunks():
         streamed(split(data, 30), period="season")
     ordered = data.sort_values(["hive", "season"])
     with pytest.raises(DataError, match=r"frame 1: \(hive 0, season 0\)"):
-        streamed(split(ordered, 1), period="season", memory_limit=12 * 8 * 16)
+        streamed(split(ordered, 1), period="season", memory_limit=12 * bytes_per_unit(2))
 
 
 def test_rows_that_are_not_sorted_say_so():
@@ -181,7 +186,7 @@ def test_rows_that_are_not_sorted_say_so():
         next(panel.difference_rows(1))
     assert "not looked for" not in panel.period_note
     many = make().assign(season=np.arange(60)[::-1])
-    assert "not looked for" in streamed(split(many, 30), period="season", memory_limit=1920).period_note
+    assert "not looked for" in streamed(split(many, 30), period="season", memory_limit=4000).period_note
     assert "no period given" in streamed(split(make(), 30)).order.reason
 
 
@@ -235,7 +240,7 @@ def test_broken_lines_are_placed(tmp_path):
     lines[45] += ",1,2"
     path.write_text("\n".join(lines))
     with pytest.raises(DataError, match="lines from 42 cannot be read as a table"):
-        streamed(path, chunk_rows=20)
+        streamed(path, rows=20)
 
 
 def test_misspelled_names_and_options():
@@ -243,8 +248,8 @@ def test_misspelled_names_and_options():
         build_streaming_panel("honey ~ forage", split(make(), 30), unit="hve")
     with pytest.raises(FormulaError, match="'forag'"):
         streamed(split(make(), 30), "honey ~ forag")
-    with pytest.raises(OptionError, match="chunk_rows"):
-        streamed(split(make(), 30), chunk_rows=0)
+    with pytest.raises(OptionError, match="rows"):
+        streamed(split(make(), 30), rows=0)
     with pytest.raises(DataError, match="cannot be read in chunks"):
         streamed(3)
     with pytest.raises(DataError, match="one unit"):

@@ -224,7 +224,9 @@ def _largest(bench: Bench) -> str:
     fit, within = bench.primary, bench.study.fit("within")
     table = contrast_terms(bench.curve, fit, within).dropna(subset=["in_se"])
     if table.empty:  # only combinations of slopes are determined within units
-        return f"no single slope has both a within and a {fit.route} value; the test is of combinations of them"
+        return (
+            f"no single slope has both a within and a {fit.route} value; the test is of combinations of them"
+        )
     worst = table.iloc[int(table["in_se"].abs().to_numpy().argmax())]
     return (
         f"largest gap: {worst['term']}, within {worst['within']:.4g} against {fit.route} {worst['gls']:.4g}, "

@@ -28,7 +28,10 @@ class _Standardize:
         """Take a chunk of rows into count, mean and sum of squares."""
         values = np.asarray(x, dtype=np.float64)
         count, mean = len(values), values.mean(axis=0)
-        squares = ((values - mean) ** 2).sum(axis=0)
+        self._merge(count, mean, ((values - mean) ** 2).sum(axis=0))
+
+    def _merge(self, count: int, mean: Any, squares: Any) -> None:
+        """Take in the count, mean and sum of squares of further rows."""
         if self._mean is None or self._squares is None:
             self._count, self._mean, self._squares = count, mean, squares
             return

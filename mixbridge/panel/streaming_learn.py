@@ -2,28 +2,33 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass, field, replace
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import closing
+from dataclasses import dataclass, replace
 from typing import Any, Literal
 
 import numpy as np
 import numpy.typing as npt
-import pandas as pd
 from patsy import EvalFactor, PatsyError
-from patsy.builtins import C
 
 from mixbridge.errors import DataError, FormulaError
 from mixbridge.panel.accounting import Accounting
-from mixbridge.panel.attempt import Reading, _complaint, _infinite, _is_narrow, _Survey
+from mixbridge.panel.attempt import Reading, _infinite
 from mixbridge.panel.build import _MOST_ROUNDS, _check_left
-from mixbridge.panel.categories import _MOST_LEVELS, Coded, code_values
-from mixbridge.panel.columns import extremes
-from mixbridge.panel.factors import Numeric, Plain, Stored, evaluate, used_data
+from mixbridge.panel.categories import Coded
+from mixbridge.panel.factors import Numeric, Stored, evaluate, used_data
+from mixbridge.panel.streaming_book import TooManyUnitsError, _Book, _coded, _Numbers
+from mixbridge.panel.streaming_order import NO_PERIOD, Order
+from mixbridge.panel.streaming_passes import Passes
+from mixbridge.panel.streaming_rows import Gather, OnePass
+from mixbridge.panel.streaming_runs import Runs
 from mixbridge.panel.streaming_values import Distinct
 from mixbridge.panel.streaming_walk import Labels, Plan, Stage, Step, Value, stateful, walk
+from mixbridge.sources.checkpoint import State
 from mixbridge.sources.chunks import ChunkedSource
 
-__all__ = ["Lesson", "Levels", "blank", "filled", "learn_all"]
+FloatArray = npt.NDArray[np.float64]
+__all__ = ["Lesson", "Levels", "TooManyUnitsError", "_Book", "_Numbers", "blank", "filled", "learn_all"]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -52,142 +57,34 @@ class Lesson:
         Width of each numeric factor.
     levels : dict of EvalFactor to Levels
         Each categorical factor.
-    units, periods : Distinct
-        Distinct keys on the rows used.
+    units : Distinct or Runs
+        The units of the rows used: their keys, or their number only.
+    periods : Distinct or None
+        Distinct periods of the rows used.
+    order : Order
+        How the rows were ordered.
     account : Accounting
         What became of every row.
+    rising : bool
+        Whether rows are sorted by unit, keys never falling.
     """
 
     stages: tuple[Stage, ...]
     numeric: dict[EvalFactor, int]
     levels: dict[EvalFactor, Levels]
-    units: Distinct
+    units: Distinct | Runs
     periods: Distinct | None
+    order: Order
     account: Accounting
-
-
-@dataclass(slots=True, eq=False)
-class _Numbers:
-    """Extremes of the columns of a numeric factor, and the first infinite value."""
-
-    reading: Reading
-    width: int
-    least: list[float | int]
-    greatest: list[float | int]
-    infinite: str | None = None
-
-    def add(self, value: Plain | Stored, place: str, m: int) -> None:
-        """Take in the values of a chunk, none of them missing."""
-        if isinstance(value, Plain):
-            low, high = extremes(value.column, value.rows)
-            lows: list[float | int] = [low]
-            highs: list[float | int] = [high]
-        else:
-            block = value.values
-            lows, highs = block.min(axis=0).tolist(), block.max(axis=0).tolist()
-            where = np.flatnonzero(np.isinf(block).any(axis=1))
-            if len(where) and self.infinite is None:
-                self.infinite = f"{int(where[0])} of the {m} used of {place}"
-        if value.width != self.width:
-            raise FormulaError(
-                f"{self.reading.factor.code} yields {value.width} columns in {place} and {self.width} before."
-            )
-        self.least = [min(pair) for pair in zip(self.least, lows, strict=True)]
-        self.greatest = [max(pair) for pair in zip(self.greatest, highs, strict=True)]
-
-    def complaint(self, *, is_outcome: bool) -> DataError | None:
-        """Return what is wrong with the values over all rows used, if anything is."""
-        if self.infinite is not None:
-            return _infinite(self.reading.factor.code, self.infinite)
-        narrow = any(_is_narrow(*pair) for pair in zip(self.least, self.greatest, strict=True))
-        survey = _Survey(np.empty(0, dtype=np.intp), None, min(self.least), max(self.greatest), narrow)
-        return _complaint(self.reading, survey, pd.RangeIndex(0), is_outcome=is_outcome)
-
-
-@dataclass(slots=True, eq=False)
-class _Book:
-    """What one round of passes gathers."""
-
-    plan: Plan
-    most_units: float
-    units: Distinct
-    periods: Distinct | None
-    given: int = 0
-    used: int = 0
-    missing: dict[str, int] = field(default_factory=dict)
-    dropped: dict[tuple[str, str], int] = field(default_factory=dict)
-    bad: dict[str, tuple[int, int]] = field(default_factory=dict)
-    numbers: dict[EvalFactor, _Numbers] = field(default_factory=dict)
-    labels: dict[EvalFactor, tuple[Distinct, Labels]] = field(default_factory=dict)
-    notes: dict[str, str] = field(default_factory=dict)
-
-    def take(self, step: Step) -> None:
-        """Take in one chunk."""
-        self.given += step.account.rows_given
-        self.used += step.used
-        for name, count in step.account.missing:
-            self.missing[name] = self.missing.get(name, 0) + count
-        for cause, name, count in step.account.dropped:
-            self.dropped[cause, name] = self.dropped.get((cause, name), 0) + count
-        for stage, name, count in step.bad:
-            before, so_far = self.bad.get(name, (stage, 0))
-            self.bad[name] = min(stage, before), so_far + count
-        for reading in step.readings:
-            for name, column in reading.columns.items():
-                if column.note is not None:
-                    self.notes.setdefault(name, column.note)
-        if not step.used:
-            return
-        names = self.plan.keys
-        self.units.add(step.key(names[0]), step.place)
-        self.check_units(self.units.settled)
-        if self.periods is not None:
-            self.periods.add(step.key(names[1]), step.place)
-        for reading, value in zip(step.readings, step.values, strict=False):
-            self._value(reading, value, step)
-
-    def check_units(self, units: int) -> None:
-        """Stop before the keys alone fill the memory."""
-        if units > self.most_units:
-            raise DataError(
-                f"The rows read so far have {units:,} units: moments of so many do not fit into memory_limit, "
-                f"which allows about {int(self.most_units):,} with these columns. Raise memory_limit, or check "
-                "that unit= names the grouping column."
-            )
-
-    def _value(self, reading: Reading, value: Value, step: Step) -> None:
-        factor = reading.factor
-        if isinstance(value, Labels):
-            found = self.labels.setdefault(factor, (Distinct(factor.code, whole=False), value))[0]
-            found.add(value.series, step.place)
-            if len(found) > _MOST_LEVELS:
-                _coded(factor, found, value)  # says what is wrong with so many
-        elif factor in self.labels:
-            raise DataError(f"{factor.code} holds categories at first and numbers in {step.place}.")
-        else:
-            blank = _Numbers(reading, value.width, [np.inf] * value.width, [-np.inf] * value.width)
-            self.numbers.setdefault(factor, blank).add(value, step.place, step.used)
-
-    def account(self) -> Accounting:
-        """Return the account of the rows, causes in their order of precedence."""
-        reads = list(self.plan.reads.values())
-        order = [*zip(("missing unit", "missing period"), self.plan.keys, strict=False)]
-        order += [("missing outcome", name) for name in reads[0]]
-        order += [("missing covariate", name) for names in reads[1:] for name in names]
-        dropped = [(*key, self.dropped[key]) for key in dict.fromkeys(order) if key in self.dropped]
-        places = {factor.code: place for place, factor in enumerate(self.plan.reads)}
-        for name in sorted(self.bad, key=lambda name: (self.bad[name][0], places[name])):
-            dropped.append((f"not a number in {name}", name, self.bad[name][1]))
-        missing = {name: self.missing.get(name, 0) for _, name in order}
-        return Accounting(self.given, self.used, tuple(dropped), tuple(missing.items()))
-
-
-def _coded(factor: EvalFactor, values: Distinct, labels: Labels) -> Coded:
-    return code_values(factor.code, C(values.series(), labels.contrast, labels.levels))
+    rising: bool = False
 
 
 def learn_all(
-    plan: Plan, source: ChunkedSource, incomplete_rows: Literal["drop", "refuse"], most_units: float
+    plan: Plan,
+    passes: Passes,
+    incomplete_rows: Literal["drop", "refuse"],
+    begin: Callable[[], _Book],
+    gather: Gather | None = None,
 ) -> Lesson:
     """Pass over the rows until every factor is learned and yields a number on every row left.
 
@@ -197,29 +94,39 @@ def learn_all(
     Parameters
     ----------
     plan : Plan
-    source : ChunkedSource
+    passes : Passes
     incomplete_rows : {"drop", "refuse"}
-    most_units : float
-        Number of units beyond which to stop.
+    begin : callable
+        Returns the book in which a pass is entered.
+    gather : Gather, optional
+        Takes moments in the same pass, where the formula allows.
     """
     stages: list[Stage] = []
     for _ in range(_MOST_ROUNDS):
-        stage, complaint = _learn_states(plan, source, stages)
+        stage, complaint = _learn_states(plan, passes, stages)
         stages.append(stage)
         if stage.spoiled:
-            settled = complaint is not None and not any(s.unsettled for s in walk(plan, source, stages))
+            settled = complaint is not None and not any(
+                step.unsettled for step in _steps(plan, passes, stages, "values that are not numbers")
+            )
             if complaint is not None and settled:
                 raise complaint
             continue
-        periods = Distinct(plan.keys[1], whole=False) if len(plan.keys) > 1 else None
-        book = _Book(plan, most_units, Distinct(plan.keys[0], whole=True), periods)
+        book = begin()
         unsettled = False
-        for step in walk(plan, source, stages):
-            book.take(step)
-            unsettled |= step.unsettled
+        one_pass = OnePass(plan) if gather is not None and not stage.states and len(stages) == 1 else None
+        if one_pass is None or gather is None:
+            walked = passes.over(plan, stages, _alone, "account of rows, levels and units")
+        else:
+            walked = passes.saved_over(plan, stages, one_pass, one_pass, _First(book, gather, one_pass))
+        with closing(walked) as rows:
+            for step, z in rows:
+                codes = book.take(step)
+                unsettled |= step.unsettled
+                if z is not None and gather is not None:
+                    gather.add(codes, z)
         if not book.given:
             raise DataError("The data have no rows.")
-        book.check_units(len(book.units))
         account = book.account()
         _check_left(account, incomplete_rows)
         if not (stage.states and unsettled):
@@ -230,8 +137,41 @@ def learn_all(
     )
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class _First:
+    """What is saved of the first pass."""
+
+    book: _Book
+    gather: Gather
+    one_pass: OnePass
+
+    @property
+    def stage(self) -> str:
+        return "first-sorted" if isinstance(self.book.units, Runs) else "first-units"
+
+    def state(self) -> State | None:
+        if not self.one_pass.possible:
+            return None
+        return {"book": self.book.state(), "gather": self.gather.state()}
+
+    def restore(self, state: State) -> int:
+        self.gather.restore(state["gather"])
+        return self.book.restore(state["book"])
+
+
+def _alone(step: Step) -> tuple[Step, FloatArray | None]:
+    return step, None
+
+
+def _steps(plan: Plan, source: ChunkedSource | Passes, stages: Sequence[Stage], what: str) -> Iterator[Step]:
+    """Walk over the chunks of a source, which may know how it is to be passed over."""
+    if isinstance(source, Passes):
+        return source.over(plan, stages, lambda step: step, what)
+    return walk(plan, source, stages)
+
+
 def _learn_states(
-    plan: Plan, source: ChunkedSource, stages: Sequence[Stage]
+    plan: Plan, source: ChunkedSource | Passes, stages: Sequence[Stage]
 ) -> tuple[Stage, DataError | None]:
     """Let the stateful transforms learn from the rows that the stages so far have left."""
     if not _any_stateful(plan):
@@ -239,7 +179,7 @@ def _learn_states(
     states: dict[EvalFactor, dict[str, Any]] = {}
     spoiled: set[EvalFactor] = set()
     complaint: DataError | None = None
-    for step in walk(plan, source, stages):
+    for step in _steps(plan, source, stages, "what transforms learn"):
         m = step.used
         for reading in step.readings if m else ():
             arguments = stateful(reading, plan.environment)
@@ -313,7 +253,13 @@ def _lesson(plan: Plan, book: _Book, stages: tuple[Stage, ...], account: Account
             notes += levels[factor].coded.notes
     numeric = {factor: numbers.width for factor, numbers in book.numbers.items()}
     account = replace(account, notes=tuple(notes))
-    return Lesson(stages, numeric, levels, book.units, book.periods, account)
+    watch = book.watch
+    periods, order = (None, Order(None, NO_PERIOD)) if watch is None else (watch.periods, watch.finish())
+    for values in (book.units, periods, *(each.values for each in levels.values())):
+        if isinstance(values, Distinct):
+            values.settle()
+    rising = book.rising and (isinstance(book.units, Runs) or book.units.rising)
+    return Lesson(stages, numeric, levels, book.units, periods, order, account, rising)
 
 
 def blank(lesson: Lesson, factor: EvalFactor) -> Numeric | Coded:

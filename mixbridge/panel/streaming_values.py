@@ -8,12 +8,14 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
-from mixbridge.errors import DataError
+from mixbridge.errors import DataError, OptionError
 from mixbridge.panel.keys import whole_numbers
+from mixbridge.sources.checkpoint import State, restored_series, series_state
 
-__all__ = ["Distinct"]
+__all__ = ["Distinct", "other_sort", "sort_of"]
 
-_PENDING = 1 << 16
+_SPAN = 1 << 22
+"""Integers that lie within this, or within eight times their number, are looked up in a table."""
 _LARGEST = np.iinfo(np.int64).max
 
 
@@ -33,27 +35,46 @@ class Distinct:
     def __init__(self, name: str, *, whole: bool) -> None:
         self.name = name
         self._whole = whole
-        self._values: pd.Series[Any] | None = None
-        self._pending: list[pd.Series[Any]] = []
-        self._waiting = 0
+        self._parts: list[pd.Series[Any]] = []
+        self._count = 0
+        self._sort: str | None = None
         self._dtype: Any = None
         self._categories: pd.Index | None = None
         self._ordered = False
         self._all_categories = True
-        self._index: pd.Index | None = None
-        self._table: tuple[int, npt.NDArray[np.intp]] | None = None
+        self._levels: list[tuple[int, pd.Index]] = []
+        self._table: tuple[int, npt.NDArray[np.int32]] | None = None
 
     def __len__(self) -> int:
         """Return the number of distinct values."""
-        return len(self._settled())
+        return self._count
+
+    def __getstate__(self) -> dict[str, Any]:
+        """Leave out what look-ups are made with."""
+        values = [self._settled()] if self._count else []
+        return {**vars(self), "_parts": values, "_levels": [], "_table": None}
+
+    def __setstate__(self, state: dict[str, Any]) -> None:
+        """Make it anew."""
+        vars(self).update(state)
+        if self._parts:
+            self._levels = [(0, pd.Index(self._parts[0]))]
+
+    def blank(self) -> Distinct:
+        """Return one that has seen nothing."""
+        return Distinct(self.name, whole=self._whole)
 
     @property
-    def settled(self) -> int:
-        """At least how many values are distinct, without work."""
-        return 0 if self._values is None else len(self._values)
+    def rising(self) -> bool:
+        """Whether each value is greater than the one that appeared before it."""
+        return bool(self._settled().is_monotonic_increasing)
 
     def add(self, series: pd.Series[Any], place: str) -> None:
-        """Take in the values of a chunk.
+        """Take in the values of a chunk; as `enter`, whose places are not needed."""
+        self.enter(series, place)
+
+    def enter(self, series: pd.Series[Any], place: str) -> npt.NDArray[np.intp]:
+        """Take in the values of a chunk, and return the place of each among the distinct ones.
 
         Raises
         ------
@@ -61,27 +82,49 @@ class Distinct:
             If their type does not go with the one of the chunks before.
         """
         if not len(series):
-            return
+            return np.empty(0, dtype=np.intp)
         self._note_categories(series)
-        plain = self._plain(series)
-        seen = None if self._values is None else self._places(plain, self._values) >= 0
-        fresh = plain.drop_duplicates() if seen is None else plain[~seen].drop_duplicates()
+        plain = self.plain(series)
         dtype = "category" if isinstance(series.dtype, pd.CategoricalDtype) else series.dtype
-        if self._values is None and not self._pending:
-            self._dtype = dtype
+        sort = sort_of(plain)
+        if self._sort is None:
+            self._sort, self._dtype = sort, dtype
         else:
-            known = self._values if self._values is not None else self._pending[0]
-            if _sort_of(known) != _sort_of(plain):
-                raise DataError(
-                    f"In {place} the column {self.name!r} holds {_sort_of(plain)} ({series.dtype}); before, it "
-                    f"held {_sort_of(known)}. Give the column one type in all parts of the data."
-                )
+            if sort != self._sort:
+                raise other_sort(self.name, place, sort, series.dtype, self._sort)
             self._dtype = dtype if dtype == self._dtype else None
-        if len(fresh):
-            self._pending.append(fresh)
-            self._waiting += len(fresh)
-        if self._waiting > max(_PENDING, self.settled):
-            self._settled()
+        places = self._look_up(plain)
+        new = np.flatnonzero(places < 0)
+        if len(new):
+            unknown = plain.iloc[new]
+            codes, fresh = pd.factorize(unknown)
+            places[new] = self._count + codes
+            self._learn(pd.Series(fresh))
+        return places
+
+    def state(self) -> State:
+        """Return what was seen, to be saved.
+
+        Raises
+        ------
+        OptionError
+            If the values cannot be saved.
+        """
+        if self._categories is not None:
+            raise OptionError(
+                f"A checkpoint does not hold the categories of {self.name!r}. Leave checkpoint out, or store the "
+                "column as text or numbers."
+            )
+        dtype = None if self._dtype is None else str(self._dtype)
+        values = series_state(self._settled()) if self._count else None
+        return {"sort": self._sort, "dtype": dtype, "values": values or {}}
+
+    def restore(self, state: State) -> None:
+        """Go on from a state."""
+        self._sort, self._all_categories = state["sort"], False
+        self._dtype = None if state["dtype"] is None else pd.api.types.pandas_dtype(state["dtype"])
+        if state["values"]:
+            self._learn(restored_series(state["values"]))
 
     def series(self) -> pd.Series[Any]:
         """Return the distinct values in the type they came in, where all chunks had the same."""
@@ -100,48 +143,104 @@ class Distinct:
             places = np.full(len(series), -1, dtype=np.intp)
             places[~gaps] = self.find(series[~gaps])
             return places
-        return self._places(self._plain(series), self._settled())
+        return self._look_up(self.plain(series))
 
-    def _places(self, values: pd.Series[Any], known: pd.Series[Any]) -> npt.NDArray[np.intp]:
-        """Return the place of each value among known ones."""
-        whole = values.dtype == np.int64 and known.dtype == np.int64
-        if self._index is None and self._table is None:
-            self._prepare(known)
-        if self._table is not None and whole:
+    def settle(self) -> None:
+        """Prepare for look-ups from several threads, when no value will be added any more."""
+        values = self._settled()
+        if self._levels:
+            self._levels = [(0, pd.Index(values))]
+            self._levels[0][1].get_indexer(self._levels[0][1][:1])
+
+    def _look_up(self, values: pd.Series[Any]) -> npt.NDArray[np.intp]:
+        """Return the place of each value, -1 for one that is not known."""
+        if self._table is not None:
             least, table = self._table
-            offset = values.to_numpy() - least
-            inside = (offset >= 0) & (offset < len(table))
-            return np.where(inside, table[np.where(inside, offset, 0)], -1)
-        if self._index is None:
-            self._index = pd.Index(known)
-        if self._index.dtype == object and values.dtype != object:
-            values = values.astype(object)
-        return np.asarray(self._index.get_indexer(pd.Index(values))).astype(np.intp, copy=False)
+            if values.dtype == np.int64:
+                # a difference that wraps around is beyond the table too
+                offset = (values.to_numpy() - least).view(np.uint64)
+                inside = offset < np.uint64(len(table))
+                if inside.all():
+                    return np.take(table, offset.view(np.int64)).astype(np.intp) - 1
+                return np.where(
+                    inside, table[np.where(inside, offset, 0).astype(np.int64)].astype(np.intp) - 1, -1
+                )
+            self._leave_table()
+        places = np.full(len(values), -1, dtype=np.intp)
+        for start, level in self._levels:
+            new = np.flatnonzero(places < 0)
+            if not len(new):
+                break
+            sought = values if len(new) == len(values) else values.iloc[new]
+            if level.dtype == object and sought.dtype != object:
+                sought = sought.astype(object)
+            found = np.asarray(level.get_indexer(pd.Index(sought)))
+            places[new] = np.where(found < 0, -1, found + start)
+        return places
 
-    def _prepare(self, known: pd.Series[Any]) -> None:
-        """Make a table of integers that lie close together, else an index."""
-        if known.dtype == np.int64:
-            values = known.to_numpy()
-            least, greatest = int(values.min()), int(values.max())
-            if greatest - least < 4 * len(values) + 1024:
-                table = np.full(greatest - least + 1, -1, dtype=np.intp)
-                table[values - least] = np.arange(len(values))
-                self._table = least, table
-                return
-        self._index = pd.Index(known)
+    def _learn(self, fresh: pd.Series[Any]) -> None:
+        """Append values that are not known yet."""
+        start = self._count
+        self._parts.append(fresh)
+        self._count += len(fresh)
+        if fresh.dtype == np.int64 and not self._levels and self._enter_table(fresh.to_numpy(), start):
+            return
+        if self._table is not None:
+            self._leave_table()
+            return
+        level = pd.Index(fresh)
+        # few levels, each at least twice as long as the next: every value is hashed a few times only
+        while self._levels and len(self._levels[-1][1]) < 2 * len(level):
+            start, before = self._levels.pop()
+            if (before.dtype == object) != (level.dtype == object):
+                before, level = before.astype(object), level.astype(object)
+            if level.dtype == object:  # appended as they are: pandas would make floats of wide integers
+                both = np.concatenate([before.to_numpy(), level.to_numpy()])
+                level = pd.Index(both, dtype=object, tupleize_cols=False)
+            else:
+                level = before.append(level)
+        self._levels.append((start, level))
+
+    def _enter_table(self, fresh: npt.NDArray[np.int64], start: int) -> bool:
+        """Enter integers that lie close together in a table; return whether they do."""
+        least, greatest = int(fresh.min()), int(fresh.max())
+        old = self._table
+        if old is not None:
+            least, greatest = min(least, old[0]), max(greatest, old[0] + len(old[1]) - 1)
+        span = greatest - least + 1
+        if span > max(_SPAN, 8 * self._count) or self._count >= np.iinfo(np.int32).max:
+            return False
+        table: npt.NDArray[np.int32]
+        if old is not None and span <= len(old[1]):
+            least, table = old
+        else:
+            # zeros are not touched before they are used, so that room to grow costs nothing
+            size = 2 * span if old is None else max(span, 2 * len(old[1]))
+            table = np.zeros(size, dtype=np.int32)
+            if (old is not None and least < old[0]) or least + size - 1 > _LARGEST:
+                least = max(greatest - size + 1, -_LARGEST - 1)
+            if old is not None:
+                table[old[0] - least : old[0] - least + len(old[1])] = old[1]
+            self._table = least, table
+        table[fresh - least] = np.arange(start + 1, start + 1 + len(fresh))
+        return True
+
+    def _leave_table(self) -> None:
+        self._table = None
+        self._levels = [(0, pd.Index(self._settled()))]
 
     def _settled(self) -> pd.Series[Any]:
-        """Merge what is pending into the distinct values."""
-        if self._pending:
-            parts = ([] if self._values is None else [self._values]) + self._pending
+        """Return the distinct values as one series."""
+        if not self._parts:
+            return pd.Series([], dtype=object)
+        if len(self._parts) > 1:
+            parts = self._parts
             if any(part.dtype == object for part in parts):
                 parts = [part.astype(object) for part in parts]
-            self._values = pd.concat(parts, ignore_index=True).drop_duplicates(ignore_index=True)
-            self._pending, self._waiting = [], 0
-            self._index, self._table = None, None
-        return self._values if self._values is not None else pd.Series([], dtype=object)
+            self._parts = [pd.concat(parts, ignore_index=True)]
+        return self._parts[0]
 
-    def _plain(self, series: pd.Series[Any]) -> pd.Series[Any]:
+    def plain(self, series: pd.Series[Any]) -> pd.Series[Any]:
         """Return values whose type does not depend on what else is in the chunk."""
         dtype = series.dtype
         if isinstance(dtype, pd.CategoricalDtype):
@@ -157,6 +256,8 @@ class Distinct:
         if pd.api.types.is_integer_dtype(dtype):
             return series.astype(np.int64)
         return series
+
+    _plain = plain
 
     def _whole_floats(self) -> bool:
         return self._whole and pd.api.types.is_float_dtype(self._dtype)
@@ -179,7 +280,15 @@ class Distinct:
             self._categories = self._categories.append(new)
 
 
-def _sort_of(series: pd.Series[Any]) -> str:
+def other_sort(name: str, place: str, sort: str, dtype: object, before: str) -> DataError:
+    """Make the error for keys of another kind than before."""
+    return DataError(
+        f"In {place} the column {name!r} holds {sort} ({dtype}); before, it held {before}. Give the column one "
+        "type in all parts of the data."
+    )
+
+
+def sort_of(series: pd.Series[Any]) -> str:
     """Say in a word what a column of a chunk holds."""
     dtype = series.dtype
     if pd.api.types.is_bool_dtype(dtype):
@@ -190,3 +299,6 @@ def _sort_of(series: pd.Series[Any]) -> str:
         kind = pd.api.types.infer_dtype(series, skipna=True)
         return "numbers" if kind in ("integer", "floating", "decimal", "mixed-integer-float") else "text"
     return "dates or times"
+
+
+_sort_of = sort_of

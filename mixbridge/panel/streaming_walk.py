@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
@@ -17,7 +18,7 @@ from mixbridge.panel.accounting import Accounting
 from mixbridge.panel.attempt import Reading, refuse_infinite
 from mixbridge.panel.build import _check_outcome, _complete_rows
 from mixbridge.panel.categories import is_categorical
-from mixbridge.panel.columns import Column, Rows, read_column
+from mixbridge.panel.columns import Column, Rows, extremes, read_column
 from mixbridge.panel.factors import (
     Plain,
     Stored,
@@ -31,7 +32,7 @@ from mixbridge.panel.formula import Formula, called_names
 from mixbridge.panel.readings import read_factors
 from mixbridge.sources.chunks import Chunk, ChunkedSource
 
-__all__ = ["Labels", "Plan", "Stage", "Step", "Value", "stateful", "walk"]
+__all__ = ["Labels", "Plan", "Stage", "Step", "Value", "stateful", "step_of", "walk"]
 
 _WHOLE_DATA = ("bs", "cr", "cc", "te")
 
@@ -46,6 +47,7 @@ class Labels:
 
 
 Value = Plain | Stored | Labels
+Span = tuple[float | int, float | int]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -66,6 +68,9 @@ class Plan:
         Whether expressions outside the grammar could be accepted.
     kinds : dict
         What each column holds, with the place where that was first seen; filled by the first walk.
+    forms : dict
+        By what the columns hold: of each factor the column that it is, whether that is coded, and whether it works
+        row by row.
     """
 
     formula: Formula
@@ -74,6 +79,7 @@ class Plan:
     environment: EvalEnvironment
     trusted: bool
     kinds: dict[str, tuple[str, str]] = field(default_factory=dict)
+    forms: dict[tuple[str, ...], list[tuple[str | None, bool, bool]]] = field(default_factory=dict)
 
     @property
     def wanted(self) -> list[str]:
@@ -115,6 +121,8 @@ class Step:
         Rows dropped because a factor is not a number: stage, factor, and how many.
     unsettled : bool
         Whether the last stage dropped a row.
+    spans : mapping
+        Least and greatest value of columns of numbers, where no stage dropped a row.
     """
 
     place: str
@@ -125,6 +133,7 @@ class Step:
     account: Accounting
     bad: tuple[tuple[int, str, int], ...] = ()
     unsettled: bool = False
+    spans: Mapping[str, Span | None] = field(default_factory=dict)
 
     @property
     def used(self) -> int:
@@ -149,17 +158,21 @@ def walk(plan: Plan, source: ChunkedSource, stages: Sequence[Stage]) -> Iterator
     """
     for chunk in source.chunks(plan.wanted, plan.keys):
         if len(chunk.frame):
-            yield _step(plan, chunk, stages)
+            yield step_of(plan, chunk, stages)
 
 
-def _step(plan: Plan, chunk: Chunk, stages: Sequence[Stage]) -> Step:
+def step_of(plan: Plan, chunk: Chunk, stages: Sequence[Stage]) -> Step:
+    """Read one chunk that has rows; after the first one with rows used, chunks do not depend on each other."""
     frame = chunk.frame
     if not isinstance(frame.index, pd.RangeIndex) or frame.index.start:
         frame = frame.reset_index(drop=True)
-    try:
-        columns = {name: read_column(name, frame[name]) for names in plan.reads.values() for name in names}
-    except DataError as error:
-        raise DataError(f"{chunk.place}: {error}") from error
+    columns: dict[str, Column] = {}
+    spans: dict[str, Span | None] = {}
+    for name in (name for names in plan.reads.values() for name in names):
+        try:
+            columns[name], spans[name] = _read(name, frame[name])
+        except DataError as error:
+            raise DataError(f"{chunk.place}: {error}") from error
     outline = [
         Reading(factor, {name: columns[name] for name in names}, None, False, True)
         for factor, names in plan.reads.items()
@@ -168,13 +181,10 @@ def _step(plan: Plan, chunk: Chunk, stages: Sequence[Stage]) -> Step:
     if not account.rows_used:
         return Step(chunk.place, frame, rows, [], [], account)
     _same_kinds(plan, columns, chunk.place)
-    labels = _labels(columns, len(frame), chunk.place)
-    for column in columns.values():
-        refuse_infinite(column, rows, labels if rows is None else labels[rows])
-    readings = read_factors(plan.reads, columns, plan.environment, trusted=plan.trusted)
-    _check_outcome(readings[0])
-    for reading in readings:
-        _refuse_whole(reading)
+    for name, column in columns.items():
+        known = spans[name] if rows is None else None
+        spans[name] = _finite(column, rows, chunk.place, known or _span(column, rows))
+    readings = _readings(plan, columns)
     values: list[Value] = []
     bad: list[tuple[int, str, int]] = []
     stale = False
@@ -189,16 +199,49 @@ def _step(plan: Plan, chunk: Chunk, stages: Sequence[Stage]) -> Step:
         values = []
         if left:
             values, _, _ = _at_stage(plan, readings, rows, len(frame), stages[-1])
-    return Step(chunk.place, frame, rows, readings, values, account, tuple(bad), stale)
+    spans = {} if bad else spans
+    return Step(chunk.place, frame, rows, readings, values, account, tuple(bad), stale, spans)
 
 
-def _labels(columns: Mapping[str, Column], rows: int, place: str) -> pd.Index:
-    """Return labels of rows for messages; with the place of the chunk where there is something to report."""
-    for column in columns.values():
-        numbers = column.numbers
-        if numbers is not None and numbers.dtype.kind == "f" and np.isinf(numbers).any():
-            return pd.Index([f"{i} of {place}" for i in range(rows)], dtype=object)
-    return pd.RangeIndex(rows)
+def _readings(plan: Plan, columns: Mapping[str, Column]) -> list[Reading]:
+    """Decide how factors are read; the decision depends on the kinds of the columns only, and is kept."""
+    kinds = tuple(column.kind for column in columns.values())
+    forms = plan.forms.get(kinds)
+    if forms is None:
+        readings = read_factors(plan.reads, columns, plan.environment, trusted=plan.trusted)
+        _check_outcome(readings[0])
+        for reading in readings:
+            _refuse_whole(reading)
+        plan.forms[kinds] = [(reading.single, reading.coded, reading.by_row) for reading in readings]
+        return readings
+    return [
+        Reading(factor, {name: columns[name] for name in names}, *form)
+        for (factor, names), form in zip(plan.reads.items(), forms, strict=True)
+    ]
+
+
+def _read(name: str, series: pd.Series[Any]) -> tuple[Column, Span | None]:
+    """Find out what a column holds, and its extremes where that is one look at plain doubles."""
+    if series.dtype != np.float64 or not len(series):
+        return read_column(name, series), None
+    numbers = series.to_numpy()
+    span = numbers.min().item(), numbers.max().item()
+    if math.isnan(span[0]):
+        return read_column(name, series), None
+    return Column(name, "number", series, numbers, None), span
+
+
+def _span(column: Column, rows: Rows) -> Span | None:
+    return None if column.numbers is None else extremes(column, rows)
+
+
+def _finite(column: Column, rows: Rows, place: str, span: Span | None) -> Span | None:
+    """Return the extremes of a column; refuse an infinite value, and say where it is."""
+    numbers = column.numbers
+    if numbers is not None and span is not None and not all(map(math.isfinite, span)):
+        labels = pd.Index([f"{i} of {place}" for i in range(len(numbers))], dtype=object)
+        refuse_infinite(column, rows, labels if rows is None else labels[rows])
+    return span
 
 
 def _same_kinds(plan: Plan, columns: Mapping[str, Column], place: str) -> None:

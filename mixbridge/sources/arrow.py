@@ -51,6 +51,8 @@ def to_pandas(table: Any) -> pd.DataFrame:
             )
             nullable = pd.api.types.pandas_dtype(title)
             columns[name] = column.to_pandas(types_mapper={kind: nullable}.get)
+        elif not column.null_count and (pa.types.is_float64(kind) or pa.types.is_int64(kind)):
+            columns[name] = column.to_numpy()  # the same as below, without making a series of it
         elif pa.types.is_decimal(kind):
             columns[name] = column.to_pandas() if kind.scale <= 0 else column.cast(pa.float64()).to_pandas()
         else:

@@ -4,11 +4,12 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 from mixbridge.errors import DataError
 from mixbridge.sources.arrow import import_pyarrow, to_pandas
-from mixbridge.sources.chunks import CHUNK_ROWS, Chunk, missing_columns
+from mixbridge.sources.chunks import CHUNK_ROWS, Chunk, identity_of_files, missing_columns
 
 __all__ = ["DatasetChunks"]
 
@@ -30,6 +31,17 @@ class DatasetChunks:
     dataset: Any
     rows: int = CHUNK_ROWS
     note: str | None = None
+
+    @property
+    def anywhere(self) -> bool:
+        """Fragments may be read in any thread."""
+        return True
+
+    @property
+    def identity(self) -> str | None:
+        """Names, sizes and times of the files, where the dataset is made of files on this machine."""
+        paths = [Path(file) for file in getattr(self.dataset, "files", [])]
+        return identity_of_files(paths) if paths and all(path.is_file() for path in paths) else None
 
     @property
     def names(self) -> tuple[object, ...]:

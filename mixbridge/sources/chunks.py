@@ -5,13 +5,24 @@ from __future__ import annotations
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass
 from itertools import islice
+from pathlib import Path
 from typing import Protocol, runtime_checkable
 
 import pandas as pd
 
 from mixbridge.errors import DataError
 
-__all__ = ["CHUNK_ROWS", "Chunk", "ChunkedSource", "FrameChunks", "missing_columns"]
+__all__ = [
+    "CHUNK_ROWS",
+    "Chunk",
+    "ChunkedSource",
+    "FrameChunks",
+    "drawn_anywhere",
+    "identity_of",
+    "identity_of_files",
+    "missing_columns",
+    "rows_in",
+]
 
 CHUNK_ROWS = 131072
 """Rows of a chunk unless stated."""
@@ -59,6 +70,29 @@ class ChunkedSource(Protocol):
             become one.
         """
         ...
+
+
+def drawn_anywhere(source: ChunkedSource) -> bool:
+    """Whether chunks may be drawn in another thread than the caller's: a source says so by `anywhere`."""
+    return bool(getattr(source, "anywhere", False))
+
+
+def rows_in(source: ChunkedSource) -> int | None:
+    """Return the number of all rows, where a source knows it without reading them: it has `rows_total` then."""
+    total: int | None = getattr(source, "rows_total", None)
+    return total
+
+
+def identity_of(source: ChunkedSource) -> str | None:
+    """Return what changes when the rows do, where a source knows: it has `identity` then."""
+    identity: str | None = getattr(source, "identity", None)
+    return identity
+
+
+def identity_of_files(paths: Sequence[Path]) -> str:
+    """Return names, sizes and times of last change of files as text."""
+    found = [(str(path), path.stat()) for path in paths]
+    return "\n".join(f"{name} {stat.st_size} {stat.st_mtime_ns}" for name, stat in found)
 
 
 def missing_columns(wanted: Sequence[str], present: Sequence[object], place: str) -> None:

@@ -33,7 +33,17 @@ class SpooledChunks:
 
     def __init__(self, file: ParquetChunks, folder: Path) -> None:
         self._file = file
-        self._remove = weakref.finalize(self, shutil.rmtree, folder, ignore_errors=True)
+        self.remove = weakref.finalize(self, shutil.rmtree, folder, ignore_errors=True)
+
+    @property
+    def anywhere(self) -> bool:
+        """The file may be read in any thread."""
+        return True
+
+    @property
+    def rows_total(self) -> int | None:
+        """Number of rows."""
+        return self._file.rows_total
 
     @property
     def names(self) -> tuple[object, ...]:

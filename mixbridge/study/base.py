@@ -14,6 +14,7 @@ from mixbridge.errors import DataError, IdentificationError, OptionError
 from mixbridge.moments import Block, Moments, OpenMoments
 from mixbridge.panel import Panel
 from mixbridge.panel.absent import Apart, RowlessPanel
+from mixbridge.panel.parted_panel import PartedPanel
 from mixbridge.ratio import Curve, curve_of
 from mixbridge.routes import LEDGER_ROUTES, Fit, fit_route
 from mixbridge.study.differences import Gather, differences_for
@@ -54,7 +55,13 @@ class StudyBase:
         if self.unit_moments is None:
             raise DataError(
                 "this question needs the counts and means of every unit, which were not kept: the study has its "
-                "closed moments only. Ask it of a study whose units fit into memory."
+                "closed moments only. "
+                + (
+                    "Pass chunks=True to read the partitions one after the other in this process."
+                    if isinstance(self.panel, PartedPanel)
+                    else "Ask it of a study whose units fit into memory; of rows sorted by unit and read in chunks "
+                    "they are kept with chunks=ChunkOptions(unit_records=True)."
+                )
             )
         return self.unit_moments
 

@@ -3,15 +3,18 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import Literal
 
 from mixbridge.errors import OptionError
-from mixbridge.moments import collect
+from mixbridge.moments import OpenMoments, collect
 from mixbridge.panel import Panel, build_panel
-from mixbridge.panel.streaming import build_streaming_panel
+from mixbridge.panel.coding import coding_of
 from mixbridge.routes import LEDGER_ROUTES, named_route
 from mixbridge.sources.chunk_options import ChunkOptions, comes_in_chunks
+from mixbridge.study.elsewhere import Elsewhere, from_elsewhere
 from mixbridge.study.record import Study
+from mixbridge.study.streamed import stream
 
 __all__ = ["crosscheck"]
 
@@ -38,7 +41,8 @@ def crosscheck(
         part of it.
     data : DataFrame, object with an Arrow stream, path, or source of chunks
         One row per unit and period. Beyond memory: a folder of Parquet files, a large Parquet or text file, an
-        Arrow dataset or reader, an iterable of frames, a function that returns one.
+        Arrow dataset or reader, an iterable of frames, a function that returns one; a Dask DataFrame and a DuckDB
+        relation are worked on where they are, on the workers and by the database.
     unit : str
         Column of the grouping factor (apiary, firm, school, patient).
     period : str, optional
@@ -56,7 +60,8 @@ def crosscheck(
         False restricts the formula to column names and a fixed list of transforms.
     chunks : bool or ChunkOptions, optional
         Whether rows are read in chunks and never held together, and how. Unless given, what is not one table is,
-        and so are files beyond `mixbridge.sources.chunk_options.IN_ONE_PIECE`. The results are the same.
+        and so are files beyond `mixbridge.sources.chunk_options.IN_ONE_PIECE`. True brings rows of a Dask DataFrame
+        or a DuckDB relation into this process, chunk by chunk. The results are the same.
 
     Returns
     -------
@@ -82,26 +87,41 @@ def crosscheck(
     chosen = tuple(dict.fromkeys(LEDGER_ROUTES if routes is None else routes))
     for key in (*chosen, primary):
         named_route(key)
-    reading = comes_in_chunks(data) if chunks is None else chunks
     panel: Panel
-    if reading is False:
+    opened: OpenMoments | None
+    data = from_elsewhere(
+        formula,
+        data,
+        chunks,
+        unit=unit,
+        period=period,
+        incomplete_rows=incomplete_rows,
+        trusted=trusted,
+    )
+    reading = comes_in_chunks(data) if chunks is None else chunks
+    if isinstance(data, Elsewhere):
+        panel, opened, moments = data.panel, data.opened, data.moments
+    elif reading is False:
         panel = build_panel(
             formula, data, unit=unit, period=period, incomplete_rows=incomplete_rows, trusted=trusted, env=1
         )
+        opened, moments = collect(panel.blocks_with_codes, (*panel.names, panel.outcome), panel.unit_keys)
     else:
-        options = reading if isinstance(reading, ChunkOptions) else ChunkOptions()
-        panel = build_streaming_panel(
+        panel, opened, moments = stream(
             formula,
             data,
             unit=unit,
             period=period,
             incomplete_rows=incomplete_rows,
             trusted=trusted,
-            env=1,
-            chunk_rows=options.rows,
-            memory_limit=options.memory_limit,
+            chunks=reading,
         )
-    opened, moments = collect(panel.blocks_with_codes, (*panel.names, panel.outcome), panel.unit_keys)
+    coding = coding_of(panel)
+    if coding is not None:
+        opened, moments = (
+            None if opened is None else replace(opened, coding=coding),
+            replace(moments, coding=coding),
+        )
     study = Study(
         panel, opened, moments, primary, chosen if primary in chosen else (*chosen, primary), confidence
     )

@@ -9,6 +9,7 @@ import numpy as np
 from mixbridge.moments.factors import factor_from_rows, stack_factors
 from mixbridge.panel import Panel
 from mixbridge.panel.absent import RowlessPanel
+from mixbridge.panel.pushed import PushedPanel
 from mixbridge.panel.streaming import StreamedPanel
 from mixbridge.panel.widened import WidenedPanel
 from mixbridge.routes import Differences, differences_of
@@ -38,7 +39,7 @@ def differences_for(panel: Panel) -> Gather | str:
     streamed = panel.given if isinstance(panel, WidenedPanel) else panel
     while isinstance(streamed, WidenedPanel):
         streamed = streamed.given
-    if isinstance(streamed, StreamedPanel):
+    if isinstance(streamed, StreamedPanel | PushedPanel):
         return _streamed(streamed, panel)
     ordinals = panel.period_ordinals
     if ordinals is None:
@@ -51,7 +52,7 @@ def differences_for(panel: Panel) -> Gather | str:
     return gather
 
 
-def _streamed(source: StreamedPanel, panel: Panel) -> Gather | str:
+def _streamed(source: StreamedPanel | PushedPanel, panel: Panel) -> Gather | str:
     if source.order.reason is not None:
         return source.order.reason
     jumps = source.order.jumps
