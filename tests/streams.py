@@ -4,11 +4,13 @@ import itertools
 
 import numpy as np
 import pandas as pd
-import pyarrow as pa
-import pyarrow.dataset as ds
-import pyarrow.parquet as pq
+import pytest
 
 from mixbridge.sources import read_table
+
+pa = pytest.importorskip("pyarrow")
+pq = pytest.importorskip("pyarrow.parquet")
+ds = pytest.importorskip("pyarrow.dataset")
 
 KINDS = [
     "parquet",

@@ -1,63 +1,46 @@
-"""Moments as files, merged over sites, and without small size classes."""
+"""Moments as files: exact, and refused where they are not what was written."""
 
 import json
-from itertools import pairwise
+import re
+import sys
+from dataclasses import replace
+from datetime import date, timedelta
+from pathlib import Path
 
 import numpy as np
 import pandas as pd
 import pytest
-from hypothesis import given, settings
-from hypothesis import strategies as st
+from moment_records import records_of, rows_of
 
 import mixbridge
-from mixbridge.moments import OpenMoments, close, collect
-from mixbridge.moments.products import UnitProducts, collect_products
-from mixbridge.moments.suppression import moments_of, suppress
-from mixbridge.ratio import curve_of
-from mixbridge.routes import LEDGER_ROUTES, fit_route
-
-CURVE = [key for key in LEDGER_ROUTES if key != "first_difference"]
+from mixbridge.moments import OpenMoments, closed_file, files
+from mixbridge.moments.products import UnitProducts
 
 
-def rows_of(seed=1, units=40, offset=0.0):
-    rng = np.random.default_rng(seed)
-    codes = np.repeat(np.arange(units), rng.integers(1, 7, units))
-    n = codes.size
-    between = rng.normal(size=units)[codes]
-    x = np.column_stack([np.ones(n), offset + rng.normal(size=n) + between, rng.normal(size=units)[codes]])
-    y = 1 + x[:, 1] - offset + between + rng.normal(size=n)
-    return x, y, codes
-
-
-def records_of(x, y, codes, keys=None):
-    names = ("Intercept", "x", "w", "y")
-    index = pd.RangeIndex(int(codes.max()) + 1) if keys is None else keys
-
-    def blocks():
-        yield codes, x, y
-
-    opened, moments = collect(blocks, names, index)
-    return opened, moments, collect_products(blocks, opened, moments, index)
-
-
-def fits_of(moments):
-    curve = curve_of(moments)
-    return {key: fit_route(curve, key, {}, "no order") for key in CURVE}
-
-
-def same_fits(one, two, rtol=1e-8):
-    for key in CURVE:
-        a, b = one[key], two[key]
-        assert a.status == b.status, key
-        np.testing.assert_allclose(a.beta, b.beta, rtol=rtol, atol=1e-9, err_msg=key)
-        np.testing.assert_allclose(a.standard_errors, b.standard_errors, rtol=10 * rtol, err_msg=key)
+def numbered(make):
+    return lambda n: pd.Index([make(j) for j in range(n)], dtype=object, tupleize_cols=False)
 
 
 KEYS = {
-    "integers": pd.RangeIndex,
+    "range": lambda n: pd.RangeIndex(7, 7 + 3 * n, 3, name="apiary"),
+    "integers": lambda n: pd.Index(np.arange(n, dtype=np.int16)[::-1], name="apiary"),
     "wide integers": lambda n: pd.Index(np.arange(n, dtype=np.int64) + 2**62),
-    "text": lambda n: pd.Index([f"unit <{j}> \u05d0" for j in range(n)]),
-    "dates": lambda n: pd.date_range("2001-01-01", periods=n),
+    "unsigned": lambda n: pd.Index(np.arange(n, dtype=np.uint64) + np.uint64(2**63)),
+    "integers of any size": numbered(lambda j: 2**80 + j),
+    "floats": lambda n: pd.Index(np.arange(n) / 7),
+    "text": lambda n: pd.Index([f"unit <{j}> \u05d0\U0001f41d\n\x00" for j in range(n)], name="\u00e9"),
+    "text as objects": numbered(lambda j: "" if not j else f"\u05d0{j}"),
+    "halves of a pair": numbered(lambda j: f"\ud83d{j}"),
+    "numbers and text": numbered(lambda j: j if j % 2 else f"{j}a"),
+    "calendar dates": numbered(lambda j: date(1899, 12, 1 + j % 28) + timedelta(days=400 * j)),
+    "times": lambda n: pd.date_range("1677-09-22 01:02:03.000000001", periods=n, freq="3h"),
+    "times in days": lambda n: pd.DatetimeIndex(np.datetime64("0001-01-01", "s") + np.arange(n)),
+    "times in a zone": lambda n: pd.date_range(
+        "2024-10-27", periods=n, freq="h", tz="Europe/Berlin", unit="us"
+    ),
+    "times off UTC": lambda n: pd.date_range("2024-10-27", periods=n, tz="UTC+05:30"),
+    "durations": lambda n: pd.timedelta_range("1 day", periods=n, freq="1h"),
+    "months": lambda n: pd.period_range("1999-12", periods=n, freq="M"),
 }
 
 
@@ -69,16 +52,55 @@ def test_all_three_come_back_as_they_were(tmp_path, kind):
         [(opened, OpenMoments), (moments, mixbridge.Moments), (products, UnitProducts)]
     ):
         path = tmp_path / f"record{number}"
-        record.save(path)
-        again = cls.load(path)
-        for name in record.__slots__:
-            a, b = getattr(record, name), getattr(again, name)
-            if isinstance(a, np.ndarray):
-                np.testing.assert_array_equal(a, b)
-            elif isinstance(a, pd.Index):
-                assert a.astype(str).equals(b.astype(str))
-            else:
-                assert a == b, name
+        for coded in (record, replace(record, coding="0123456789abcdef")):
+            coded.save(path)
+            same_record(coded, cls.load(path))
+    assert len(list(tmp_path.iterdir())) == 3
+
+
+def same_record(one, two):
+    for name in one.__slots__:
+        a, b = getattr(one, name), getattr(two, name)
+        if isinstance(a, np.ndarray):
+            assert a.dtype == b.dtype, name
+            assert a.shape == b.shape, name
+            assert a.tobytes() == b.tobytes(), name
+        elif isinstance(a, pd.Index):
+            assert type(a) is type(b)
+            assert a.dtype == b.dtype
+            assert a.name == b.name
+            assert a.tolist() == b.tolist()
+            assert list(map(type, a)) == list(map(type, b))
+        else:
+            assert a == b, name
+
+
+@pytest.mark.parametrize(
+    ("keys", "dtype"),
+    [
+        (pd.CategoricalIndex([f"{j:02}" for j in range(40)]), None),
+        (pd.CategoricalIndex(range(40)), "int64"),
+        (pd.Index(range(40), dtype="Int64"), "int64"),
+        (pd.Index(range(40), dtype="uint8[pyarrow]"), "uint8"),
+        (pd.Index([np.int8(j) for j in range(40)], dtype=object), "object"),
+        (pd.Index([f"{j}" for j in range(40)], dtype="string[pyarrow]"), None),
+    ],
+)
+def test_keys_of_types_that_hold_the_same_values_keep_the_values(tmp_path, keys, dtype):
+    opened = replace(records_of(*rows_of())[0], keys=keys)
+    opened.save(tmp_path / "a")
+    again = OpenMoments.load(tmp_path / "a").keys
+    assert again.tolist() == keys.tolist()
+    assert dtype is None or str(again.dtype) == dtype
+    assert again.get_indexer(keys).tolist() == list(range(40))
+
+
+@pytest.mark.parametrize("make", [lambda j: (j, "a"), pd.Timestamp, lambda j: frozenset([j])])
+def test_keys_that_are_neither_numbers_nor_text_nor_dates_are_refused(tmp_path, make):
+    opened = replace(records_of(*rows_of())[0], keys=numbered(make)(40))
+    with pytest.raises(mixbridge.DataError, match="only units keyed by"):
+        opened.save(tmp_path / "a")
+    assert not list(tmp_path.iterdir())
 
 
 def test_open_moments_with_a_factor_come_back(tmp_path):
@@ -128,124 +150,138 @@ def test_one_changed_number_is_found(tmp_path):
         OpenMoments.load(path)
 
 
+@pytest.mark.parametrize("cls", [OpenMoments, mixbridge.Moments, UnitProducts])
+def test_any_changed_byte_is_found_or_means_nothing(tmp_path, cls):
+    """A byte may hold a time of the zip or a blank of a head; whatever holds a number, a name or a key is found."""
+    record = records_of(*rows_of(units=12), KEYS["text"](12))[
+        [OpenMoments, mixbridge.Moments, UnitProducts].index(cls)
+    ]
+    path = tmp_path / "file"
+    record.save(path)
+    whole = path.read_bytes()
+    rng = np.random.default_rng(0)
+    refused: list[str] = []
+    for at in rng.permutation(len(whole))[:400].tolist():
+        path.write_bytes(whole[:at] + bytes([whole[at] ^ int(rng.integers(1, 256))]) + whole[at + 1 :])
+        try:
+            found = cls.load(path)
+        except mixbridge.DataError as error:
+            refused.append(str(error))
+        else:
+            same_record(record, found)
+    assert len(refused) > 320
+    assert all(str(path) in reason for reason in refused)
+    for length in rng.integers(0, len(whole), 40).tolist():
+        path.write_bytes(whole[:length])
+        with pytest.raises(mixbridge.DataError, match=re.escape(str(path))):
+            cls.load(path)
+
+
+def rewritten(path, change):
+    """Change what a file holds and give it the checksum of the changed content."""
+    with np.load(path) as file:
+        arrays = dict(file)
+    meta = json.loads(str(arrays.pop("meta")))
+    change(meta, arrays)
+    del meta["checksum"]
+    meta["checksum"] = files._checksum(meta, arrays)
+    with path.open("wb") as file:
+        np.savez(file, meta=np.array(json.dumps(meta)), **arrays)
+
+
+@pytest.mark.parametrize(
+    ("change", "reason"),
+    [
+        (lambda meta, _: meta.update(version=2), "version 2"),
+        (lambda meta, _: meta.update(format="other"), "holds 'other'"),
+        (lambda _, arrays: arrays.update(keys=arrays["keys"][:2]), "keys of units"),
+        (lambda meta, _: meta["keys"].update(kind="time", dtype="nothing"), "keys of units"),
+        (lambda _, arrays: arrays.update(keys=np.array([0, 39, 1])), "one key for each unit"),
+        (lambda _, arrays: arrays.pop("keys"), "checksum"),
+        (lambda _, arrays: arrays.pop("means"), "checksum"),
+    ],
+)
+def test_a_file_that_is_whole_but_not_what_it_should_be(tmp_path, change, reason):
+    path = tmp_path / "file"
+    for record in records_of(*rows_of())[::2]:
+        record.save(path)
+        rewritten(path, change)
+        with pytest.raises(mixbridge.DataError, match=reason) as caught:
+            type(record).load(path)
+        assert str(path) in str(caught.value)
+
+
+@pytest.mark.parametrize(
+    ("change", "reason"),
+    [
+        ({"version": 2}, "of version 1: its version is 2"),
+        ({"format": "other"}, "its format is 'other'"),
+        ({"scale": [1.0]}, "do not fit together"),
+        ({"within": [[1.0, 0.0]]}, "do not fit together"),
+        ({"sizes": "many"}, "not a whole record"),
+        ({"design": ["x"]}, "do not fit together"),
+    ],
+)
+def test_a_record_that_is_whole_but_not_what_it_should_be(tmp_path, change, reason):
+    body = {
+        key: value for key, value in records_of(*rows_of())[1].to_record().items() if key != "checksum"
+    } | change
+    path = tmp_path / "file"
+    path.write_text(json.dumps({**body, "checksum": closed_file._checksum(body)}), encoding="utf-8")
+    with pytest.raises(mixbridge.DataError, match=reason) as caught:
+        mixbridge.Moments.load(path)
+    assert str(path) in str(caught.value)
+
+
+def test_a_file_is_replaced_whole_or_not_at_all(tmp_path, monkeypatch):
+    opened, moments, _ = records_of(*rows_of())
+    for record in (opened, moments):
+        path = tmp_path / "a"
+        record.save(path)
+        before = path.read_bytes()
+
+        def half(self, *_, **__):
+            raise OSError(28, "No space left on device")
+
+        with monkeypatch.context() as patch:
+            patch.setattr(Path, "replace", half)
+            with pytest.raises(mixbridge.DataError, match="cannot be written: No space left"):
+                record.save(path)
+        assert path.read_bytes() == before
+        assert [file.name for file in tmp_path.iterdir()] == ["a"]
+
+
+@pytest.mark.parametrize("kind", ["range", "wide integers", "text", "times in a zone"])
+def test_files_of_many_units_take_no_loop_over_units(tmp_path, kind):
+    """Python functions called while 20,000 units are written, read and merged are few."""
+    units = 20_000
+    opened = OpenMoments(
+        ("c", "x", "y"),
+        KEYS[kind](units),
+        np.full(units, 3),
+        np.zeros(3),
+        np.random.default_rng(0).normal(size=(units, 3)),
+        np.eye(3),
+        np.ones(3),
+    )
+    calls = 0
+
+    def count(_frame, event, _argument):
+        nonlocal calls
+        calls += event == "call"
+
+    sys.setprofile(count)
+    try:
+        opened.save(tmp_path / "a")
+        again = OpenMoments.load(tmp_path / "a")
+        twice = opened + again
+    finally:
+        sys.setprofile(None)
+    assert twice.counts.tolist() == [6] * units
+    assert calls < 5_000
+
+
 def test_it_cannot_be_written_where_there_is_no_folder(tmp_path):
     opened, _, _ = records_of(*rows_of())
     with pytest.raises(mixbridge.DataError, match="cannot be written"):
         opened.save(tmp_path / "nowhere" / "a")
-
-
-@settings(max_examples=15, deadline=None)
-@given(
-    st.integers(0, 10**6),
-    st.lists(st.sampled_from([6, 12, 20, 28, 34]), min_size=1, max_size=4, unique=True),
-    st.sampled_from([0.0, 1e6]),
-)
-def test_pooled_moments_give_the_fit_on_pooled_rows(seed, cuts, offset):
-    """Rounding of the offset data, times the condition, bounds what can be the same."""
-    x, y, codes = rows_of(seed, offset=offset)
-    _, whole, _ = records_of(x, y, codes)
-    edges = [0, *sorted(cuts), 40]
-    parts = []
-    for low, high in pairwise(edges):
-        rows = (codes >= low) & (codes < high)
-        opened, _, _ = records_of(x[rows], y[rows], codes[rows] - low, pd.RangeIndex(low, high))
-        parts.append(opened)
-    pooled = close(parts[0])
-    for part in parts[1:]:
-        pooled = pooled + close(part)
-    open_pooled = parts[0]
-    for part in parts[1:]:
-        open_pooled = open_pooled + part
-    rtol = 1e-8 if offset == 0.0 else 1e-5
-    one = fits_of(whole)
-    same_fits(one, fits_of(pooled), rtol)
-    same_fits(one, fits_of(close(open_pooled)), rtol)
-
-
-def test_products_of_two_sites_are_those_of_all_rows():
-    x, y, codes = rows_of()
-    _, _, whole = records_of(x, y, codes)
-    left = codes < 17
-    _, _, a = records_of(x[left], y[left], codes[left], pd.RangeIndex(17))
-    _, _, b = records_of(x[~left], y[~left], codes[~left] - 17, pd.RangeIndex(17, 40))
-    pooled = a + b
-    assert pooled.keys.tolist() == whole.keys.tolist()
-    np.testing.assert_allclose(
-        pooled.within_total() * np.outer(pooled.scale, pooled.scale),
-        whole.within_total() * np.outer(whole.scale, whole.scale),
-        rtol=1e-10,
-        atol=1e-9,
-    )
-
-
-def studies(formula, first, second):
-    data = mixbridge.demo.apiaries()
-    data["zone"] = np.where(data["altitude"] > 500, "high", "low")
-    return [mixbridge.crosscheck(formula, data[pick(data)], unit="apiary") for pick in (first, second)]
-
-
-def test_other_coding_under_the_same_names_is_refused():
-    def north(d):
-        return d["apiary"] < "A20"
-
-    def south(d):
-        return ~north(d)
-
-    a, b = studies("honey ~ center(forage)", north, south)
-    assert a.moments.design == b.moments.design
-    for one, two in ((a.moments, b.moments), (a.opened, b.opened), (a.products, b.products)):
-        with pytest.raises(mixbridge.DataError, match="coded differently"):
-            one + two
-    a, b = studies("honey ~ I(forage - 40) + C(zone, levels=['low', 'high'])", north, south)
-    assert a.moments.coding == b.moments.coding
-    pooled = mixbridge.from_moments(a.moments + b.moments, unit="apiary")
-    whole = studies(
-        "honey ~ I(forage - 40) + C(zone, levels=['low', 'high'])", lambda d: d["honey"] == d["honey"], north
-    )[0]
-    np.testing.assert_allclose(pooled.fit("reml").beta, whole.fit("reml").beta, rtol=1e-9)
-
-
-def test_reference_level_that_differs_is_found_though_names_agree():
-    data = mixbridge.demo.apiaries()
-    data["kind"] = np.where(data["season"] % 2 == 0, "b", "a")
-    other = data.assign(kind=data["kind"].replace("a", "0"))
-    one = mixbridge.crosscheck("honey ~ C(kind)", data, unit="apiary").moments
-    two = mixbridge.crosscheck("honey ~ C(kind)", other, unit="apiary").moments
-    assert one.design == two.design
-    with pytest.raises(mixbridge.DataError, match="coded differently"):
-        one + two
-
-
-def test_without_small_classes_it_is_as_if_these_units_had_never_been_there():
-    x, y, codes = rows_of(3)
-    _, _, products = records_of(x, y, codes)
-    counts = np.bincount(codes)
-    rare = [size for size in range(1, 7) if 0 < (counts == size).sum() < 7]
-    found = suppress(products, 7)
-    assert [size for size, _, _ in found.left_out] == rare
-    keep = ~np.isin(counts[codes], rare)
-    _, expected, _ = records_of(x[keep], y[keep], np.unique(codes[keep], return_inverse=True)[1])
-    assert found.moments.sizes.tolist() == expected.sizes.tolist()
-    same_fits(fits_of(expected), fits_of(found.moments))
-
-
-def test_moments_of_all_products_are_the_moments():
-    _, moments, products = records_of(*rows_of(4))
-    same_fits(fits_of(moments), fits_of(moments_of(products)))
-
-
-def test_shared_moments_show_their_effect():
-    study = mixbridge.crosscheck(
-        "honey ~ forage + feeding + altitude", mixbridge.demo.apiaries(), unit="apiary", period="season"
-    )
-    shared = mixbridge.shared_moments(study, 5)
-    assert shared.left_out["units"].tolist() == [3, 1, 2]
-    row = shared.effect.set_index(["route", "term"]).loc[("reml", "feeding")]
-    assert row["before"] == study.fit("reml").coefficients["feeding"]
-    assert row["after"] == shared.study.fit("reml").coefficients["feeding"]
-    assert "selects units by size" in shared.note
-    for threshold in (1, 2.5, True):
-        with pytest.raises(mixbridge.OptionError, match="from 2 on"):
-            mixbridge.shared_moments(study, threshold)
-    with pytest.raises(mixbridge.DataError, match="nothing would be left"):
-        mixbridge.shared_moments(study, 100)

@@ -414,7 +414,7 @@ def test_moments_cannot_be_changed():
         Moments.from_arrays(X, y, units),
         Moments.from_record(Moments.from_arrays(X, y, units).to_record()),
         Moments.from_arrays(X, y, units).without_one_row_units(),
-        Moments.from_arrays(X, y, units) + Moments.from_arrays(X, y, units),
+        Moments.from_arrays(X, y, units) + Moments.from_arrays(X, y + 1.0, units),
     ):
         for field in dataclasses.fields(Moments):
             value = getattr(moments, field.name)

@@ -177,7 +177,7 @@ def test_hashes_depend_on_the_key_alone():
 def test_a_disk_that_is_too_small_is_told_before(monkeypatch, tmp_path):
     usage = shutil.disk_usage(tmp_path)._replace(free=100)
     monkeypatch.setattr(shutil, "disk_usage", lambda _: usage)
-    with pytest.raises(DataError, match=r"GiB left. Name a folder on a larger disk"):
+    with pytest.raises(DataError, match=r"GiB left\. Name a folder on a larger disk"):
         study(make(), [100], spill=tmp_path)
     assert list(tmp_path.iterdir()) == []
     with pytest.raises(DataError, match="No temporary folder can be made"):

@@ -1,6 +1,5 @@
 """Panels from chunks against the panel of the same rows in one frame, and against rational arithmetic."""
 
-import itertools
 import tracemalloc
 from fractions import Fraction
 
@@ -9,46 +8,18 @@ import pandas as pd
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from streams import KINDS, make, same_closed, source_of, split
 
+import mixbridge
 from mixbridge.moments import collect, factor_from_rows, stack_factors
-from mixbridge.panel import build_panel
+from mixbridge.panel import build_panel, streaming_rows
 from mixbridge.panel.streaming import build_streaming_panel
 from mixbridge.ratio import curve_of
 from mixbridge.routes import LEDGER_ROUTES, differences_of, fit_route
-from mixbridge.sources import read_table
 from mixbridge.sources.chunk_options import ChunkOptions
-
-pa = pytest.importorskip("pyarrow")
-pq = pytest.importorskip("pyarrow.parquet")
-ds = pytest.importorskip("pyarrow.dataset")
 
 FORMULA = "honey ~ forage * region + C(frames) + np.log(weight)"
 OFF_CURVE = ("first_difference",)
-
-
-def make(n=300, seed=5):
-    rng = np.random.default_rng(seed)
-    hive = rng.integers(0, 30, n)
-    data = pd.DataFrame(
-        {
-            "hive": hive,
-            "season": pd.Series(range(n)).groupby(hive).cumcount() + 2001,
-            "forage": rng.normal(size=n) + 0.1 * hive,
-            "weight": rng.exponential(size=n) + 1.0,
-            "frames": rng.integers(1, 4, n),
-            "region": rng.choice(["east", "north", "west"], n),
-        }
-    )
-    data["honey"] = 20 + data["forage"] + rng.normal(size=30)[hive] + rng.normal(size=n)
-    data.loc[[3, 77], "forage"] = np.nan
-    data.loc[[4, 50], "honey"] = np.nan
-    data.loc[10, "weight"] = -1.0
-    return data
-
-
-def split(data, cuts):
-    edges = [0, *sorted(cuts), len(data)]
-    return lambda: (data.iloc[a:b] for a, b in itertools.pairwise(edges))
 
 
 def streamed(formula, source, **options):
@@ -159,51 +130,7 @@ def test_unit_keys(kind):
     same_rows(got, wanted)
 
 
-SOURCES = [
-    "parquet",
-    "folder",
-    "partitioned",
-    "csv",
-    "dataset",
-    "reader",
-    "table",
-    "generator",
-    "frame",
-    "function",
-    "read_table",
-]
-
-
-def source_of(kind, data, folder):
-    table = pa.Table.from_pandas(data, preserve_index=False)
-    if kind in ("parquet", "read_table"):
-        pq.write_table(table, folder / "rows.parquet", row_group_size=41)
-        return folder / "rows.parquet" if kind == "parquet" else read_table(folder / "rows.parquet")
-    if kind in ("folder", "dataset"):
-        for i in range(4):
-            pq.write_table(table.slice(80 * i, 80), folder / f"part-{i}.parquet", row_group_size=30)
-        return folder if kind == "folder" else ds.dataset(folder)
-    if kind == "partitioned":
-        ds.write_dataset(
-            table,
-            folder,
-            format="parquet",
-            partitioning=ds.partitioning(pa.schema([("frames", pa.int64())]), flavor="hive"),
-        )
-        return folder
-    if kind == "csv":
-        data.to_csv(folder / "rows.csv", index=False)
-        return folder / "rows.csv"
-    return {
-        "reader": lambda: pa.RecordBatchReader.from_batches(table.schema, table.to_batches(max_chunksize=23)),
-        "table": lambda: table,
-        "generator": split(data, [20, 20, 150]),
-        "frame": lambda: data,
-        "function": lambda: split(data, [20, 20, 150]),
-    }[kind]()
-
-
-@pytest.mark.parametrize("kind", SOURCES)
+@pytest.mark.parametrize("kind", KINDS)
 def test_every_source(kind, tmp_path):
     data = make()
     got = streamed(FORMULA, source_of(kind, data, tmp_path), period="season", rows=37)
@@ -367,3 +294,22 @@ def test_memory_does_not_grow_with_rows():
     # all rows of the longer run are 60 * 4000 * 24 bytes = 5.8 MB, ten times those of the shorter one, which is long
     # enough for as many chunks as are ever held at the same time
     assert peak(60) < 1.25 * peak(6)
+
+
+@pytest.mark.parametrize("ordered", [True, False])
+def test_wide_designs_are_laid_out_in_pieces(ordered, monkeypatch):
+    """The same moments whatever part of a chunk is laid out at once."""
+    data = make().sort_values("hive") if ordered else make()
+    options = ChunkOptions(unit_records=not ordered)
+
+    def study(formula):
+        return mixbridge.crosscheck(formula, split(data, [150]), unit="hive", chunks=options)
+
+    for formula in ("honey ~ forage + weight", "honey ~ C(season) + region * weight"):
+        wide = study(formula)
+        assert len(list(wide.panel.blocks_with_codes(rows=1000))) == 2
+        with monkeypatch.context() as patch:
+            patch.setattr(streaming_rows, "CELLS", 300)
+            narrow = study(formula)
+            assert len(list(narrow.panel.blocks_with_codes(rows=1000))) > 2
+        same_closed(narrow.moments, wide.moments)

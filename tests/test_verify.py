@@ -146,6 +146,14 @@ def test_removed_and_added_figures_are_found(record):
     assert wrong == ["fits.ml.coefficients.forage", "fits.ml.extra"]
 
 
+def test_names_of_the_user_do_not_hide_a_changed_figure():
+    data = mixbridge.demo.apiaries().rename(columns={"apiary": "needs rows", "honey": "not kept"})
+    study = mixbridge.crosscheck("Q('not kept') ~ forage", data, unit="needs rows", routes=["within", "reml"])
+    changed = record_of(study)
+    changed["fits"]["reml"]["coefficients"]["forage"] *= 1.001
+    assert not mixbridge.verify(changed).passed
+
+
 def test_record_of_unit_means_is_verified_too(study):
     assert mixbridge.verify(record_of(study.correlated("mundlak"))).passed
 

@@ -47,10 +47,10 @@ def test_the_first_error_in_order_is_raised(threads, anywhere):
             raise ValueError(item)
         return item
 
-    seen = []
+    results = worked_on(items(), work, threads, anywhere=anywhere)
+    assert [next(results) for _ in range(3)] == [0, 1, 2]
     with pytest.raises(ValueError, match="3"):
-        seen.extend(worked_on(items(), work, threads, anywhere=anywhere))
-    assert seen == [0, 1, 2]
+        next(results)
     with pytest.raises(KeyError, match="stream"):
         list(worked_on(items(), lambda item: item, threads, anywhere=anywhere))
     assert not helpers()

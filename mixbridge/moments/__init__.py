@@ -1,6 +1,6 @@
 """Moments of a panel: what is left of the rows once they have been read."""
 
-from mixbridge.moments.closed import Moments, close, collect
+from mixbridge.moments.closed import Moments, close, collect, merge_closed
 from mixbridge.moments.columns import Span, column_table, dependency_text, noise, span_of
 from mixbridge.moments.factors import factor_from_rows, stack_factors, upper_factor
 from mixbridge.moments.opened import Block, Blocks, OpenMoments, gather, within_factor
@@ -17,6 +17,7 @@ __all__ = [
     "dependency_text",
     "factor_from_rows",
     "gather",
+    "merge_closed",
     "noise",
     "span_of",
     "stack_factors",

@@ -2,9 +2,7 @@
 
 from __future__ import annotations
 
-import hashlib
-import json
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -13,13 +11,14 @@ import numpy as np
 import pandas as pd
 from numpy.typing import ArrayLike, NDArray
 
-from mixbridge.errors import DataError
+from mixbridge.errors import DataError, OptionError
 from mixbridge.moments.classes import means_products, size_classes
-from mixbridge.moments.factors import eigen_factor, factor_from_products, factor_from_rows, stack_factors
-from mixbridge.moments.files import same_coding
+from mixbridge.moments.closed_file import attributes_of, read_record, record_of, write_record
+from mixbridge.moments.factors import eigen_factor, factor_from_products, factor_from_rows
 from mixbridge.moments.opened import Block, Blocks, OpenMoments, gather, within_factor
+from mixbridge.moments.pooling import pooled
 
-__all__ = ["Moments", "close", "collect"]
+__all__ = ["Moments", "close", "collect", "merge_closed"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -52,7 +51,7 @@ class Moments:
         Distinct unit sizes T, increasing.
     counts : ndarray of int, shape (G,)
         Number of units m_T of each size.
-    within : ndarray of shape (k, k)
+    within : ndarray of shape (m, k)
         F with ``F'F = W`` of the scaled z.
     between : ndarray of shape (G, k + 1, k + 1)
         Per size F_T with ``F_T'F_T = B_T = sum zbar zbar'`` of ``(1, scaled z)``.
@@ -157,37 +156,12 @@ class Moments:
         )
 
     def __add__(self, other: Moments) -> Moments:
-        """Pool with moments of other units.
+        """Pool with moments of other units: see `merge_closed`.
 
-        A unit must not be in both; closed moments hold no keys to check it.
+        A unit must not be in both. Closed moments hold no keys to check it; a part that is added to itself is
+        refused.
         """
-        if (self.design, self.constant, self.outcome) != (other.design, other.constant, other.outcome):
-            raise DataError(
-                "moments of different designs cannot be pooled: "
-                f"{list(self.design)} -> {self.outcome!r} against {list(other.design)} -> {other.outcome!r}."
-            )
-        ratio = other.scale / self.scale
-        move = np.diag(np.concatenate([[1.0], ratio]))
-        move[0, 1:] = (other.shift - self.shift) / self.scale
-        parts: dict[int, list[tuple[int, FloatArray]]] = {}
-        for size, count, factor in zip(self.sizes, self.counts, self.between, strict=True):
-            parts.setdefault(int(size), []).append((int(count), factor))
-        for size, count, factor in zip(other.sizes, other.counts, other.between @ move, strict=True):
-            parts.setdefault(int(size), []).append((int(count), factor))
-        sizes = sorted(parts)
-        pooled = replace(
-            self,
-            coding=same_coding(self.coding, other.coding),
-            magnitude=np.sqrt(
-                (self.rows * self.magnitude**2 + other.rows * other.magnitude**2) / (self.rows + other.rows)
-            ),
-            sizes=np.array(sizes),
-            counts=np.array([sum(count for count, _ in parts[size]) for size in sizes]),
-            within=stack_factors(self.within, other.within * ratio),
-            between=np.array([stack_factors(*(factor for _, factor in parts[size])) for size in sizes]),
-            note="pooled from parts",
-        )
-        return _frozen(pooled)
+        return merge_closed((self, other), units_are_distinct=True)
 
     def to_record(self) -> dict[str, Any]:
         """Return the moments as plain lists and numbers, with a checksum over all of them.
@@ -197,20 +171,15 @@ class Moments:
         dict
             JSON-ready: ``format``, ``version``, every attribute by name, ``checksum``.
         """
-        body: dict[str, Any] = {"format": "mixbridge-moments", "version": 1}
-        for name in self.__slots__:
-            value = getattr(self, name)
-            body[name] = value.tolist() if isinstance(value, np.ndarray) else value
-        body["design"] = list(self.design)
-        return {**body, "checksum": _checksum(body)}
+        return record_of({name: getattr(self, name) for name in self.__slots__})
 
     @classmethod
-    def from_record(cls, record: dict[str, Any]) -> Moments:
+    def from_record(cls, record: Mapping[str, Any]) -> Moments:
         """Rebuild moments from the record that `to_record` made.
 
         Parameters
         ----------
-        record : dict
+        record : mapping
 
         Returns
         -------
@@ -221,42 +190,25 @@ class Moments:
         DataError
             If this is no such record, or if its checksum does not fit.
         """
-        body = {key: value for key, value in record.items() if key != "checksum"}
-        if body.get("format") != "mixbridge-moments" or body.get("version") != 1:
-            raise DataError("this is not a record of moments of version 1.")
-        if _checksum(body) != record.get("checksum"):
-            raise DataError(
-                "the checksum of the moments does not fit their content: the record was changed or damaged."
-            )
-        return _frozen(
-            cls(
-                design=tuple(body["design"]),
-                constant=body["constant"],
-                outcome=body["outcome"],
-                shift=np.array(body["shift"], dtype=float),
-                scale=np.array(body["scale"], dtype=float),
-                magnitude=np.array(body["magnitude"], dtype=float),
-                sizes=np.array(body["sizes"], dtype=np.int64),
-                counts=np.array(body["counts"], dtype=np.int64),
-                within=np.array(body["within"], dtype=float),
-                between=np.array(body["between"], dtype=float),
-                note=body["note"],
-                coding=body.get("coding"),
-            )
-        )
+        return _frozen(cls(**attributes_of(record, "this record")))
 
     def save(self, path: str | Path) -> None:
-        """Write the moments as one JSON file, numbers in shortest exact form.
+        """Write the moments as one JSON file, numbers in shortest exact form: see `mixbridge.moments.closed_file`.
 
         Parameters
         ----------
         path : str or Path
+
+        Raises
+        ------
+        DataError
+            If the file cannot be written.
         """
-        Path(path).write_text(json.dumps(self.to_record()), encoding="utf-8")
+        write_record(path, self.to_record())
 
     @classmethod
     def load(cls, path: str | Path) -> Moments:
-        """Read moments written by `save`.
+        """Read moments written by `save`; refuses a file that is damaged, changed or of another kind.
 
         Parameters
         ----------
@@ -265,14 +217,62 @@ class Moments:
         Returns
         -------
         Moments
+
+        Raises
+        ------
+        DataError
+            Naming the file.
         """
-        try:
-            record = json.loads(Path(path).read_text(encoding="utf-8"))
-        except OSError as error:
-            raise DataError(f"{path} cannot be read: {error.strerror}.") from error
-        except ValueError as error:
-            raise DataError(f"{path} is not a file of closed moments, or it is damaged.") from error
-        return cls.from_record(record if isinstance(record, dict) else {})
+        return _frozen(cls(**attributes_of(read_record(path), str(path))))
+
+
+def merge_closed(parts: Iterable[Moments], *, units_are_distinct: bool) -> Moments:
+    """Pool the closed moments of several parts of a data set, such as sites that do not share rows.
+
+    Parameters
+    ----------
+    parts : iterable of Moments
+        Of the same formula, with the same levels of categories and the same learned constants.
+    units_are_distinct : bool
+        That no unit is in two parts. Closed moments hold no keys: nobody can check it afterwards.
+
+    Returns
+    -------
+    Moments
+        Those of all rows, to rounding: see `mixbridge.moments.pooling`.
+
+    Raises
+    ------
+    DataError
+        If there is no part, if columns or codings differ, or if the same part is there twice.
+    OptionError
+        If the units are not said to be distinct.
+
+    Examples
+    --------
+    >>> import mixbridge
+    >>> data = mixbridge.demo.apiaries()
+    >>> sites = [rows for _, rows in data.groupby(data["apiary"] < "A20")]
+    >>> parts = [mixbridge.crosscheck("honey ~ forage", rows, unit="apiary").moments for rows in sites]
+    >>> pooled = merge_closed(parts, units_are_distinct=True)
+    >>> pooled.rows == sum(part.rows for part in parts)
+    True
+    """
+    if units_are_distinct is not True:
+        raise OptionError(
+            f"units_are_distinct={units_are_distinct!r} is not allowed; allowed: True. Closed moments hold no keys, so "
+            "that the rows of a unit in two parts cannot be joined: merge OpenMoments or UnitProducts instead."
+        )
+    given = tuple(parts)
+    if not given:
+        raise DataError("there are no moments to pool.")
+    for part in given:
+        if not isinstance(part, Moments):
+            raise DataError(
+                f"closed moments cannot be pooled with {type(part).__name__}: close that one first where no unit is in "
+                "both, or merge what holds keys on both sides."
+            )
+    return given[0] if len(given) == 1 else _frozen(replace(given[0], **pooled(given)))
 
 
 def collect(blocks: Blocks, columns: tuple[str, ...], keys: pd.Index) -> tuple[OpenMoments, Moments]:
@@ -389,7 +389,3 @@ def _frozen(moments: Moments) -> Moments:
         if isinstance(value, np.ndarray):
             value.setflags(write=False)
     return moments
-
-
-def _checksum(body: dict[str, Any]) -> str:
-    return hashlib.sha256(json.dumps(body, sort_keys=True).encode()).hexdigest()

@@ -1,16 +1,19 @@
 """Arrays with names and keys in one open file: an uncompressed npz with a JSON head and a checksum, no pickle.
 
 An npz file is a zip of npy files, a format that numpy documents and many programs read. The entry ``meta`` holds JSON:
-``format``, ``version``, names, keys as numbers or text with their type, and ``checksum``, the SHA-256 of the rest of
-the JSON (keys sorted) and of name, type, shape and bytes of every array in the order of their names.
+``format``, ``version``, names, what the keys are, and ``checksum``, the SHA-256 of the rest of the JSON (keys sorted)
+and of name, type, shape and bytes of every array in the order of their names. The keys themselves are the array
+``keys``: see `mixbridge.moments.key_arrays`.
 """
 
 from __future__ import annotations
 
 import hashlib
 import json
+import struct
 import zipfile
-from collections.abc import Mapping, Sequence
+import zlib
+from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -19,14 +22,30 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from mixbridge.errors import DataError
+from mixbridge.moments.key_arrays import keys_as_array, keys_from_array
 
-__all__ = ["keys_from", "plain_keys", "read_arrays", "same_coding", "write_arrays"]
+__all__ = ["keyed_arrays", "read_arrays", "replace_file", "same_coding", "write_arrays"]
 
 Arrays = Mapping[str, NDArray[Any]]
+DAMAGE = (
+    ValueError,
+    TypeError,
+    LookupError,
+    EOFError,
+    OSError,
+    SyntaxError,
+    MemoryError,
+    OverflowError,
+    RuntimeError,
+    struct.error,
+    zipfile.BadZipFile,
+    zlib.error,
+)
+"""What reading a zip, an npy header or JSON raises where bytes are not what they were."""
 
 
-def write_arrays(path: str | Path, meta: Mapping[str, Any], arrays: Arrays) -> None:
-    """Write arrays and their head.
+def write_arrays(path: str | Path, meta: Mapping[str, Any], arrays: Arrays, keys: pd.Index) -> None:
+    """Write arrays, their head and the keys of units.
 
     Parameters
     ----------
@@ -34,18 +53,49 @@ def write_arrays(path: str | Path, meta: Mapping[str, Any], arrays: Arrays) -> N
     meta : mapping
         JSON-ready, with ``format`` and ``version``.
     arrays : mapping of str to ndarray
+    keys : pandas.Index
+
+    Raises
+    ------
+    DataError
+        If the keys cannot be kept, or the file cannot be written.
+    """
+    words, listed = keys_as_array(keys)
+    whole = {**arrays, "keys": listed}
+    body = {**meta, "keys": words}
+    head = {**body, "checksum": _checksum(body, whole)}
+
+    def write(target: Path) -> None:
+        with target.open("wb") as file:
+            np.savez(file, allow_pickle=False, meta=np.array(json.dumps(head)), **whole)
+
+    replace_file(path, write)
+
+
+def replace_file(path: str | Path, write: Callable[[Path], object]) -> None:
+    """Write a file under another name and move it to its place, so that there is never half a file.
+
+    Parameters
+    ----------
+    path : str or Path
+    write : callable
+        Takes the path to write to.
 
     Raises
     ------
     DataError
         If the file cannot be written.
     """
-    head = {**meta, "checksum": _checksum(meta, arrays)}
+    target = Path(path)
+    part = target.with_name(f"{target.name}.part")
     try:
-        with Path(path).open("wb") as file:
-            np.savez(file, allow_pickle=False, meta=np.array(json.dumps(head)), **arrays)
+        write(part)
+        part.replace(target)
     except OSError as error:
-        raise DataError(f"{path} cannot be written: {error.strerror}.") from error
+        raise DataError(f"{path} cannot be written: {error.strerror or error}.") from error
+    finally:
+        if part.exists():
+            part.unlink()
 
 
 def read_arrays(
@@ -65,7 +115,7 @@ def read_arrays(
     Returns
     -------
     dict, dict
-        Head without its checksum, arrays.
+        Head without its checksum, arrays; ``keys`` is the index of units.
 
     Raises
     ------
@@ -76,10 +126,12 @@ def read_arrays(
     try:
         with Path(path).open("rb") as raw, np.load(raw, allow_pickle=False) as file:
             meta = json.loads(str(file["meta"]))
-            arrays = {name: file[name] for name in names if name in file}
+            arrays = {name: file[name] for name in (*names, "keys") if name in file}
     except FileNotFoundError as error:
         raise DataError(f"{path} cannot be read: there is no such file.") from error
-    except (KeyError, ValueError, EOFError, OSError, zipfile.BadZipFile) as error:
+    except (IsADirectoryError, PermissionError) as error:
+        raise DataError(f"{path} cannot be read: {error.strerror}.") from error
+    except DAMAGE as error:
         raise DataError(f"{path} is not a file of {words}, or it is damaged.") from error
     if not isinstance(meta, dict) or meta.get("format") != kind:
         found = meta.get("format") if isinstance(meta, dict) else None
@@ -89,26 +141,44 @@ def read_arrays(
             f"{path} has version {meta.get('version')!r} of {words}; needed is version {version}."
         )
     checksum = meta.pop("checksum", None)
-    missing = [name for name in names if name not in arrays and name not in optional]
+    missing = [name for name in (*names, "keys") if name not in arrays and name not in optional]
     if missing or checksum != _checksum(meta, arrays):
         raise DataError(f"the checksum of {path} does not fit its content: the file was changed or damaged.")
     return meta, arrays
 
 
-def plain_keys(keys: pd.Index) -> dict[str, Any]:
-    """Return keys as JSON values and the name of their type."""
-    values = keys.astype(str).tolist() if keys.dtype.kind in "mM" else keys.tolist()
-    if not all(isinstance(value, (str, int, float)) for value in values):
-        raise DataError(
-            "only units keyed by numbers, texts or dates can be saved; use such a column as the unit."
-        )
-    return {"dtype": str(keys.dtype) if keys.dtype.name != "category" else "object", "values": values}
+def keyed_arrays(
+    path: str | Path, meta: Mapping[str, Any], arrays: dict[str, NDArray[Any]], rows: str
+) -> pd.Index:
+    """Take the keys out of arrays that were read, and check that there is one per unit.
 
+    Parameters
+    ----------
+    path : str or Path
+        For messages.
+    meta : mapping
+    arrays : dict
+        Loses ``keys``.
+    rows : str
+        Name of an array with one entry per unit.
 
-def keys_from(plain: Mapping[str, Any]) -> pd.Index:
-    """Return keys from what `plain_keys` made."""
-    index: pd.Index = pd.Index(plain["values"])
-    return index if plain["dtype"] == str(index.dtype) else index.astype(plain["dtype"])
+    Returns
+    -------
+    pandas.Index
+
+    Raises
+    ------
+    DataError
+        If keys and units do not fit together.
+    """
+    try:
+        keys = keys_from_array(meta["keys"], arrays.pop("keys"))
+        fits = len(keys) == len(arrays[rows]) and keys.is_unique
+    except (ValueError, TypeError, KeyError) as error:
+        raise DataError(f"the keys of units in {path} cannot be read: {error}.") from error
+    if not fits:
+        raise DataError(f"{path} does not hold one key for each unit.")
+    return keys
 
 
 def same_coding(one: str | None, two: str | None) -> str | None:
@@ -133,5 +203,5 @@ def _checksum(meta: Mapping[str, Any], arrays: Arrays) -> str:
     for name in sorted(arrays):
         array = np.ascontiguousarray(arrays[name])
         digest.update(f"{name} {array.dtype.str} {array.shape}".encode())
-        digest.update(array.tobytes())
+        digest.update(array.data if array.size else b"")
     return digest.hexdigest()

@@ -19,8 +19,9 @@ except ImportError:  # pragma: no cover
     COMPILED = False
 
 from mixbridge.errors import DataError
-from mixbridge.moments.factors import stack_factors
-from mixbridge.moments.files import keys_from, plain_keys, read_arrays, same_coding, write_arrays
+from mixbridge.moments.factors import factor_from_products, stack_factors
+from mixbridge.moments.files import keyed_arrays, read_arrays, same_coding, write_arrays
+from mixbridge.moments.key_arrays import same_kind_of_keys
 
 __all__ = ["Block", "Blocks", "OpenMoments", "add_by_unit", "gather", "within_factor"]
 
@@ -97,7 +98,17 @@ class OpenMoments:
 
         The within product of a split unit grows by ``T1 T2 / (T1 + T2) d d'``, d the difference of its two
         means (Chan, Golub & LeVeque 1983, eq. for two samples; number from memory).
+
+        Raises
+        ------
+        DataError
+            If columns, coding or the type of keys differ, or if the other part is closed and has no keys.
         """
+        if not isinstance(other, OpenMoments):
+            raise DataError(
+                f"open moments cannot be merged with {type(other).__name__}: only open moments hold counts and means "
+                "of units by key. Close them first where no unit is in both parts."
+            )
         if self.columns != other.columns:
             raise DataError(
                 "moments with different columns cannot be merged: "
@@ -105,6 +116,7 @@ class OpenMoments:
                 "Build both from the same formula and levels."
             )
         coding = same_coding(self.coding, other.coding)
+        same_kind_of_keys(self.keys, other.keys)
         moved = other.means + (other.shift - self.shift)
         place = self.keys.get_indexer(other.keys)
         shared = np.flatnonzero(place >= 0)
@@ -123,8 +135,10 @@ class OpenMoments:
         counts[at] = total
         means[at] += gap * (second / total)[:, None]
         factor = None
-        if self.factor is not None and other.factor is not None:
-            factor = stack_factors(self.factor, other.factor, extra)
+        if self.factor is not None or other.factor is not None:  # what was taken from rows is not given up
+            ours, theirs = self._own_factor(), other._own_factor()
+            if ours is not None and theirs is not None:
+                factor = stack_factors(ours, theirs, extra)
         return OpenMoments(
             columns=self.columns,
             keys=self.keys.append(other.keys[fresh]),
@@ -144,19 +158,22 @@ class OpenMoments:
             "version": 1,
             "columns": list(self.columns),
             "coding": self.coding,
-            "has_factor": self.factor is not None,
-            "keys": plain_keys(self.keys),
         }
         arrays = {name: getattr(self, name) for name in ARRAYS}
         if self.factor is not None:
             arrays["factor"] = self.factor
-        write_arrays(path, meta, arrays)
+        write_arrays(path, meta, arrays, self.keys)
 
     @classmethod
     def load(cls, path: str | Path) -> OpenMoments:
         """Read moments written by `save`; refuses a file that is damaged, changed or of another kind."""
         meta, arrays = read_arrays(path, FORMAT, 1, (*ARRAYS, "factor"), optional=("factor",))
-        return cls(tuple(meta["columns"]), keys_from(meta["keys"]), coding=meta["coding"], **arrays)
+        keys = keyed_arrays(path, meta, arrays, "counts")
+        return cls(tuple(meta["columns"]), keys, coding=meta["coding"], **arrays)
+
+    def _own_factor(self) -> FloatArray | None:
+        """Return a factor of W: from the rows, or from the products where these carry the digits."""
+        return factor_from_products(self.within) if self.factor is None else self.factor
 
     def with_factor(self, factor: FloatArray) -> OpenMoments:
         """Return the same moments with a within factor taken from the rows.
@@ -173,9 +190,7 @@ class OpenMoments:
         return replace(self, factor=factor)
 
 
-def gather(
-    blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index, origin: FloatArray | None = None
-) -> OpenMoments:
+def gather(blocks: Iterable[Block], columns: tuple[str, ...], keys: pd.Index) -> OpenMoments:
     """Take the moments of rows that come in blocks, in one pass.
 
     Parameters
@@ -186,9 +201,6 @@ def gather(
         Names of the design columns and, last, of the outcome.
     keys : pandas.Index
         Unit keys by code. Units without a row are left out.
-    origin : ndarray of shape (k,), optional
-        What the means are measured from: the first row seen unless given. Parts that will be merged take one
-        origin, so that the mean of a column constant within units is the same number in each of them.
 
     Returns
     -------
@@ -243,7 +255,7 @@ def gather(
     if counts.size == 0:
         raise DataError("there are no rows to take moments of.")
     _refuse_non_finite(total, columns)
-    shift = np.append(anchors[0], anchors_y[0]) if origin is None else origin
+    shift = np.append(anchors[0], anchors_y[0])
     means = np.empty((counts.size, p + 1))
     within = total.copy()
     for start in range(0, counts.size, UNITS_AT_ONCE):

@@ -77,13 +77,15 @@ class _Growth:
         self._growing: Growing | None = None
         self._rows: list[tuple[IntArray, pd.Series[Any]]] = []
 
-    def add(self, codes: IntArray, z: FloatArray, period: pd.Series[Any] | None) -> None:
+    def add(self, codes: IntArray, z: FloatArray) -> None:
         """Take in rows, units numbered by order of first appearance."""
         if self._growing is None:
             self._growing = Growing(z.shape[1], by_unit=self._by_unit)
         self._growing.add(codes, z)
-        if period is not None:
-            self._rows.append((codes, period))
+
+    def note_periods(self, codes: IntArray, period: pd.Series[Any]) -> None:
+        """Keep the periods of rows."""
+        self._rows.append((codes, period))
 
     def finish(self, keys: pd.Series[Any]) -> Grown | None:
         """Return the moments, or None without rows."""
@@ -127,10 +129,14 @@ def look_at_part(
 
     def take(step: Step, codes: IntArray) -> None:
         nonlocal complete
-        _, z = one_pass(step)
-        complete = complete and z is not None
-        if z is not None:
-            growth.add(codes, z, step.key(plan.keys[1]) if len(plan.keys) > 1 else None)
+        _, pieces = one_pass(step)
+        complete = complete and pieces is not None
+        start = 0
+        for z in pieces or ():
+            growth.add(codes[start : start + len(z)], z)
+            start += len(z)
+        if complete and len(plan.keys) > 1:
+            growth.note_periods(codes, step.key(plan.keys[1]))
 
     book, keys = read_part(recipe, told, place, frame, take)
     grown = growth.finish(keys) if complete else None
@@ -157,7 +163,10 @@ def grow_part(taught: Taught, place: str, frame: object, *, by_unit: bool = Fals
     """
     units, growth = Distinct(taught.recipe.keys[0], whole=True), _Growth(by_unit=by_unit)
     for rows in read_rows(taught, place, frame):
-        growth.add(units.enter(rows.key, rows.place), rows.z, rows.period)
+        codes = units.enter(rows.key, rows.place)
+        growth.add(codes, rows.z)
+        if rows.period is not None:
+            growth.note_periods(codes, rows.period)
     grown = growth.finish(units.plain(units.series()))
     if grown is not None and grown.unfit:
         return grow_part(taught, place, frame, by_unit=True)

@@ -9,14 +9,13 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 from numpy.typing import ArrayLike, NDArray
-from scipy.linalg import solve_triangular
-from scipy.linalg.blas import dtrsm
 
 from mixbridge.errors import DataError
 from mixbridge.moments.closed import Moments, collect
-from mixbridge.moments.factors import upper_factor
-from mixbridge.moments.files import keys_from, plain_keys, read_arrays, same_coding, write_arrays
+from mixbridge.moments.files import keyed_arrays, read_arrays, write_arrays
+from mixbridge.moments.framing import frame_of, framed_rows, square_of
 from mixbridge.moments.opened import Block, Blocks, OpenMoments, add_by_unit
+from mixbridge.moments.products_merging import merged
 
 __all__ = ["UnitProducts", "collect_products"]
 
@@ -25,8 +24,6 @@ IntArray = NDArray[np.intp]
 
 FORMAT = "mixbridge-unit-products"
 ARRAYS = ("shift", "scale", "sizes", "means", "frame", "packed")
-DEPENDENT = 1e-10
-"""Share of a column that is left after the earlier ones, below which it stays unscaled in the frame."""
 CENTRED = 1e-12
 """Root of size times squared distance from the mean that needs no correction: squared it is 1e-24 of the total."""
 SCATTER_ROWS = 1024
@@ -95,7 +92,7 @@ class UnitProducts:
     def framed(self, at: slice | IntArray | None = None) -> FloatArray:
         """Return the framed within products of the units at these positions as full matrices, shape (m, k, k)."""
         packed = self.packed if at is None else self.packed[at]
-        return np.asarray(np.take(packed, _places(self.frame.shape[0]), axis=1))
+        return square_of(packed, self.frame.shape[0])
 
     def within(self, at: slice | IntArray | None = None) -> FloatArray:
         """Return the within products of the scaled z, shape (m, k, k): over all units they add up to W."""
@@ -103,7 +100,7 @@ class UnitProducts:
 
     def within_total(self) -> FloatArray:
         """Return the within products of the scaled z summed over all units, shape (k, k): W of the moments."""
-        total = self.packed.sum(axis=0)[_places(self.frame.shape[0])]
+        total = square_of(self.packed.sum(axis=0), self.frame.shape[0])
         return np.asarray(self.frame.T @ total @ self.frame)
 
     @classmethod
@@ -154,33 +151,18 @@ class UnitProducts:
         return self.select(~np.isin(self.sizes, sizes))
 
     def __add__(self, other: UnitProducts) -> UnitProducts:
-        """Pool with the products of other units; coordinates become those of the left side."""
-        if (self.design, self.constant, self.outcome) != (other.design, other.constant, other.outcome):
+        """Merge with another part; units in both are joined by key: see `mixbridge.moments.products_merging`.
+
+        Raises
+        ------
+        DataError
+            If columns, coding or the type of keys differ, or if the other part is of another kind.
+        """
+        if not isinstance(other, UnitProducts):
             raise DataError(
-                "unit products of different designs cannot be pooled: "
-                f"{list(self.design)} -> {self.outcome!r} against {list(other.design)} -> {other.outcome!r}."
+                f"unit products cannot be merged with {type(other).__name__}: gather unit products of both parts."
             )
-        coding = same_coding(self.coding, other.coding)
-        shared = self.keys.intersection(other.keys)
-        if len(shared):
-            raise DataError(
-                f"{len(shared)} unit(s) lie in both parts, such as {shared[0]!r}: unit products cannot join the rows "
-                "of a split unit. Merge OpenMoments instead, or gather the products over both parts at once."
-            )
-        ratio = other.scale / self.scale
-        packed = other.packed
-        if not (np.array_equal(self.frame, other.frame) and (ratio == 1.0).all()):
-            k = self.frame.shape[0]
-            move = solve_triangular(self.frame, (other.frame * ratio).T, trans="T").T
-            full = np.matmul(move.T, np.matmul(other.framed(), move))
-            packed = full[(slice(None), *np.triu_indices(k))]
-        pooled = self._with(
-            self.keys.append(other.keys),
-            np.concatenate([self.sizes, other.sizes]),
-            np.vstack([self.means, other.means * ratio + (other.shift - self.shift) / self.scale]),
-            np.vstack([self.packed, packed]),
-        )
-        return replace(pooled, coding=coding)
+        return replace(self, **merged(self, other))
 
     def save(self, path: str | Path) -> None:
         """Write the products as one open file: see `mixbridge.moments.files`."""
@@ -191,19 +173,19 @@ class UnitProducts:
             "constant": self.constant,
             "outcome": self.outcome,
             "coding": self.coding,
-            "keys": plain_keys(self.keys),
         }
-        write_arrays(path, meta, {name: getattr(self, name) for name in ARRAYS})
+        write_arrays(path, meta, {name: getattr(self, name) for name in ARRAYS}, self.keys)
 
     @classmethod
     def load(cls, path: str | Path) -> UnitProducts:
         """Read products written by `save`; refuses a file that is damaged, changed or of another kind."""
         meta, arrays = read_arrays(path, FORMAT, 1, ARRAYS)
+        keys = keyed_arrays(path, meta, arrays, "sizes")
         return cls(
             tuple(meta["design"]),
             meta["constant"],
             meta["outcome"],
-            keys=keys_from(meta["keys"]),
+            keys=keys,
             coding=meta["coding"],
             **arrays,
         )
@@ -261,7 +243,7 @@ def collect_products(
     names = opened.columns
     kept = np.array([j for j, name in enumerate(names) if name != moments.constant or j == len(names) - 1])
     k = kept.size
-    frame = _frame(moments.within)
+    frame = frame_of(moments.within)
     unscaled = frame * moments.scale  # exact: scales are powers of two
     shift, means = opened.shift[kept], np.take(opened.means, kept, axis=1)
     near = shift + means
@@ -283,13 +265,13 @@ def collect_products(
         d = np.take(near, codes, axis=0, out=buffer[: codes.size], mode="clip")
         np.subtract(x[:, columns], d[:, :-1], out=d[:, :-1])
         np.subtract(y, d[:, -1], out=d[:, -1])
-        _add_products(packed, counts, codes, _framed(d, unscaled), upper)
+        _add_products(packed, counts, codes, framed_rows(d, unscaled), upper)
     if not np.array_equal(counts, opened.counts):
         raise DataError(
             "the number of rows per unit differs from the first pass: the source did not give the same rows again. "
             "Spool it to a file first."
         )
-    _centre(packed, counts, _framed(means - (near - shift), unscaled))
+    _centre(packed, counts, framed_rows(means - (near - shift), unscaled))
     return UnitProducts(
         moments.design,
         moments.constant,
@@ -335,11 +317,6 @@ def _add_products(
         counts[unit] += length
 
 
-def _framed(d: FloatArray, frame: FloatArray) -> FloatArray:
-    """Return f with ``f frame = d`` by substitution, which unlike an inverse leaves rows their digits; spends d."""
-    return np.asarray(dtrsm(1.0, frame, d.T, trans_a=1, overwrite_b=1)).T
-
-
 def _centre(packed: FloatArray, counts: NDArray[np.int64], rest: FloatArray) -> None:
     """Take off ``T fbar fbar'`` where the rows were not measured from the exact mean, in place."""
     rest *= np.sqrt(counts)[:, None]
@@ -347,24 +324,3 @@ def _centre(packed: FloatArray, counts: NDArray[np.int64], rest: FloatArray) -> 
     if far.size:
         rows, columns = np.triu_indices(rest.shape[1])
         packed[far] -= rest[far][:, rows] * rest[far][:, columns]
-
-
-def _frame(within: FloatArray) -> FloatArray:
-    """Return an invertible triangular R with ``R'R = W``; columns that depend on earlier ones get a row of I."""
-    k = within.shape[1]
-    length = np.sqrt((within**2).sum(axis=0))
-    safe = np.where(length > 0.0, length, 1.0)
-    upper = upper_factor(within / safe)
-    frame = np.zeros((k, k))
-    frame[: upper.shape[0]] = upper * safe
-    weak = ~(np.abs(np.diag(frame)) > DEPENDENT * length)
-    frame[weak] = np.eye(k)[weak]
-    return frame
-
-
-def _places(k: int) -> IntArray:
-    """Return for each entry of a (k, k) matrix its position in the packed upper triangle."""
-    places = np.zeros((k, k), dtype=np.intp)
-    rows, columns = np.triu_indices(k)
-    places[rows, columns] = places[columns, rows] = np.arange(rows.size)
-    return places

@@ -20,6 +20,7 @@ from mixbridge.moments.closed import LOSS_LIMIT, Moments
 from mixbridge.moments.factors import eigen_factor, factor_from_products, factor_from_rows, stack_factors
 from mixbridge.moments.growing import BLOCK_ROWS, entries_of
 from mixbridge.moments.opened import _loss, _products, _refuse_non_finite, add_by_unit
+from mixbridge.panel.streaming_rows import CELLS
 from mixbridge.sources.checkpoint import State
 
 __all__ = ["SizeClass", "SortedClasses", "SortedFactor"]
@@ -27,7 +28,7 @@ __all__ = ["SizeClass", "SortedClasses", "SortedFactor"]
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.intp]
 WAITING = 2**16
-"""Units whose means wait to go into their classes together."""
+"""Units whose means wait to go into their classes together; fewer where there are many columns."""
 
 
 class SizeClass:
@@ -126,7 +127,7 @@ class SortedClasses:
         self.units += len(means)
         self._waiting.append((counts, means))
         self._number += len(means)
-        if self._number >= WAITING:
+        if self._number >= min(WAITING, CELLS // self.width):
             self._settle()
 
     def _settle(self) -> None:

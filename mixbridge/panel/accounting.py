@@ -2,11 +2,33 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import pandas as pd
 
-__all__ = ["Accounting"]
+__all__ = ["Accounting", "ByUnit"]
+
+
+@dataclass(frozen=True, slots=True)
+class ByUnit:
+    """How dropped rows are spread over units; rows without a unit are in no unit.
+
+    Parameters
+    ----------
+    units_given : int
+        Units with at least one row in the data.
+    units_without_usable_row : int
+        Those that lost all their rows.
+    units_with_dropped_rows : int
+        Those that lost some rows and kept some.
+    most_rows_dropped : int
+        Most rows lost by one of these.
+    """
+
+    units_given: int
+    units_without_usable_row: int
+    units_with_dropped_rows: int
+    most_rows_dropped: int
 
 
 @dataclass(frozen=True, slots=True)
@@ -27,6 +49,8 @@ class Accounting:
         Missing values of each column used, whether or not the row was dropped for another cause first.
     notes : tuple of str
         What was done with the columns on the way, for example levels left out because no row used has them.
+    by_unit : ByUnit or None
+        How dropped rows are spread over units, where it was counted; it takes no part in comparisons.
     """
 
     rows_given: int
@@ -34,6 +58,7 @@ class Accounting:
     dropped: tuple[tuple[str, str, int], ...] = ()
     missing: tuple[tuple[str, int], ...] = ()
     notes: tuple[str, ...] = ()
+    by_unit: ByUnit | None = field(default=None, compare=False)
 
     @property
     def rows_dropped(self) -> int:

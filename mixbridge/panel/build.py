@@ -22,6 +22,7 @@ from mixbridge.panel.formula import parse_formula
 from mixbridge.panel.readings import factor_columns, make_environment, read_factors
 from mixbridge.panel.record import HeldPanel
 from mixbridge.panel.roles import check_role, periods_of, units_of
+from mixbridge.panel.unit_losses import losses_by_unit
 from mixbridge.sources import Source, open_source
 
 __all__ = ["build_panel"]
@@ -152,7 +153,11 @@ def build_panel(
         period_ordinals=ordinals,
         period_note=note,
         row_labels=labels,
-        accounting=replace(account, notes=_notes(columns, covariates)),
+        accounting=replace(
+            account,
+            notes=_notes(columns, covariates),
+            by_unit=losses_by_unit(frame[unit], rows, unit_keys),
+        ),
         design=design,
         response=response,
     )

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from contextlib import closing
 from dataclasses import dataclass, replace
 from typing import Any, Literal
@@ -120,11 +120,14 @@ def learn_all(
         else:
             walked = passes.saved_over(plan, stages, one_pass, one_pass, _First(book, gather, one_pass))
         with closing(walked) as rows:
-            for step, z in rows:
+            for step, laid_out in rows:
                 codes = book.take(step)
                 unsettled |= step.unsettled
-                if z is not None and gather is not None:
-                    gather.add(codes, z)
+                start = 0
+                for z in laid_out or ():
+                    assert gather is not None, "rows are laid out for it only"
+                    gather.add(codes[start : start + len(z)], z)
+                    start += len(z)
         if not book.given:
             raise DataError("The data have no rows.")
         account = book.account()
@@ -159,7 +162,7 @@ class _First:
         return self.book.restore(state["book"])
 
 
-def _alone(step: Step) -> tuple[Step, FloatArray | None]:
+def _alone(step: Step) -> tuple[Step, Iterable[FloatArray] | None]:
     return step, None
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from contextlib import closing
 from dataclasses import dataclass, field, replace
 from typing import TypeVar
@@ -18,7 +18,7 @@ from mixbridge.panel.design import Design
 from mixbridge.panel.streaming_learn import Lesson, filled
 from mixbridge.panel.streaming_order import Order
 from mixbridge.panel.streaming_passes import Pass, Passes
-from mixbridge.panel.streaming_rows import Gather, values_of, z_of
+from mixbridge.panel.streaming_rows import Gather, pieces, values_of, z_pieces
 from mixbridge.panel.streaming_runs import NotSortedError, Runs
 from mixbridge.panel.streaming_walk import Plan, Step
 from mixbridge.sources.checkpoint import State
@@ -191,18 +191,21 @@ class StreamedPanel(Apart):
         codes : numpy.ndarray of int
             Units numbered by order of first appearance.
         z : numpy.ndarray
-            As `mixbridge.panel.streaming_rows.z_of`.
+            As `mixbridge.panel.streaming_rows.z_of`; a chunk in several pieces if it is large.
         """
 
-        def make(step: Step) -> FloatArray:
+        def make(step: Step) -> Iterable[FloatArray]:
             learned = {
                 factor: filled(self.lesson, factor, value) for factor, value in values_of(step).items()
             }
             factors = [learned[factor] for factor in self.plan.formula.factors]
-            return z_of(self.design, factors, learned[self.plan.formula.outcome], step.used)
+            return z_pieces(self.design, factors, learned[self.plan.formula.outcome], step.used)
 
-        for codes, _, z in self._over(make, what, by_appearance=True, gather=gather):
-            yield codes, z
+        for codes, _, laid_out in self._over(make, what, by_appearance=True, gather=gather):
+            start = 0
+            for z in laid_out:
+                yield codes[start : start + len(z)], z
+                start += len(z)
 
     def difference_rows(self, step: int, rows: int = 8192) -> Iterator[FloatArray]:
         """Yield differences of rows of a unit that are so many period steps apart and next to each other.
@@ -242,18 +245,18 @@ class StreamedPanel(Apart):
         if rows < 1:
             raise OptionError(f"rows={rows!r}: a block has at least one row.")
 
-        def make(step: Step) -> list[tuple[FloatArray, FloatArray]]:
+        def make(step: Step) -> Iterable[tuple[FloatArray, FloatArray]]:
             learned = {
                 factor: filled(self.lesson, factor, value) for factor, value in values_of(step).items()
             }
             factors = tuple(learned[factor] for factor in self.plan.formula.factors)
             design, response = replace(self.design, factors=factors), learned[self.plan.formula.outcome]
-            made = []
-            for start in range(0, step.used, rows):
-                stop = min(start + rows, step.used)
+
+            def lay_out(start: int, stop: int) -> tuple[FloatArray, FloatArray]:
                 y = np.ascontiguousarray(np.asarray(response.block(start, stop), dtype=np.float64)[:, 0])
-                made.append((design.block(start, stop), y))
-            return made
+                return design.block(start, stop), y
+
+            return pieces(lay_out, step.used, len(self.names) + 1, rows)
 
         for codes, periods, made in self._over(make, what, by_appearance=False):
             start = 0

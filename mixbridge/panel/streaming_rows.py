@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import replace
-from typing import Protocol
+from typing import Protocol, TypeVar
 
 import numpy as np
 import numpy.typing as npt
@@ -16,10 +16,13 @@ from mixbridge.panel.factors import Plain, Stored
 from mixbridge.panel.streaming_walk import Labels, Plan, Step, Value
 from mixbridge.sources.checkpoint import State
 
-__all__ = ["Gather", "OnePass", "values_of", "z_of"]
+__all__ = ["Gather", "OnePass", "pieces", "values_of", "z_of", "z_pieces"]
 
 FloatArray = npt.NDArray[np.float64]
 CodeArray = npt.NDArray[np.intp]
+Made = TypeVar("Made")
+CELLS = 2**22
+"""Values of rows that are laid out at once."""
 _ROWS = 16384
 """Rows laid out at once: they stay in the cache while one column after the other is written."""
 
@@ -44,6 +47,27 @@ class Gather(Protocol):
         ...
 
 
+def pieces(
+    lay_out_rows: Callable[[int, int], Made], rows: int, columns: int, most: int | None = None
+) -> Iterable[Made]:
+    """Lay out rows in pieces: at once if they are not large, else each when it is asked for.
+
+    Parameters
+    ----------
+    lay_out_rows : callable
+        Takes the first row and the one after the last.
+    rows, columns : int
+    most : int, optional
+        Most rows of a piece; as many as make a piece of `CELLS` values unless given.
+    """
+    step = max(1, CELLS // columns)
+    step = step if most is None else min(step, most)
+    bounds = [(start, min(start + step, rows)) for start in range(0, rows, step)]
+    if rows * columns <= CELLS:
+        return [lay_out_rows(*each) for each in bounds]
+    return (lay_out_rows(*each) for each in bounds)
+
+
 def z_of(design: Design, factors: Sequence[Learned], response: Learned, rows: int) -> FloatArray:
     """Lay out rows.
 
@@ -62,17 +86,33 @@ def z_of(design: Design, factors: Sequence[Learned], response: Learned, rows: in
     numpy.ndarray of shape (rows, k + 1)
         Design columns but the explicit constant, the outcome, and one.
     """
-    recipe = [pieces for j, pieces in enumerate(design.recipe) if j != design.constant]
-    z = np.empty((rows, len(recipe) + 2))
-    for start in range(0, rows, _ROWS):
-        stop = min(start + _ROWS, rows)
+    return z_between(design, factors, response, 0, rows)
+
+
+def z_pieces(
+    design: Design, factors: Sequence[Learned], response: Learned, rows: int
+) -> Iterable[FloatArray]:
+    """Lay out rows as `z_of`, in pieces that are not large."""
+    return pieces(
+        lambda start, stop: z_between(design, factors, response, start, stop), rows, len(design.recipe) + 2
+    )
+
+
+def z_between(
+    design: Design, factors: Sequence[Learned], response: Learned, begin: int, end: int
+) -> FloatArray:
+    """Lay out the rows between two as `z_of`."""
+    recipe = [parts for j, parts in enumerate(design.recipe) if j != design.constant]
+    z = np.empty((end - begin, len(recipe) + 2))
+    for start in range(begin, end, _ROWS):
+        stop = min(start + _ROWS, end)
         values = [factor.block(start, stop) for factor in factors]
-        out = z[start:stop]
-        for j, pieces in enumerate(recipe):
+        out = z[start - begin : stop - begin]
+        for j, parts in enumerate(recipe):
             column = out[:, j]
-            if not pieces:
+            if not parts:
                 column.fill(1.0)
-            for i, piece in enumerate(pieces):
+            for i, piece in enumerate(parts):
                 value = values[piece.place]
                 part = value[:, piece.column] if piece.values is None else piece.values[value]
                 if i:
@@ -105,8 +145,8 @@ class OnePass:
         self._design: Design | None = None
         self.possible = True
 
-    def __call__(self, step: Step) -> tuple[Step, FloatArray | None]:
-        """Return the step, and its rows laid out or None."""
+    def __call__(self, step: Step) -> tuple[Step, Iterable[FloatArray] | None]:
+        """Return the step, and its rows laid out in pieces or None."""
         if not (self.possible and step.used):
             return step, None
         values = values_of(step)
@@ -119,7 +159,7 @@ class OnePass:
         if learned is None:
             return step, None
         factors = [learned[factor] for factor in self._plan.formula.factors]
-        return step, z_of(self._design, factors, learned[self._plan.formula.outcome], step.used)
+        return step, z_pieces(self._design, factors, learned[self._plan.formula.outcome], step.used)
 
     def __str__(self) -> str:
         """Return what the pass turns out to be for."""

@@ -27,7 +27,7 @@ from mixbridge.reconcile.path_text import path_sentences
 from mixbridge.routes import Fit, Profile, fit_route
 from mixbridge.routes.likelihood import Kind
 
-__all__ = ["Path", "coefficient_path"]
+__all__ = ["Path", "changes_of_answer", "coefficient_path", "range_inside"]
 
 FloatArray = NDArray[np.float64]
 SIGNS = {1: "above zero", -1: "below zero", 0: "holding zero"}
@@ -201,7 +201,7 @@ def coefficient_path(
     width = float(scipy.stats.norm.isf(0.5 * (1.0 - confidence))) if quantile is None else float(quantile)
     seen = along(curve, search_grid(curve, 2 * points))
     turns = extrema(curve, seen, at)
-    changes = _changes(curve, seen, at, width)
+    changes = changes_of_answer(curve, seen, at, width)
     why = no_pivot(curve)
     allowed = None if why is not None else pivot_of(curve).ratio_set(confidence)
     places = tuple(
@@ -231,13 +231,14 @@ def coefficient_path(
         allowed=allowed,
         why_none=why or "",
         range_all=(float(values.min()), float(values.max())),
-        range_allowed=_range_inside(curve, allowed, turns, at),
+        range_allowed=range_inside(curve, allowed, turns, at),
         changes=tuple(changes),
         searched=len(seen.psi),
     )
 
 
-def _range_inside(curve: Curve, allowed: RatioSet | None, turns: list[float], at: int) -> tuple[float, float]:
+def range_inside(curve: Curve, allowed: RatioSet | None, turns: list[float], at: int) -> tuple[float, float]:
+    """Return the lowest and highest coefficient over the exact set, NaN where there is none."""
     if allowed is None or allowed.empty:
         return np.nan, np.nan
     inside = [psi for psi in turns if allowed.lower < psi < allowed.upper]
@@ -259,8 +260,8 @@ def _deviance(curve: Curve, fits: Mapping[str, Fit], kind: Kind, psi: FloatArray
     return values
 
 
-def _changes(curve: Curve, seen: Along, at: int, quantile: float) -> list[tuple[float, int, int]]:
-    """Return where an end of the interval crosses zero."""
+def changes_of_answer(curve: Curve, seen: Along, at: int, quantile: float) -> list[tuple[float, int, int]]:
+    """Return where an end of the interval crosses zero: ratio, sign below it, sign above it."""
 
     def sign(psi: float) -> int:
         one = along(curve, np.array([psi]))

@@ -1,4 +1,8 @@
-"""The methods appendix: composed from the record of a study, rendered in the format that the file name asks for."""
+"""The methods appendix: composed from the record of a study, rendered in the format that the file name asks for.
+
+What it holds follows published guidance on reporting such models (named here from memory): Jackson 2010 on multilevel
+models, Meteyard & Davies 2020 on mixed-effects models, and the STROBE statement on observational studies.
+"""
 
 from __future__ import annotations
 
@@ -110,31 +114,36 @@ def compose(
         raise OptionError.not_among("chosen_beforehand", chosen_beforehand, (None, True, False))
     words = words_for(audience)
     blocks: list[Block] = [Paragraph(paragraph_of(record, words))]
-    if length == "page":
+    if length == "paragraph":
+        blocks.append(Paragraph(sections.chosen_text(record, chosen_beforehand)))
+    elif length == "page":
         blocks += _page(record, words, chosen_beforehand)
-    elif length == "full":
+    else:
         blocks += _full(record, words, chosen_beforehand, pictures)
     blocks += sections.limits_section(record)
     if length != "paragraph":
-        blocks += sections.software_section(record, words)
-        blocks += sections.references_section(record)
+        blocks += sections.software_section(record)
+    blocks += sections.references_section(blocks)
     return Document(title, tuple(blocks))
 
 
 def _page(record: Record, words: Words, chosen_beforehand: bool | None) -> list[Block]:
     return [
-        *sections.model_section(record, words)[:4],
-        *sections.estimator_section(record, words, chosen_beforehand),
-        *sections.coefficient_section(record, words, robust=False),
+        *sections.model_text(record, words),
+        Heading("Rows and units"),
+        Paragraph(sections.rows_text(record)),
+        *sections.estimator_text(record, words, chosen_beforehand),
+        *sections.coefficient_text(record, words),
+        *sections.component_text(record, words),
     ]
 
 
 def _full(
     record: Record, words: Words, chosen_beforehand: bool | None, pictures: tuple[Picture, ...]
 ) -> list[Block]:
-    figures: tuple[Block, ...] = (Heading("Figures"), *pictures) if pictures else ()
     return [
         *sections.model_section(record, words),
+        *sections.vocabulary_section(),
         *sections.data_section(record, words),
         *sections.estimator_section(record, words, chosen_beforehand),
         *sections.coefficient_section(record, words),
@@ -147,7 +156,8 @@ def _full(
         *sections.identity_section(record, words),
         *sections.audit_section(record, words),
         *sections.sensitivity_section(record, words),
-        *figures,
+        *([Heading("Figures")] if pictures else []),
+        *pictures,
     ]
 
 

@@ -1,8 +1,7 @@
 """Sentences that never get lost: one list, each with the claim it guards and the condition under which it is said.
 
-They are composed from the numbers of a record and stand, word for word, at every length, for every audience
-and in every
-format of the appendix.
+They are composed from the numbers of a record and stand, word for word, at every length, for every audience and in
+every format of the appendix.
 """
 
 from __future__ import annotations
@@ -11,9 +10,11 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Any
 
-from mixbridge.report.words import count, num
+from mixbridge.report.contrast import contrast_row
+from mixbridge.report.words import count, num, said_p
+from mixbridge.routes import REFERENCE_ROUTES
 
-__all__ = ["FEW_UNITS", "SENTENCES", "Sentence", "sentences_for"]
+__all__ = ["FEW_UNITS", "LEVEL", "SENTENCES", "Sentence", "sentences_for"]
 
 FEW_UNITS = 30
 """Units below which references are called rough (common practice)."""
@@ -33,78 +34,100 @@ class Sentence:
     key : str
     guards : str
         The claim that it limits.
+    when : str
+        The condition on the numbers of the study under which it is said.
+    flips : str
+        What it becomes when the numbers turn; empty where nothing turns it.
     say : callable
         Takes a record; returns the sentence, or None where the claim is not made.
     """
 
     key: str
     guards: str
+    when: str
+    flips: str
     say: Callable[[Record], str | None]
 
 
 def _together(record: Record) -> str:
     summary = record["summary"]
-    differ = summary["other_routes_visible"] + summary["other_routes_conflicting"]
-    if differ == 0:
-        first = "The random-effects routes agree with the primary one in every term, "
-    else:
+    if not summary["other_routes"]:
+        return (
+            "One random-effects route stands alone here; others would share its covariance model and would "
+            "agree with it "
+            "also when that is wrong, so that agreement is no evidence for the model."
+        )
+    if summary["other_routes_visible"] + summary["other_routes_conflicting"]:
         first = "The random-effects routes do not all agree with the primary one, "
+    elif summary["other_routes_identical"] + summary["other_routes_immaterial"]:
+        first = "The random-effects routes agree with the primary one in every term that can be compared, "
+    else:
+        first = "The random-effects routes cannot be compared with the primary one in any term, "
     return (
-        f"{first}and all of them share one covariance model: they agree together when it is wrong, so "
-        "that agreement is no "
+        f"{first}and all of them share one covariance model: they agree together when it is wrong, so that "
+        "agreement is no "
         "evidence for the model."
     )
 
 
 def _arithmetic(record: Record) -> str | None:
-    summary = record["summary"]
-    if summary["identities_fail"]:
+    hold, fail = record["summary"]["identities_hold"], record["summary"]["identities_fail"]
+    if fail:
         return (
-            f"{count(summary['identities_fail'], 'identity', 'identities')} that must hold "
-            f"{'fails' if summary['identities_fail'] == 1 else 'fail'}: the arithmetic on these data "
-            "cannot be relied on "
-            "until the reason is found."
+            f"{count(fail, 'identity', 'identities')} that must hold {'fails' if fail == 1 else 'fail'}: the "
+            "arithmetic on "
+            "these data cannot be relied on until the reason is found."
         )
-    if not summary["identities_hold"]:
+    if not hold:
         return None
+    verbs = ("holds", "it checks") if hold == 1 else ("hold", "they check")
     return (
-        f"{count(summary['identities_hold'], 'identity', 'identities')} of theory hold on these data; "
-        "they check the "
-        "arithmetic, not the model."
+        f"{count(hold, 'identity', 'identities')} of theory {verbs[0]} on these data; {verbs[1]} the "
+        "arithmetic, not the "
+        "model."
     )
 
 
 def _contrast(record: Record) -> str | None:
-    rows = record["contrasts"].get("rows", [])
-    row = next(
-        (
-            row
-            for row in rows
-            if row["contrast"] == "within - gls" and row["variance"] == "one idiosyncratic variance"
-        ),
-        None,
-    )
-    if row is None or not isinstance(row["p_value"], float):
+    row = contrast_row(record)
+    if row is None:
         return None
-    p = num(row["p_value"], 3)
+    p = f"{said_p(row['p_value'])}, level {LEVEL:g}"
     if row["p_value"] <= LEVEL:
         return (
-            f"The contrast of within and generalised least-squares slopes rejects (p = {p}): the two "
-            "differ by more than "
+            f"The contrast of within and generalised least-squares slopes rejects ({p}): the two differ by "
+            "more than "
             "sampling error, which does not say why and does not make the within slopes causal."
         )
     return (
-        f"The contrast of within and generalised least-squares slopes does not reject (p = {p}); not "
-        "rejecting proves "
-        "nothing, in particular not that unit effects are unrelated to the covariates."
+        f"The contrast of within and generalised least-squares slopes does not reject ({p}); not rejecting "
+        "proves nothing, "
+        "in particular not that unit effects are unrelated to the covariates."
     )
+
+
+def _rejecting(record: Record) -> str:
+    found = record["audit"]
+    tests, reject = found.get("tests", 0), found.get("tests_rejecting", 0)
+    if not tests:
+        return "A test that does not reject proves nothing; assumptions that no test looked at are not thereby met."
+    if not reject:
+        return (
+            f"Of {count(tests, 'test')} of assumptions none rejects at {found['level']:g}; that proves "
+            "nothing for the "
+            "assumptions."
+        )
+    text = f"Of {count(tests, 'test')} of assumptions {reject} {'rejects' if reject == 1 else 'reject'} at "
+    if reject == tests:
+        return f"{text}{found['level']:g}; had one not rejected, that would have proved nothing."
+    return f"{text}{found['level']:g}; that the others do not proves nothing for the assumptions."
 
 
 def _pretest(record: Record) -> str:
     return (
         "Testing first and choosing the estimator by the result distorts size and coverage (Guggenberger "
-        "2010); no test "
-        "here chose one."
+        "2010); this "
+        "program chooses none by a test."
     )
 
 
@@ -118,44 +141,44 @@ def _contextual(record: Record) -> str | None:
     )
 
 
-def _causal(record: Record) -> str:
+def _causal(record: Record) -> str | None:
+    if record["inference"]["status"] != "computed":
+        return None
     return (
-        "Coefficients are associations given the covariates in the model; causal claims need more "
-        "than this analysis."
+        "Coefficients are associations given the covariates in the model; causal claims need more than this "
+        "analysis."
     )
 
 
 def _icc(record: Record) -> str | None:
     fit = record["fits"][record["primary"]]
-    if not isinstance(fit["icc"], float) or fit["ratio"] == "inf":
+    if record["primary"] in REFERENCE_ROUTES or not isinstance(fit["icc"], float):
         return None
-    return (
-        f"The intraclass correlation, {num(fit['icc'], 3)}, is conditional on the covariates: it "
-        "changes with them."
-    )
+    return f"The intraclass correlation, {num(fit['icc'], 3)}, is conditional on the covariates: it changes with them."
 
 
 def _kurtosis(record: Record) -> str | None:
-    if record["component_intervals"]["status"] != "computed":
+    rows = record["component_intervals"].get("rows", [])
+    if not any(row["lower"] is not None or row["upper"] is not None for row in rows):
         return None
     return (
-        "Intervals and standard errors of the variance components rest on normality and are fragile to "
-        "kurtosis, also those "
+        "Intervals and standard errors of variances rest on normality and are fragile to kurtosis, also those "
         "called exact."
     )
 
 
 def _units(record: Record) -> str:
     units = record["accounting"]["units"]
+    verb = "is" if units == 1 else "are"
     if units < FEW_UNITS:
         return (
-            f"There are {count(units, 'unit')}: few, so that every reference that is not exact is rough, "
+            f"There {verb} {count(units, 'unit')}: few, so that every reference that is not exact is rough, "
             "most of all for "
             "covariates that vary between units."
         )
     return (
-        f"There are {count(units, 'unit')}; what varies between units rests on that number, not on the "
-        "number of rows."
+        f"There {verb} {count(units, 'unit')}; what varies between units rests on that number, not on the number "
+        "of rows."
     )
 
 
@@ -164,7 +187,11 @@ def _dropped(record: Record) -> str:
     causes = account["dropped"]
     if causes:
         lost = ", ".join(f"{rows} {cause} ({column})" for cause, column, rows in causes)
-        first = f"Of {account['rows_given']} rows {account['rows_used']} were used; dropped: {lost}."
+        first = (
+            f"Of {account['rows_given']} rows {account['rows_used']} were used; dropped: {lost}. If rows are "
+            "missing for "
+            "reasons that go with the outcome, every route can be biased."
+        )
     else:
         first = f"All {account['rows_used']} rows were used."
     one = account["one_row_units"]
@@ -179,15 +206,15 @@ def _size(record: Record) -> str | None:
     if len(sizes) < 2:
         return None
     return (
-        f"Units have from {sizes[0]} to {sizes[-1]} rows; unit size may carry information, and routes "
-        "weight large and "
+        f"Units have from {sizes[0]} to {sizes[-1]} rows; unit size may carry information, and routes weight "
+        "large and "
         "small units differently."
     )
 
 
 def _zero(record: Record) -> str | None:
     fit = record["fits"][record["primary"]]
-    if fit["ratio"] != 0.0 or record["primary"] == "pooled":
+    if fit["ratio"] != 0.0 or record["primary"] in REFERENCE_ROUTES:
         return None
     raw = fit["unit_variance_raw"]
     start = (
@@ -196,26 +223,43 @@ def _zero(record: Record) -> str | None:
         else "The estimate of the unit variance is zero"
     )
     return (
-        f"{start}; at zero, small-sample adjustments are not defined as usual, and zero is not known "
-        "to be the truth."
+        f"{start}; at zero, small-sample adjustments are not defined as usual, and zero is not known to be the "
+        "truth."
     )
 
 
 def _negative(record: Record) -> str:
-    return "A negative correlation within units lies outside the model."
+    below = record["summary"]["routes_below_zero"]
+    start = "A negative correlation within units lies outside the model"
+    if not below:
+        return f"{start}."
+    how_many = f"{below} route estimates" if below == 1 else f"{below} routes estimate"
+    return f"{start}; {how_many} a unit variance below zero here, as such a correlation would make it."
 
 
 def _scope(record: Record) -> str:
+    return "Sampling weights, binary and count outcomes, and random slopes are outside the scope of this analysis."
+
+
+def _matched(record: Record) -> str:
     return (
-        "Sampling weights, binary and count outcomes, and random slopes are outside the scope of this "
-        "analysis."
+        "A printed figure that some route here reproduces is compatible with that route; that shows not "
+        "where the figure "
+        "came from, and never intent."
     )
 
 
 def _verified(record: Record) -> str:
+    return "That a record is verified shows that its figures follow from its moments, not that the moments are honest."
+
+
+def _disclosure(record: Record) -> str | None:
+    if record["influence"]["status"] != "computed":
+        return None
     return (
-        "That a record is verified shows that its figures follow from its moments, not that the "
-        "moments are honest."
+        "No unit is named here: who was influential may disclose a confidential unit, and with few units the "
+        "size of its "
+        "influence may too."
     )
 
 
@@ -224,22 +268,72 @@ def _health(record: Record) -> str:
 
 
 SENTENCES: tuple[Sentence, ...] = (
-    Sentence("together", "routes agree, or do not", _together),
-    Sentence("arithmetic", "identities hold", _arithmetic),
-    Sentence("contrast", "a contrast test rejects, or does not", _contrast),
-    Sentence("pretest", "a test is shown beside estimators", _pretest),
-    Sentence("contextual", "unit means are in the model", _contextual),
-    Sentence("causal", "a coefficient is printed", _causal),
-    Sentence("icc", "an intraclass correlation is printed", _icc),
-    Sentence("kurtosis", "an interval of a variance is printed", _kurtosis),
-    Sentence("units", "a reference distribution is used", _units),
-    Sentence("dropped", "rows were used", _dropped),
-    Sentence("size", "units differ in size", _size),
-    Sentence("zero", "the unit variance is estimated as zero", _zero),
-    Sentence("negative", "the unit variance is a variance", _negative),
-    Sentence("scope", "the model fits the question", _scope),
-    Sentence("verified", "the record can be verified", _verified),
-    Sentence("health", "somebody decides by this", _health),
+    Sentence(
+        "together",
+        "routes agree, or do not",
+        "always",
+        "says that routes do not all agree where one is visibly apart or in conflict, that one stands alone "
+        "where it does",
+        _together,
+    ),
+    Sentence(
+        "arithmetic",
+        "identities hold",
+        "an identity holds or fails",
+        "a failing identity takes the place of those that hold",
+        _arithmetic,
+    ),
+    Sentence(
+        "contrast",
+        "a contrast test rejects, or does not",
+        "the contrast of within and GLS slopes has a p value",
+        "by the p value against the level",
+        _contrast,
+    ),
+    Sentence(
+        "rejecting",
+        "tests of assumptions are shown",
+        "always",
+        "counts those that reject; says so where all or none were computed",
+        _rejecting,
+    ),
+    Sentence("pretest", "a test is shown beside estimators", "always", "", _pretest),
+    Sentence(
+        "contextual", "unit means are in a model", "unit means or a projection were fitted", "", _contextual
+    ),
+    Sentence("causal", "a coefficient is printed", "the primary route has coefficients", "", _causal),
+    Sentence("icc", "an intraclass correlation is printed", "the primary route has a finite ratio", "", _icc),
+    Sentence(
+        "kurtosis", "an interval of a variance is printed", "component intervals were computed", "", _kurtosis
+    ),
+    Sentence("units", "a reference distribution is used", "always", f"few below {FEW_UNITS} units", _units),
+    Sentence(
+        "dropped",
+        "rows were used",
+        "always",
+        "lists causes where rows were dropped, and counts one-row units where there are some",
+        _dropped,
+    ),
+    Sentence("size", "units are weighted", "units differ in size", "", _size),
+    Sentence(
+        "zero",
+        "the unit variance is estimated as zero",
+        "the ratio of the primary route is zero",
+        "names the negative value where a moment estimator was truncated",
+        _zero,
+    ),
+    Sentence(
+        "negative",
+        "the unit variance is a variance",
+        "always",
+        "counts routes whose unit variance came out below zero",
+        _negative,
+    ),
+    Sentence("scope", "the model fits the question", "always", "", _scope),
+    Sentence("matched", "a printed figure is reproduced", "always", "", _matched),
+    Sentence("verified", "the record can be verified", "always", "", _verified),
+    Sentence("disclosure", "influence of units is printed", "units were deleted in turn", "", _disclosure),
+    Sentence("health", "somebody decides by this", "always", "", _health),
 )
 """All of them, in the order in which they are printed."""
 

@@ -8,7 +8,9 @@ from typing import Any
 from mixbridge.report.estimators import estimator_of
 from mixbridge.report.sections.agreement import agreement_sentence
 from mixbridge.report.sections.assumptions import exogeneity_sentence
-from mixbridge.report.words import Words, count, num, words_for
+from mixbridge.report.sections.model import named_model
+from mixbridge.report.words import Words, capital, count, listed, num, words_for
+from mixbridge.routes import REFERENCE_ROUTES
 
 __all__ = ["methods_paragraph", "paragraph_of"]
 
@@ -33,33 +35,61 @@ def methods_paragraph(study: Any, *, audience: str = "both") -> str:
 
 def paragraph_of(record: Record, words: Words) -> str:
     """Return model, rows, estimator, components, agreement and exogeneity as one paragraph."""
-    account, primary = record["accounting"], record["primary"]
-    fit = record["fits"][primary]
-    sizes = record["moments"]["sizes"]
-    each = f"{count(sizes[0], 'row')} each" if len(sizes) == 1 else f"{sizes[0]} to {sizes[-1]} rows each"
-    sentences = [
-        f"{record['moments']['outcome']} was modelled by {words.model}, {record['formula']}, with one "
-        f"{words.effect} per "
-        f"{record['unit']}, on {account['rows_used']} of {account['rows_given']} rows in "
-        f"{count(account['units'], 'unit')} ({each}).",
-        f"The reported estimates are by {estimator_of(primary).name} ({primary}; {fit['status']}).",
+    found = [
+        _model(record, words),
+        _estimator(record),
+        _components(record, words),
+        agreement_sentence(record),
+        exogeneity_sentence(record, words),
+        None if record["added"] is None else capital(record["added"]["statement"]),
+        f"Computed with mixbridge {record['software']['mixbridge']}.",
     ]
-    if fit["idiosyncratic_variance"] is not None and isinstance(fit["ratio"], float):
-        sentences.append(
-            f"The {words.unit_variance} is {num(fit['unit_variance'])}, the {words.idiosyncratic_variance} "
-            f"{num(fit['idiosyncratic_variance'])}, and the intraclass correlation given the covariates "
-            f"{num(fit['icc'], 3)}."
-        )
-    if record["inference"]["status"] == "computed":
-        level = f"{100.0 * record['confidence']:g}"
-        sentences.append(
-            f"Intervals ({level}%) use the covariance of the model and {record['reference']} references."
-        )
-    sentences.append(agreement_sentence(record))
-    contrast = exogeneity_sentence(record, words)
-    if contrast is not None:
-        sentences.append(contrast)
-    if record["added"] is not None:
-        sentences.append(record["added"]["statement"])
-    sentences.append(f"Computed with mixbridge {record['software']['mixbridge']}.")
-    return " ".join(sentences)
+    return " ".join(text for text in found if text)
+
+
+def _model(record: Record, words: Words) -> str:
+    account, sizes = record["accounting"], record["moments"]["sizes"]
+    given, used = account["rows_given"], account["rows_used"]
+    rows = f"all {used} rows" if given == used else f"{used} of {given} rows"
+    if account["dropped"]:
+        rows += f" ({listed([_lost(*entry) for entry in account['dropped']])} dropped)"
+    each = f"{count(sizes[0], 'row')} each" if len(sizes) == 1 else f"{sizes[0]} to {sizes[-1]} rows each"
+    model, effect = named_model(record, words)
+    return (
+        f"{record['moments']['outcome']} was modelled by {model}, {record['formula']}, with one {effect} per "
+        f"{record['unit']}, on {rows} in {count(account['units'], 'unit')} ({each})."
+    )
+
+
+def _lost(cause: str, column: str, rows: int) -> str:
+    """Return ``3 with missing covariate forage``."""
+    return f"{rows} with {cause}" if cause.endswith(column) else f"{rows} with {cause} {column}"
+
+
+def _estimator(record: Record) -> str:
+    primary, fit = record["primary"], record["fits"][record["primary"]]
+    status = "" if fit["status"] == "fitted" else f" ({fit['status']})"
+    found = record["inference"]
+    if found["status"] != "computed":
+        return f"The route reported is {estimator_of(primary).name}{status}; it gave no coefficients."
+    rule = (
+        "the degrees of freedom of their residuals"
+        if primary in REFERENCE_ROUTES
+        else "Satterthwaite degrees of freedom"
+    )
+    return (
+        f"Estimates are by {estimator_of(primary).name}{status}; {100.0 * record['confidence']:g}% intervals "
+        "rest on the "
+        f"covariance of the model and t distributions with {rule}."
+    )
+
+
+def _components(record: Record, words: Words) -> str | None:
+    fit = record["fits"][record["primary"]]
+    if record["primary"] in REFERENCE_ROUTES or not isinstance(fit["icc"], float):
+        return None
+    return (
+        f"The {words.unit_variance} is {num(fit['unit_variance'])}, the {words.idiosyncratic_variance} "
+        f"{num(fit['idiosyncratic_variance'])}, and the intraclass correlation given the covariates "
+        f"{num(fit['icc'], 3)}."
+    )

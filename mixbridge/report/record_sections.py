@@ -6,7 +6,9 @@ rows or the means of units stands apart, under a status of its own, since a reco
 
 from __future__ import annotations
 
+import platform
 from collections.abc import Callable
+from dataclasses import replace
 from importlib.metadata import PackageNotFoundError, version
 from typing import Any
 
@@ -15,28 +17,49 @@ import numpy as np
 from mixbridge.audit import audit
 from mixbridge.errors import MixbridgeError
 from mixbridge.inference.references import default_rule, pick_reference
+from mixbridge.panel.absent import Apart, RowlessPanel
+from mixbridge.reconcile.path_ranges import coefficient_ranges
 from mixbridge.report.plain import plain, plain_table
 from mixbridge.routes import REFERENCE_ROUTES, Fit
 
-__all__ = ["COMPUTED", "added_columns", "inference_rows", "sections_of", "software", "summary_of"]
+__all__ = [
+    "COMPUTED",
+    "added_columns",
+    "inference_rows",
+    "rows_at_hand",
+    "sections_of",
+    "software",
+    "summary_of",
+]
 
 COMPUTED = "computed"
 PACKAGES = ("mixbridge", "numpy", "scipy", "pandas", "patsy", "statsmodels")
 WIDEST = 6
 """Terms whose widest gap is attributed, at most."""
+MOST_PATHS = 40
+"""Terms that are followed over the variance ratio, at most."""
+AUDIT_SEED = 20_080
+"""Of the reference laws that the audit draws."""
 
 Part = dict[str, Any]
 
 
 def software() -> dict[str, str]:
-    """Return the versions of this package and of those that compute for it."""
-    found = {}
+    """Return the versions of Python, of this package and of those that compute for it."""
+    found = {"python": platform.python_version()}
     for name in PACKAGES:
         try:
             found[name] = version(name)
         except PackageNotFoundError:
             found[name] = "not installed"
     return found
+
+
+def rows_at_hand(study: Any) -> str:
+    """Return ``held``, ``in chunks`` (read, never held together) or ``absent`` (only moments are at hand)."""
+    if isinstance(study.panel, RowlessPanel):
+        return "absent"
+    return "in chunks" if isinstance(study.panel, Apart) else "held"
 
 
 def sections_of(study: Any) -> dict[str, Part]:
@@ -59,6 +82,7 @@ def sections_of(study: Any) -> dict[str, Part]:
         "contrasts": _contrasts,
         "contrasts_robust": _contrasts_robust,
         "unit_means": _unit_means,
+        "projection": _projection,
         "attributions": _attributions,
         "paths": _paths,
         "without_singletons": _without_singletons,
@@ -82,6 +106,7 @@ def summary_of(study: Any) -> dict[str, Any]:
     found: dict[str, Any] = {"other_routes": int(votes["route"].nunique()), "terms": counts}
     for name in ("identical", "immaterial", "visible", "conflicting"):
         found[f"other_routes_{name}"] = int((votes["verdict"] == name).sum())
+    found["routes_below_zero"] = int((study.components["unit_variance"] < 0.0).sum())
     found["identities_hold"] = verdicts.count("holds")
     found["identities_fail"] = verdicts.count("FAILS")
     found["identities_do_not_apply"] = len(verdicts) - found["identities_hold"] - found["identities_fail"]
@@ -129,10 +154,16 @@ def _inference(study: Any) -> Part:
 def _robust(study: Any) -> Part:
     if study.primary == "first_difference" or not study.has_unit_records:
         return {"status": "not computed: needs rows or the products of units, which are not at hand"}
-    fit = study.fit(study.primary, covariance="CR1")
+    fit = study.fits[study.primary]
     if not fit.estimated:
         return {"status": f"not computed: {fit.status}"}
-    return {"route": study.primary, "covariance": "CR1", "rows": inference_rows(study, fit)}
+    found = study.robust(fit, "CR1")
+    return {
+        "route": study.primary,
+        "covariance": found.kind,
+        "notes": [*found.notes, *([] if found.status == "computed" else [found.status])],
+        "rows": inference_rows(study, replace(fit, robust=found.covariance_array)),
+    }
 
 
 def _likelihoods(study: Any) -> Part:
@@ -143,16 +174,24 @@ def _variance_tests(study: Any) -> Part:
     return {"seed": 20_040, "draws": 100_000, "rows": plain_table(study.variance_tests())}
 
 
+def _route_on_curve(study: Any) -> str:
+    """Return the primary route; `reml` where that has no finite ratio."""
+    fit = study.fits[study.primary]
+    return str(study.primary) if fit.estimated and np.isfinite(fit.ratio) else "reml"
+
+
 def _contrasts(study: Any) -> Part:
-    table = study.contrasts()
-    return {"rows": plain_table(table[~table["variance"].str.startswith("cluster-robust")])}
+    route = _route_on_curve(study)
+    table = study.contrasts(route)
+    return {"route": route, "rows": plain_table(table[~table["variance"].str.startswith("cluster-robust")])}
 
 
 def _contrasts_robust(study: Any) -> Part:
     if not study.has_unit_records:
         return {"status": "not computed: needs rows or the products of units, which are not at hand"}
-    table = study.contrasts()
-    return {"rows": plain_table(table[table["variance"].str.startswith("cluster-robust")])}
+    route = _route_on_curve(study)
+    table = study.contrasts(route)
+    return {"route": route, "rows": plain_table(table[table["variance"].str.startswith("cluster-robust")])}
 
 
 def added_columns(study: Any) -> dict[str, str] | None:
@@ -166,16 +205,17 @@ def added_columns(study: Any) -> dict[str, str] | None:
 
 def _unit_means(study: Any) -> Part:
     """Within, between and contextual coefficients, and the test of the means."""
-    if added_columns(study) is not None:
-        return {"status": "not computed: this study has added columns already"}
-    wide = study.correlated("mundlak")
-    fit = wide.fit(wide.primary)
+    if study.projection is not None:
+        return {"status": "not computed: this study projects unit effects on other columns"}
+    wide = study if study.unit_means is not None else study.correlated("mundlak")
+    route = _route_on_curve(wide)
+    fit = wide.fit(route)
     certificate = wide.slope_certificate()
     return {
-        "route": wide.primary,
+        "route": route,
         "statement": wide.unit_means.augmented.statement,
-        "coordinates": plain_table(wide.coordinates().table),
-        "tests": plain_table(wide.mean_tests()),
+        "coordinates": plain_table(wide.coordinates(route).table),
+        "tests": plain_table(wide.mean_tests(route)),
         "certificate": {
             "holds": bool(certificate.holds),
             "largest": plain(certificate.largest),
@@ -185,12 +225,21 @@ def _unit_means(study: Any) -> Part:
     }
 
 
+def _projection(study: Any) -> Part:
+    """Test the restrictions inside a projection of unit effects."""
+    if study.projection is None:
+        return {"status": "no projection in this study"}
+    route = _route_on_curve(study)
+    return {"route": route, "tests": plain_table(study.projection_tests(route))}
+
+
 def _attributions(study: Any) -> Part:
     """Attribute the widest gap of each term that is not immaterial, the widest first."""
     ledger = study.ledger
     loud = ledger[
         ledger["verdict"].isin(["visible", "conflicting"]) & ~ledger["route"].isin(REFERENCE_ROUTES)
     ]
+    apart = int(loud["term"].nunique())
     loud = loud.assign(size=loud["gap_in_se"].abs()).sort_values("size", ascending=False, kind="stable")
     rows = []
     for term, route in loud.drop_duplicates("term")[["term", "route"]].head(WIDEST).itertuples(index=False):
@@ -211,24 +260,24 @@ def _attributions(study: Any) -> Part:
                 "sentences": list(found.sentences),
             }
         )
-    return {"rows": rows}
+    return {"terms_apart": apart, "rows": rows}
 
 
 def _paths(study: Any) -> Part:
-    rows = []
-    for term in study.curve.names[:40]:
-        found = study.path(term, points=33)
-        rows.append(
-            {
-                "term": term,
-                "lowest": plain(found.range_all[0]),
-                "highest": plain(found.range_all[1]),
-                "lowest_allowed": plain(found.range_allowed[0]),
-                "highest_allowed": plain(found.range_allowed[1]),
-                "changes_of_sign": [[plain(value) for value in change] for change in found.changes],
-            }
-        )
-    return {"rows": rows}
+    """Follow every coefficient over the variance ratio."""
+    names = study.curve.names
+    rows = [
+        {
+            "term": found.term,
+            "lowest": plain(found.range_all[0]),
+            "highest": plain(found.range_all[1]),
+            "lowest_allowed": plain(found.range_allowed[0]),
+            "highest_allowed": plain(found.range_allowed[1]),
+            "changes_of_sign": [[plain(value) for value in change] for change in found.changes],
+        }
+        for found in coefficient_ranges(study.curve, names[:MOST_PATHS], confidence=study.confidence)
+    ]
+    return {"terms": len(names), "rows": rows}
 
 
 def _without_singletons(study: Any) -> Part:
@@ -258,6 +307,8 @@ def _influence(study: Any) -> Part:
     """Delete each unit: how far the primary route moves at most, and how many units decide a conclusion."""
     if not study.has_unit_records:
         return {"status": "not computed: needs rows or the means of units, which are not at hand"}
+    if not study.fits[study.primary].estimated:
+        return {"status": f"not computed: {study.fits[study.primary].status}"}
     found = study.leave_one_out(routes=[study.primary])
     moved = found.influence()
     deciding = found.deciding()
@@ -277,7 +328,7 @@ def _influence(study: Any) -> Part:
 
 
 def _audit(study: Any) -> Part:
-    found = audit(study, show_units=False)  # a record names no unit
+    found = audit(study, seed=AUDIT_SEED, show_units=False)  # a record names no unit
     rows = {
         item.key: {
             "assumption": item.assumption,
@@ -292,4 +343,13 @@ def _audit(study: Any) -> Part:
         }
         for item in found.findings
     }
-    return {"level": found.level, "power": found.power, "header": list(found.header[:3]), "rows": rows}
+    p = np.array([item.p_value for item in found])
+    return {
+        "seed": AUDIT_SEED,
+        "level": found.level,
+        "power": found.power,
+        "tests": int(np.isfinite(p).sum()),
+        "tests_rejecting": int((p <= found.level).sum()),
+        "header": list(found.header[:3]),
+        "rows": rows,
+    }

@@ -30,6 +30,8 @@ HONEST = (
 """What a verification does not show, as lines."""
 
 _AWAY = ("not at hand", "never held together", "not kept", "do not hold the order", "needs rows")
+_TOLD = ("status", "status_of_row", "reason", "condition", "note")
+"""Keys whose text is the program's own: names that a user chose are never read for it."""
 _NUMBER = re.compile(r"-?\d+(?:[.,]\d+)*(?:e[+-]?\d+)?")
 _NUMBER_FREE = 1e-13
 """Share of the largest neighbour in a list or table below which a number is rounding."""
@@ -156,7 +158,7 @@ def _walk(
 ) -> Iterator[Checked]:
     told = any(place == name or place.startswith(f"{name}.") for name in stated)
     if isinstance(printed, Mapping) and isinstance(again, Mapping):
-        away = away or any(isinstance(text, str) and _is_away(text) for text in again.values())
+        away = away or any(isinstance(again.get(key), str) and _is_away(again[key]) for key in _TOLD)
         scale = _largest(again.values())
         for key in dict.fromkeys([*printed, *again]):
             below = f"{place}.{key}" if place else str(key)

@@ -9,7 +9,7 @@ from typing import Any
 from mixbridge.errors import OptionError
 from mixbridge.report.text import number
 
-__all__ = ["AUDIENCES", "Words", "count", "listed", "num", "words_for"]
+__all__ = ["AUDIENCES", "VOCABULARY", "Words", "capital", "count", "listed", "num", "said_p", "words_for"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -23,9 +23,15 @@ class Words:
     unit_variance, idiosyncratic_variance : str
         The two components.
     weight : str
-        What is subtracted of a unit mean, or the unit's own share in its predicted effect.
+        What is subtracted of a unit mean, and the unit's own share in its predicted effect.
     unrelated : str
         The shared assumption.
+    gls, within : str
+        Slopes of the routes on the curve, and within slopes.
+    robust : str
+        Standard errors robust to dependence within units.
+    contrast : str
+        The test that compares the two kinds of slopes.
     """
 
     model: str
@@ -35,6 +41,10 @@ class Words:
     idiosyncratic_variance: str
     weight: str
     unrelated: str
+    gls: str
+    within: str
+    robust: str
+    contrast: str
 
 
 AUDIENCES: Mapping[str, Words] = {
@@ -44,17 +54,25 @@ AUDIENCES: Mapping[str, Words] = {
         error="idiosyncratic error",
         unit_variance="variance of the unit effects",
         idiosyncratic_variance="variance of the idiosyncratic error",
-        weight="quasi-demeaning weight λ",
+        weight="quasi-demeaning weight λ, and shrinkage s = λ(2 − λ)",
         unrelated="unit effects uncorrelated with the covariates",
+        gls="random-effects (FGLS) slopes",
+        within="fixed-effects (within) slopes",
+        robust="standard errors clustered by unit",
+        contrast="Hausman-type contrast",
     ),
     "biostatistics": Words(
         model="a linear mixed model with a random intercept",
         effect="random intercept",
-        error="residual error",
+        error="residual",
         unit_variance="random-intercept variance",
         idiosyncratic_variance="residual variance",
-        weight="shrinkage s",
+        weight="shrinkage s, and the share λ of a unit mean that is subtracted, s = λ(2 − λ)",
         unrelated="random intercepts unrelated to the covariates",
+        gls="fixed-effect slopes of the mixed model",
+        within="within-unit slopes",
+        robust="cluster-robust (sandwich) standard errors",
+        contrast="contrast",
     ),
     "both": Words(
         model="a random-intercept model (in economics: error components)",
@@ -64,8 +82,28 @@ AUDIENCES: Mapping[str, Words] = {
         idiosyncratic_variance="idiosyncratic (residual) variance",
         weight="quasi-demeaning weight λ and shrinkage s = λ(2 − λ)",
         unrelated="unit effects (random intercepts) unrelated to the covariates",
+        gls="generalised least-squares (random-effects) slopes",
+        within="within (fixed-effects) slopes",
+        robust="cluster-robust standard errors (clustered by unit, sandwich)",
+        contrast="contrast (Hausman type)",
     ),
 }
+
+VOCABULARY: tuple[tuple[str, str, str], ...] = (
+    ("unit i, T_i rows", "individual, panel unit", "cluster, subject"),
+    ("unit effect α_i", "individual effect", "random intercept"),
+    ("idiosyncratic error u_it", "idiosyncratic error", "residual"),
+    ("unit variance σ_α²", "variance of the individual effects", "random-intercept variance"),
+    ("idiosyncratic variance σ_u²", "variance of the idiosyncratic error", "residual variance"),
+    ("ICC, ψ/(1 + ψ)", "share of variance due to the individual effects, ρ", "intraclass correlation"),
+    ("weight λ_i", "quasi-demeaning weight, often θ", "share of the cluster mean subtracted"),
+    ("shrinkage s_i", "reliability of the estimated individual effect", "shrinkage"),
+    ("coefficient β at the ratio of a route", "random-effects (FGLS) coefficient", "fixed effect"),
+    ("within slope", "fixed-effects coefficient", "within-cluster effect"),
+    ("unit means added", "correlated random effects", "within and between effects apart"),
+    ("contrast of within and GLS slopes", "Hausman test", "test of equal within and between effects"),
+)
+"""Names here, in economics and in biostatistics; in common use (from memory), and authors differ."""
 
 
 def words_for(audience: str) -> Words:
@@ -86,6 +124,11 @@ def num(value: Any, digits: int = 4) -> str:
     return number(float(value), digits)
 
 
+def said_p(value: float) -> str:
+    """Return ``p = 0.031``; a p value that underflows is not called zero."""
+    return f"p = {num(value, 3)}" if value > 0.0 else "p below the smallest number a computer holds"
+
+
 def count(number_of: int, singular: str, plural: str = "") -> str:
     """Return ``1 unit`` or ``3 units``."""
     return f"{number_of} {singular if number_of == 1 else plural or singular + 's'}"
@@ -96,3 +139,10 @@ def listed(names: list[str]) -> str:
     if len(names) < 2:
         return "".join(names)
     return f"{', '.join(names[:-1])} and {names[-1]}"
+
+
+def capital(text: str) -> str:
+    """Return a sentence with a full stop, and with a capital unless it begins with a key of the program."""
+    end = "" if text.endswith((".", "!", "?", ":")) else "."
+    key = "_" in text.split(" ", 1)[0]
+    return f"{text if key else text[:1].upper() + text[1:]}{end}"

@@ -62,7 +62,7 @@ def shared_moments(study: Study, threshold: int = 5) -> Shared:
     >>> int(shared.study.moments.counts.min())
     5
     """
-    found = suppress(study.products, threshold)
+    found = suppress(study.products if study.has_unit_records else study.moments, threshold)
     rest = from_moments(
         found.moments,
         formula=study.panel.formula,

@@ -30,11 +30,15 @@ STATED = (
     "software",
     "terms",
     "source",
+    "rows",
     "summary.identities_hold",
     "summary.identities_do_not_apply",
     "accounting.dropped",
     "accounting.missing",
     "accounting.notes",
+    "accounting.by_unit",
+    "audit.tests",
+    "audit.tests_rejecting",
 )
 """What a record says that does not follow from moments, counts with identities on rows among them."""
 
@@ -104,7 +108,7 @@ def verify(record: Mapping[str, Any] | str | Path, products: UnitProducts | None
     again = json.loads(json.dumps(study.to_dict()))
     tolerance = max(1e-9, 1e3 * float(np.finfo(float).eps) * float(study.curve.condition))
     # the columns of a projection are columns like others in the moments: that they are one is a statement
-    stated = STATED if given.get("added") is None else (*STATED, "added", "unit_means")
+    stated = STATED if given.get("added") is None else (*STATED, "added", "unit_means", "projection")
     return compare_records(given, again, tolerance=min(tolerance, 1e-4), stated=stated)
 
 
