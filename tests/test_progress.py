@@ -1,6 +1,8 @@
 """The progress line: nothing before two seconds, nothing off a terminal, one line that ends."""
 
 import io
+import sys
+import types
 
 import pytest
 
@@ -35,3 +37,11 @@ def test_a_slow_task_is_drawn_on_a_terminal_only(stream, lines):
     if lines:
         assert "2 of 3, 2 s left" in text
         assert text.endswith("\n")
+
+
+def test_a_slow_task_is_drawn_in_a_notebook_too(monkeypatch):
+    shell = type("ZMQInteractiveShell", (), {})()
+    monkeypatch.setitem(sys.modules, "IPython", types.SimpleNamespace(get_ipython=lambda: shell))
+    assert drawn(io.StringIO(), [1.0, 3.0, 4.0]).count("\r") == 2
+    monkeypatch.setitem(sys.modules, "IPython", types.SimpleNamespace(get_ipython=lambda: None))
+    assert drawn(io.StringIO(), [1.0, 3.0, 4.0]) == ""

@@ -1,4 +1,4 @@
-"""A progress line on the terminal for what takes longer than two seconds."""
+"""A progress line, on a terminal or in a notebook, for what takes longer than two seconds."""
 
 from __future__ import annotations
 
@@ -7,7 +7,7 @@ import time
 from collections.abc import Callable
 from typing import TextIO
 
-__all__ = ["PATIENCE", "progress_line"]
+__all__ = ["PATIENCE", "in_notebook", "progress_line"]
 
 PATIENCE = 2.0
 """Seconds before anything is shown."""
@@ -15,10 +15,17 @@ PATIENCE = 2.0
 BAR = 30
 
 
+def in_notebook() -> bool:
+    """Whether this runs in a notebook, whose cells show a line drawn over itself as a terminal does."""
+    module = sys.modules.get("IPython")
+    shell = module.get_ipython() if module is not None and hasattr(module, "get_ipython") else None
+    return type(shell).__name__ == "ZMQInteractiveShell"
+
+
 def progress_line(
     what: str, stream: TextIO | None = None, clock: Callable[[], float] = time.monotonic
 ) -> Callable[[int, int], None]:
-    """Return a callback that draws one line, from two seconds on and on a terminal only.
+    """Return a callback that draws one line, from two seconds on, on a terminal or in a notebook.
 
     Parameters
     ----------
@@ -41,7 +48,7 @@ def progress_line(
     def show(done: int, total: int) -> None:
         nonlocal shown
         spent = clock() - start
-        if spent < PATIENCE or not target.isatty():
+        if spent < PATIENCE or not (target.isatty() or in_notebook()):
             return
         if done >= total and not shown:
             return

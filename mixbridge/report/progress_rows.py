@@ -7,7 +7,7 @@ import time
 from collections.abc import Callable
 from typing import TextIO
 
-from mixbridge.report.progress import BAR, PATIENCE
+from mixbridge.report.progress import BAR, PATIENCE, in_notebook
 
 __all__ = ["rows_line"]
 
@@ -18,7 +18,7 @@ _EVERY = 0.2
 def rows_line(
     stream: TextIO | None = None, clock: Callable[[], float] = time.monotonic
 ) -> Callable[[int, int | None], None]:
-    """Return a callback that draws a line for each pass over the rows, from two seconds on and on a terminal only.
+    """Return a callback that draws a line for each pass over the rows, from two seconds on.
 
     Parameters
     ----------
@@ -46,7 +46,7 @@ def rows_line(
         ended = total is not None and done >= total
         if ended or (now - start >= PATIENCE and now - drawn >= _EVERY):
             shown = width > 0
-            if target.isatty() and (shown or not ended):
+            if (target.isatty() or in_notebook()) and (shown or not ended):
                 drawn = now
                 text = _text(number, done, total, max(now - start, 1e-9))
                 target.write("\r" + text.ljust(width) + ("\n" if ended else ""))
