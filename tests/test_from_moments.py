@@ -99,3 +99,8 @@ def test_the_screen_says_where_the_moments_come_from(rowless):
 def test_impossible_confidence_is_refused(study):
     with pytest.raises(mixbridge.OptionError, match="between 0 and 1"):
         mixbridge.from_moments(study.moments, confidence=1.5)
+
+
+def test_inference_has_every_rule_of_the_model(study, rowless):
+    one, two = study.inference("feeding", robust=()), rowless.inference("feeding")
+    pd.testing.assert_frame_equal(one, two)

@@ -50,14 +50,14 @@ class StudyQuestions(StudyBase):
         -------
         DataFrame
             One row per rule and covariance; ``exact`` marks what holds exactly under the model in this design,
-            ``why`` gives the reason.
+            ``why`` gives the reason. Robust covariances are left out where neither rows nor units are at hand.
         """
         from mixbridge.inference.references import inference_table
 
         fit = self.fit(self.primary if route is None else route, **conventions)
         found = (
             {}
-            if fit.route == "first_difference"
+            if fit.route == "first_difference" or not self.has_unit_records
             else {kind: self._given(self.robust(fit, kind)) for kind in robust}
         )
         return inference_table(
