@@ -98,6 +98,7 @@ def p_values(design: Design, data: pd.DataFrame) -> dict[str, float]:
         found |= {f"{tested}, F with {covariance}": float(table[tested]) for tested in table.index}
     for row in study.minimum_distance().tests.itertuples(index=False):
         found[f"{row.tested}, {row.weights} distance"] = float(row.p_value)
+        found[f"{row.tested}, {row.weights} distance, few units"] = float(row.p_few_units)
     return found
 
 
@@ -155,10 +156,9 @@ def section(table: pd.DataFrame, replicates: int, seconds: float) -> str:
         f"`python -m benchmarks.calibration_projection --replicates {replicates} --write docs/calibration.md`, "
         f"{seconds / 60:.1f} min, seed {SEED}. Rejected at 5 %, in percent of {replicates:,} samples (power: "
         f"{replicates // 4:,}); marks as above. F: the augmented regression by `reml` with Satterthwaite or "
-        "cluster-robust references; distance: minimum distance on the reduced form with the stated weights. "
-        "Optimal weights "
-        "need many units per coefficient of the reduced form; with unequal variances only they and robust covariances "
-        "can hold.",
+        "cluster-robust references; distance: minimum distance on the reduced form with the stated weights, with its "
+        "reference in large samples and with that for few units, both robust to unequal variances. Optimal weights "
+        "need many units per coefficient of the reduced form.",
         "",
         "### Size",
         "",

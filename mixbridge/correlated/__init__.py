@@ -11,6 +11,7 @@ from mixbridge.correlated.mundlak import Mundlak, mundlak
 from mixbridge.correlated.noisy_means import NoisyMeans, noisy_means
 from mixbridge.correlated.period_values import amemiya_macurdy
 from mixbridge.correlated.projection import Projection, project, projection_size
+from mixbridge.correlated.reduced_form_size import reduced_form_size
 from mixbridge.correlated.slopes import SlopeCertificate
 
 __all__ = [
@@ -31,6 +32,7 @@ __all__ = [
     "noisy_means",
     "project",
     "projection_size",
+    "reduced_form_size",
     "unit_constant_table",
     "widen_products",
     "with_unit_means",

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
-from itertools import pairwise
 from textwrap import wrap
 
 import numpy as np
@@ -12,6 +12,7 @@ import scipy
 from numpy.typing import NDArray
 
 from mixbridge.correlated.minimum_distance import WEIGHTS, Distance, distance_of
+from mixbridge.correlated.minimum_distance_tests import MEANING, tests_of
 from mixbridge.correlated.projection import Projection
 from mixbridge.correlated.projection_columns import Origin
 from mixbridge.correlated.reduced_form import ReducedForm, reduced_form
@@ -24,9 +25,26 @@ __all__ = ["MinimumDistance", "minimum_distance"]
 
 FloatArray = NDArray[np.float64]
 FEW = 10
-"""Units per coefficient of the reduced form below which the note on small samples is shown (common practice)."""
+"""Units per coefficient of the reduced form, and residual degrees of freedom, below which a note is shown (common
+practice)."""
+WIDTH = 100
 
 NOT_EVIDENCE = "A test that does not reject proves nothing, and none of them chooses the estimator."
+COEFFICIENTS = [
+    "term",
+    "weights",
+    "estimate",
+    "standard_error",
+    "lower",
+    "upper",
+    "p_value",
+    "few_units_error",
+    "few_units_df",
+    "few_units_lower",
+    "few_units_upper",
+    "few_units_p",
+    "within",
+]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -51,7 +69,7 @@ class MinimumDistance:
 
     form: ReducedForm = field(repr=False)
     distances: tuple[Distance, ...]
-    origins: dict[str, Origin] = field(repr=False)
+    origins: Mapping[str, Origin] = field(repr=False)
     within: pd.Series
     confidence: float
     size: dict[str, int]
@@ -75,88 +93,62 @@ class MinimumDistance:
     def coefficients(self) -> pd.DataFrame:
         """Coefficients of the design columns.
 
-        ``term, weights, estimate, standard_error, lower, upper, p_value, within``. Normal references; standard errors
-        are robust to heteroscedasticity and to dependence within units.
+        ``term, weights, estimate``; ``standard_error, lower, upper, p_value`` in large samples, with normal reference;
+        ``few_units_error``, ``_df``, ``_lower``, ``_upper``, ``_p`` with the t reference for few units of
+        `mixbridge.correlated.minimum_distance`; ``within``. Standard errors are robust to heteroscedasticity and to
+        dependence within units. NaN where the weights are not estimable: see `status`.
         """
-        z = float(scipy.stats.norm.isf((1.0 - self.confidence) / 2.0))
+        tail = (1.0 - self.confidence) / 2.0
+        z = float(scipy.stats.norm.isf(tail))
         rows = []
-        for j, name in enumerate(self.form.names):
-            if name in self.origins:
-                continue
-            for found in self.distances:
-                estimate, error = float(found.beta[j]), float(np.sqrt(found.covariance[j, j]))
-                p = float(2.0 * scipy.stats.norm.sf(abs(estimate / error))) if error > 0.0 else np.nan
-                ends = (estimate - z * error, estimate + z * error)
-                rows.append(
-                    (name, found.weights, estimate, error, *ends, p, float(self.within.get(name, np.nan)))
+        for j, found in self._cells(projected=False):
+            name = self.form.names[j]
+            estimate, error = float(found.beta[j]), float(np.sqrt(found.covariance[j, j]))
+            few, df = error * float(np.sqrt(found.inflation)), found.residual_df
+            half = few * float(scipy.stats.t.isf(tail, df))
+            rows.append(
+                (
+                    name,
+                    found.weights,
+                    estimate,
+                    *(error, estimate - z * error, estimate + z * error),
+                    float(2.0 * scipy.stats.norm.sf(abs(estimate / error))) if error > 0.0 else np.nan,
+                    *(few, df, estimate - half, estimate + half),
+                    float(2.0 * scipy.stats.t.sf(abs(estimate / few), df)) if few > 0.0 else np.nan,
+                    float(self.within.get(name, np.nan)),
                 )
-        header = ["term", "weights", "estimate", "standard_error", "lower", "upper", "p_value", "within"]
-        return pd.DataFrame(rows, columns=header)
+            )
+        return pd.DataFrame(rows, columns=COEFFICIENTS)
 
     @property
     def projection(self) -> pd.DataFrame:
-        """Coefficients of the projection: ``column, period, weights, estimate, standard_error``."""
+        """Coefficients of the projection.
+
+        ``column, period, weights, estimate, standard_error, few_units_error``; the period is its ordinal.
+        """
         rows = []
-        for j, name in enumerate(self.form.names):
-            if name not in self.origins:
-                continue
-            origin = self.origins[name]
-            for found in self.distances:
-                error = float(np.sqrt(found.covariance[j, j]))
-                rows.append((origin.column, origin.period, found.weights, float(found.beta[j]), error))
-        return pd.DataFrame(rows, columns=["column", "period", "weights", "estimate", "standard_error"])
+        for j, found in self._cells(projected=True):
+            origin, error = self.origins[self.form.names[j]], float(np.sqrt(found.covariance[j, j]))
+            few = error * float(np.sqrt(found.inflation))
+            rows.append((origin.column, origin.period, found.weights, float(found.beta[j]), error, few))
+        header = ["column", "period", "weights", "estimate", "standard_error", "few_units_error"]
+        return pd.DataFrame(rows, columns=header)
 
     @property
     def tests(self) -> pd.DataFrame:
-        """Tests: ``tested, weights, kind, statistic, df, p_value, reference``.
+        """Tests: ``tested, weights, kind, statistic, df, p_value, p_few_units, reference, meaning``.
 
-        ``overidentification`` is the distance itself: all that the model says about the reduced form, strict
-        exogeneity and one slope for all periods included. ``equal over periods``: coefficients of the projection of
-        each column are equal, so that it is one on unit means (Mundlak 1978); ``no correlation``: all of them are
-        zero. With optimal weights the Wald statistic of linear restrictions is the difference of the distances with
-        and without them, one number. Not rejecting proves nothing.
+        ``overidentification`` is the distance itself. ``equal over periods``: coefficients of the projection of each
+        column are equal, so that it is one on unit means (Mundlak 1978); ``no correlation``: all of them are zero. With
+        optimal weights the Wald statistic of linear restrictions is the difference of the distances with and without
+        them, one number. The reference names both laws, or says why there is none. Not rejecting proves nothing.
         """
-        rows: list[tuple[object, ...]] = []
-        for found in self.distances:
-            if not found.estimated:
-                rows.append(
-                    ("overidentification", found.weights, "distance", np.nan, 0, np.nan, found.status)
-                )
-                continue
-            law = (found.distance, found.df, found.p_value)
-            rows.append(("overidentification", found.weights, "distance", *law, found.reference))
-            kind = "difference of distances" if found.weights == "optimal" else "Wald"
-            for tested, matrix in self._restrictions().items():
-                rows.append(
-                    (tested, found.weights, kind, *_wald(found, matrix), "chi-square in large samples")
-                )
-        return pd.DataFrame(
-            rows, columns=["tested", "weights", "kind", "statistic", "df", "p_value", "reference"]
-        )
+        return tests_of(self.form, self.distances, self.origins)
 
-    def _restrictions(self) -> dict[str, FloatArray]:
-        """Return restriction matrices on the identified parameters of the projection."""
-        names, kept = self.form.names, set(self.form.kept.tolist())
-        places = [j for j, name in enumerate(names) if name in self.origins and j in kept]
-        series: dict[str, list[int]] = {}
-        for j in places:
-            series.setdefault(self.origins[names[j]].column, []).append(j)
-        equal = []
-        for own in series.values():
-            for a, b in pairwise(own):
-                row = np.zeros(len(names))
-                row[a], row[b] = 1.0, -1.0
-                equal.append(row)
-        found = {"no correlation": np.eye(len(names))[places]}
-        if equal:
-            found["equal over periods"] = np.array(equal)
-        return {name: matrix for name, matrix in found.items() if len(matrix)}
-
-    def _statuses(self) -> list[str]:
-        texts = [f"  {found.weights}: {found.status}" for found in self.distances]
-        return [
-            line for text in texts for line in wrap(text, 100, subsequent_indent="    ", initial_indent="")
-        ]
+    def _cells(self, *, projected: bool) -> list[tuple[int, Distance]]:
+        """Return places of parameters, of the projection or of the design, with each kind of weights."""
+        places = [j for j, name in enumerate(self.form.names) if (name in self.origins) is projected]
+        return [(j, found) for j in places for found in self.distances]
 
     def __str__(self) -> str:
         """Return the size of the problem, slopes, tests and cautions."""
@@ -165,13 +157,35 @@ class MinimumDistance:
             f"Minimum distance: {size['coefficients']} reduced-form coefficients, {size['parameters']} parameters, "
             f"{size['units']} units, {size['periods']} periods"
         )
-        lines = [head, *self._statuses(), ""]
-        shown = self.coefficients.drop(columns=["lower", "upper"])
-        with pd.option_context("display.width", 100, "display.max_columns", 10, "display.max_colwidth", 24):
-            lines += shown.to_string(index=False, float_format=lambda v: f"{v:.4g}").splitlines()
-            tests = self.tests.drop(columns="reference")
-            lines += ["", *tests.to_string(index=False, float_format=lambda v: f"{v:.4g}").splitlines()]
-        return "\n".join([*lines, "", *(line for note in self.notes for line in wrap(note, 100))])
+        lines = wrap(head, WIDTH)
+        for found in self.distances:
+            lines += wrap(f"  {found.weights}: {found.status}", WIDTH, subsequent_indent="    ")
+        slopes = self.coefficients[
+            [
+                "term",
+                "weights",
+                "estimate",
+                "standard_error",
+                "p_value",
+                "few_units_error",
+                "few_units_p",
+                "within",
+            ]
+        ]
+        slopes.columns = ["term", "weights", "estimate", "error", "p", "error, few", "p, few", "within"]
+        tests = self.tests[["tested", "weights", "statistic", "df", "p_value", "p_few_units"]]
+        tests.columns = ["tested", "weights", "statistic", "df", "p", "p, few"]
+        for table in (slopes, tests):
+            lines += ["", *_shown(table)]
+        texts = [
+            f"{tested}: {meaning}." for tested, meaning in MEANING.items() if tested in set(tests["tested"])
+        ]
+        for row in self.tests.itertuples(index=False):
+            if str(row.reference).startswith("not ") and self.with_weights(str(row.weights)).estimated:
+                texts.append(f"{row.tested}, {row.weights}: {row.reference}.")
+        return "\n".join(
+            [*lines, "", *(line for text in (*texts, *self.notes) for line in wrap(text, WIDTH))]
+        )
 
 
 def minimum_distance(
@@ -212,32 +226,68 @@ def minimum_distance(
         "parameters": len(form.kept),
         "restrictions": form.moments - len(form.kept),
     }
-    notes = [
-        f"Weights random_effects take the ratio of {fit.route}, {fit.ratio:.4g}. Standard errors are robust to "
-        "heteroscedasticity and to dependence within units.",
-        NOT_EVIDENCE,
-    ]
-    if form.units < FEW * form.moments:
-        notes.insert(
-            0,
-            f"{form.units / form.moments:.1f} units per coefficient of the reduced form: optimal weights are then "
-            "known to understate standard errors and to reject too often (Altonji & Segal 1996, from memory).",
-        )
-    notes += [f"{name} is not identified: {reason}." for name, reason in form.lost.items()]
     return MinimumDistance(
-        form, distances, dict(projection.origins), within.coefficients, confidence, size, tuple(notes)
+        form,
+        distances,
+        dict(projection.origins),
+        within.coefficients,
+        confidence,
+        size,
+        (*_cautions(form, distances[0]), *_conventions(panel, form, fit), *_columns(panel, form, projection)),
     )
 
 
-def _wald(found: Distance, matrix: FloatArray) -> tuple[float, int, float]:
-    """Return the Wald statistic of ``matrix @ theta = 0``, its degrees of freedom and p value."""
-    gap, spread = _of_kept(found, matrix)
-    statistic = float(gap @ np.linalg.solve(spread, gap))
-    df = matrix.shape[0]
-    return statistic, df, float(scipy.stats.chi2.sf(statistic, df))
+def _cautions(form: ReducedForm, optimal: Distance) -> list[str]:
+    """Say what few units do."""
+    found = []
+    if optimal.estimated and form.units < FEW * form.moments:
+        found.append(
+            f"{form.units / form.moments:.1f} units per coefficient of the reduced form: with optimal weights "
+            "estimates are then biased, standard errors too small, and tests reject too often (Altonji & Segal 1996, "
+            "from memory). The columns for few units correct part of it."
+        )
+    if form.left < FEW * form.coefficients.shape[0]:
+        found.append(
+            f"{form.units} units less {form.basis.shape[1]} columns leave {form.left} residual degrees of freedom in "
+            "each period: no robust covariance can be trusted, with any weights, and large samples are far away."
+        )
+    return [*found, NOT_EVIDENCE]
 
 
-def _of_kept(found: Distance, matrix: FloatArray) -> tuple[FloatArray, FloatArray]:
-    kept = np.isfinite(found.beta)
-    rows = matrix[:, kept]
-    return rows @ found.beta[kept], rows @ found.covariance[np.ix_(kept, kept)] @ rows.T
+def _conventions(panel: Panel, form: ReducedForm, fit: Fit) -> list[str]:
+    """Say units of measurement, weights, references."""
+    ratio = f"Weights random_effects take the ratio of {fit.route}, {fit.ratio:.4g}. "
+    return [
+        f"Slopes are in units of {panel.outcome} per unit of the column, the others and the {panel.unit_name} effect "
+        f"fixed; coefficients of the projection in units of {panel.outcome} per unit of the column in that period, "
+        f"and not causal. Statistics of tests have no unit of measurement. Each {panel.unit_name} counts as one unit.",
+        "Under the model all weights and the within route estimate the same slopes and differ in how they weight "
+        "noise. Where they lie apart by more than their errors, the model is in doubt, not one of them.",
+        f"{ratio if np.isfinite(fit.ratio) else ''}Errors are robust to heteroscedasticity and to dependence within "
+        f"units; no multiplier in large samples (times {np.sqrt(form.units / form.left):.3f} with N/(N - r)). 'few': "
+        "references of Hotelling and Rao, as if moments were normal.",
+    ]
+
+
+def _columns(panel: Panel, form: ReducedForm, projection: Projection) -> list[str]:
+    """Say which columns stay out of the projection, and which are combinations of others."""
+    found = []
+    if form.apart:
+        found.append(f"Intercepts of periods, out of the projection: {', '.join(form.apart)}.")
+    if panel.constant is None:
+        found.append(
+            "The formula has no constant: the mean of the outcome at zero covariates is taken as zero, in the "
+            "projection too, and the distance tests that with the rest."
+        )
+    dropped = list(projection.augmented.dropped.values())
+    if dropped:
+        more = f"; and {len(dropped) - 3} more" if len(dropped) > 3 else ""
+        found.append(
+            f"Not in the projection, being determined by other columns: {'; '.join(dropped[:3])}{more}."
+        )
+    return found + [f"{name} is not identified: {reason}." for name, reason in form.lost.items()]
+
+
+def _shown(table: pd.DataFrame) -> list[str]:
+    with pd.option_context("display.width", WIDTH, "display.max_columns", 10, "display.max_colwidth", 24):
+        return table.to_string(index=False, float_format=lambda v: f"{v:.4g}", na_rep="-").splitlines()

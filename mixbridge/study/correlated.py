@@ -124,6 +124,7 @@ class StudyCorrelated(StudyQuestions):
         -------
         MinimumDistance
             Slopes, projection and tests with optimal, homoscedastic and random-effects weights, each with a status.
+            `minimum_distance_size` says before how large the problem is.
         """
         from mixbridge.correlated.minimum_distance_record import minimum_distance
         from mixbridge.correlated.reduced_form import require_balanced
@@ -142,6 +143,19 @@ class StudyCorrelated(StudyQuestions):
             within=self.fit("within"),
             confidence=self.confidence,
         )
+
+    def minimum_distance_size(self) -> dict[str, int]:
+        """Say how large the reduced form is, before minimum distance is run on it.
+
+        Returns
+        -------
+        dict
+            ``units``, ``periods``, ``coefficients`` of the reduced form and ``parameters`` of the model, both at most.
+            Optimal weights need more units than coefficients, and many more to be trusted.
+        """
+        from mixbridge.correlated.reduced_form_size import reduced_form_size
+
+        return reduced_form_size(self.panel, self.opened, self.moments)
 
     def coordinates(
         self, route: str | None = None, *, rule: str | None = None, covariance: str = "model"
