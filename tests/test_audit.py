@@ -199,3 +199,17 @@ def test_variance_along_a_covariate_is_near_the_studentised_form():
     e = inside[:, 1] - inside[:, 0] * (inside[:, 0] @ inside[:, 1]) / (inside[:, 0] @ inside[:, 0])
     fit = sm.OLS(e**2 * 6 / 5, x).fit()
     assert np.isclose(list(found.numbers.values()), len(y) * fit.rsquared, rtol=1e-6).any(), found.numbers
+
+
+def test_unit_variance_is_not_judged_where_none_is_left():
+    check = ["unit_variance_covariates"]
+    rng = np.random.default_rng(11)
+    data = pd.DataFrame({"unit": np.repeat(np.arange(30), 4), "x": rng.normal(size=120)})
+    data["y"] = data["x"] + rng.normal(size=120)
+    single = mixbridge.crosscheck("y ~ x", data.groupby("unit").head(1), unit="unit")
+    row = audit(single, checks=check).findings[0]
+    assert "every unit has one row" in row.status and np.isnan(row.statistic)
+    inside = data[["x", "y"]] - data.groupby("unit")[["x", "y"]].transform("mean")  # no differences between units
+    level = inside.assign(unit=data["unit"], x=data["x"])
+    row = audit(mixbridge.crosscheck("y ~ x", level, unit="unit"), checks=check).findings[0]
+    assert "no unit variance" in row.status

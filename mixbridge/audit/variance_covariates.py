@@ -59,7 +59,14 @@ def along_columns(bench: Bench) -> Sequence[Finding]:
 def along_unit_means(bench: Bench) -> Sequence[Finding]:
     """Regress squared unit remainders on unit means."""
     gls, groups = bench.gls, bench.rows.groups
+    if groups.sizes.max() == 1:
+        raise IdentificationError("every unit has one row: unit and error variance cannot be told apart")
     squares = gls.mean**2 - gls.idiosyncratic_variance / groups.sizes
+    if not squares.mean() > 0.0:
+        raise IdentificationError(
+            "squared unit remainders are on average no larger than the error variance over T: no unit variance is left "
+            "that could follow a covariate"
+        )
     units = Groups(np.arange(groups.units), np.ones(groups.units, dtype=np.intp))
     _, test, worst, ratio, size = _regression(bench, squares, bench.x_means, units)
     return [
@@ -91,7 +98,8 @@ def _regression(
     worst = int(added.kept[at])
     spread = float(columns[:, worst].std()) / float(squares.mean())
     half = added.estimate[at, 0] * spread
-    ratio = float((1.0 + half) / (1.0 - half)) if abs(half) < 1.0 else float("inf")
+    high, low = max(1.0 + half, 0.0), max(1.0 - half, 0.0)
+    ratio = float(high / low) if low > 0.0 else float("inf")
     _, size = bench.detectable(float(added.errors[at, 0]) * spread, "", test)
     return added, test, worst, ratio, size
 
@@ -107,6 +115,11 @@ def _finding(
 ) -> Finding:
     test, worst, ratio, size = found
     name = bench.names[worst]
+    shown = (
+        f"{ratio:.2f}"
+        if 0.0 < ratio < np.inf
+        else "no ratio, since the line reaches zero less than one sd from the mean"
+    )
     seen = (
         f"about {(1.0 + size) / (1.0 - size):.2g}"
         if size < 1.0
@@ -118,7 +131,7 @@ def _finding(
         statistic=test.statistic,
         reference=test.reference,
         p_value=test.p_value,
-        departure=f"{what} one sd above the mean of {name} over one sd below: {ratio:.2f} (linear fit)",
+        departure=f"{what} one sd above the mean of {name} over one sd below: {shown} (linear fit)",
         consequence=consequence,
         conclusion=bench.verdict(
             test.p_value,
