@@ -320,15 +320,16 @@ def test_units_are_counted_by_key_of_any_type():
         assert (found.units_with_dropped_rows, found.most_rows_dropped) == (1, 1)
 
 
-def test_the_script_reruns_the_study():
+@pytest.mark.parametrize("means_of", [None, ["feeding"]])
+def test_the_script_reruns_the_study(means_of):
     study = mixbridge.crosscheck(
-        "honey ~ forage",
+        "honey ~ forage + feeding",
         mixbridge.demo.apiaries(),
         unit="apiary",
         primary="ml",
         confidence=0.9,
         routes=["within"],
-    ).correlated("mundlak")
+    ).correlated("mundlak", means_of=means_of)
     code = next(block.text for block in compose(study.to_dict()).blocks if isinstance(block, Code))
     scope = {"data": mixbridge.demo.apiaries(), "print": lambda *_: None}
     exec(code, scope)

@@ -194,12 +194,17 @@ def _contrasts_robust(study: Any) -> Part:
     return {"route": route, "rows": plain_table(table[table["variance"].str.startswith("cluster-robust")])}
 
 
-def added_columns(study: Any) -> dict[str, str] | None:
-    """Return form and statement of the columns added for correlated effects; None where there are none."""
+def added_columns(study: Any) -> dict[str, Any] | None:
+    """Return form and statement of the columns added for correlated effects; None where there are none.
+
+    ``means_of`` names the columns whose means were chosen; null where all of them, or other columns, were added.
+    """
     if study.unit_means is not None:
-        return {"form": "mundlak", "statement": study.unit_means.augmented.statement}
+        wide = study.unit_means.augmented
+        chosen = [name for name in wide.varying if name not in wide.left_out] if wide.partial else None
+        return {"form": "mundlak", "means_of": chosen, "statement": wide.statement}
     if study.projection is not None:
-        return {"form": study.projection.form, "statement": study.projection.statement}
+        return {"form": study.projection.form, "means_of": None, "statement": study.projection.statement}
     return None
 
 

@@ -86,7 +86,9 @@ def rerun_script(record: Record) -> str:
             f"study = mixbridge.crosscheck({record['formula']!r}, data, {', '.join(options)})",
         ]
         if record["added"] is not None:
-            start.append(f"study = study.correlated({record['added']['form']!r})")
+            chosen = record["added"]["means_of"]
+            given = "" if chosen is None else f", means_of={chosen!r}"
+            start.append(f"study = study.correlated({record['added']['form']!r}{given})")
     return "\n".join([*start, "print(study)", 'print(study.to_dict()["fingerprint"])'])
 
 
