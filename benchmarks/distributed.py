@@ -181,7 +181,7 @@ def _tasks(
     tasks = {
         "streamed from Parquet": lambda: _fit(where, chunks=True),
         f"Dask, {WORKERS} worker {'processes' if processes else 'threads'}": lambda: _fit(
-            dd.read_parquet(where)
+            dd.read_parquet(where, filesystem="arrow")
         ),
         "DuckDB over Parquet, summed there": lambda: _fit(database.sql(f"SELECT * FROM '{where}/*.parquet'")),
         "DuckDB table, summed there": lambda: _fit(database.sql("FROM held")),

@@ -208,8 +208,11 @@ def test_unit_variance_is_not_judged_where_none_is_left():
     data["y"] = data["x"] + rng.normal(size=120)
     single = mixbridge.crosscheck("y ~ x", data.groupby("unit").head(1), unit="unit")
     row = audit(single, checks=check).findings[0]
-    assert "every unit has one row" in row.status and np.isnan(row.statistic)
-    inside = data[["x", "y"]] - data.groupby("unit")[["x", "y"]].transform("mean")  # no differences between units
+    assert "every unit has one row" in row.status
+    assert np.isnan(row.statistic)
+    inside = data[["x", "y"]] - data.groupby("unit")[["x", "y"]].transform(
+        "mean"
+    )  # no differences between units
     level = inside.assign(unit=data["unit"], x=data["x"])
     row = audit(mixbridge.crosscheck("y ~ x", level, unit="unit"), checks=check).findings[0]
     assert "no unit variance" in row.status

@@ -11,6 +11,8 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import partial
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -24,7 +26,9 @@ from mixbridge.moments.parted import (
     Sorting,
     add_within,
     bucket_piece,
-    merge_bucket,
+    bucket_whole,
+    grown_of,
+    merge_pieces,
     sort_units,
     take_part,
     within_of,
@@ -52,6 +56,8 @@ FloatArray = NDArray[np.float64]
 
 BUCKET_BYTES = 2**25
 """Bytes that the pieces of one bucket may take together; a worker holds a few buckets at a time."""
+MOST_BUCKETS = 128
+"""Buckets at most: every group of parts makes one task for each."""
 _PAIR_BYTES = 32
 """Bytes of the unit and period of a row."""
 
@@ -128,18 +134,21 @@ def distributed_moments(source: DaskSource, rows: PartedRows, looks: Looks) -> D
     """
     keys, names = rows.taught.recipe.keys, (*rows.names, rows.outcome)
     columns = tuple(name for j, name in enumerate(names) if j != rows.constant)
-    sorting = _sorting(rows.books, len(columns), periods=len(keys) > 1)
+    groups, sorting = _sorting(rows.books, len(columns), periods=len(keys) > 1)
     errand = Errand(rows.taught, columns, rows.origin, sorting)
     parts = [(number, Part(book.place, book.used)) for number, book in enumerate(rows.books) if book.used]
-    lazy = [frame for frame, _ in source.parts(rows.wanted)]
+    if looks.found is None:
+        lazy = [frame for frame, _ in source.parts(rows.wanted)]
+        grown = [delayed(take_part, errand, part)(lazy[number]) for number, part in parts]
+    else:
+        grown = [delayed(grown_of)(looks.found[number]) for number, _ in parts]
     taken = [
-        delayed(take_part, errand, part)(lazy[number])
-        if looks.found is None
-        else delayed(sort_units, errand, part)(looks.found[number])
-        for number, part in parts
+        delayed(sort_units, errand, [part for _, part in parts[some]])(grown[some])
+        for some in _slices(len(parts), groups)
     ]
+    merged = partial(merge_pieces, keys)
     buckets = [
-        delayed(merge_bucket, keys)([delayed(bucket_piece, number)(each) for each in taken])
+        delayed(bucket_whole)(tree(merged, [delayed(bucket_piece, number)(each) for each in taken]))
         for number in range(sorting.buckets)
     ]
     within = tree(add_within, [delayed(within_of)(each) for each in taken])
@@ -151,6 +160,7 @@ def distributed_moments(source: DaskSource, rows: PartedRows, looks: Looks) -> D
     products = settled.within.products
     if settled.within.loss.max() <= LOSS_LIMIT and factor_from_products(products) is not None:
         return Distributed(finish(settled, pooled), sorting.buckets, second=False)
+    lazy = [frame for frame, _ in source.parts(rows.wanted)]
     found = [_factor(errand, settled, part, lazy[number], buckets) for number, part in parts]
     (factor,) = computed(tree(_stacked, found))
     return Distributed(finish(settled, pooled, factor), sorting.buckets, second=True)
@@ -167,10 +177,23 @@ def _stacked(factors: Sequence[FloatArray]) -> FloatArray:
     return stack_factors(*factors)
 
 
-def _sorting(books: Sequence[PartBook], k: int, *, periods: bool) -> Sorting:
-    """Choose the number of buckets from what the parts told, never from the workers."""
-    size = sum(book.units for book in books) * 8 * (k + 2)
+def _sorting(books: Sequence[PartBook], k: int, *, periods: bool) -> tuple[int, Sorting]:
+    """Choose the numbers of groups and of buckets from what the parts told, never from the workers.
+
+    Small parts are merged in groups of neighbours, which hold units of the same bytes as a bucket would if no unit were
+    split; large ones are groups of their own.
+    """
+    told = [book for book in books if book.used]
+    size = sum(book.units for book in told) * 8 * (k + 2)
     if periods:
-        size += sum(book.used for book in books) * _PAIR_BYTES
-    types = {book.key[1] for book in books if book.key is not None}
-    return Sorting(max(1, -(-size // BUCKET_BYTES)), len(types) != 1 or types == {"object"})
+        size += sum(book.used for book in told) * _PAIR_BYTES
+    types = {book.key[1] for book in told if book.key is not None}
+    wanted = max(1, -(-size // BUCKET_BYTES))
+    as_text = len(types) != 1 or types == {"object"}
+    return min(wanted, len(told)), Sorting(min(wanted, MOST_BUCKETS), as_text)
+
+
+def _slices(count: int, groups: int) -> list[slice]:
+    """Cut a count into groups of neighbours whose sizes differ by one at most."""
+    cuts = [count * number // groups for number in range(groups + 1)]
+    return [slice(*pair) for pair in pairwise(cuts)]

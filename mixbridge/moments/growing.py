@@ -36,6 +36,8 @@ LEVEL_LOSS = 256.0
 _FEW_UNITS = 1024
 _FREEDOM = 256
 """Rows beyond one for each unit that it takes to tell the variance within units."""
+_EARLY_ROWS = 4 * BLOCK_ROWS
+"""Rows after which this is asked for the first time; what it costs grows with the units met so far."""
 
 
 def entries_of(columns: tuple[str, ...], constant: int | None) -> IntArray:
@@ -104,9 +106,12 @@ class Growing:
                 np.subtract(rows, d, out=d)
             self.total += _products(d, d)
             self._add_up(part, d)
+            if self._undecided and start + BLOCK_ROWS == _EARLY_ROWS:
+                self._decide()
         if self._undecided:
             self._undecided = False
-            self._decide()
+            if self.anchors is not None:
+                self._decide()
 
     def _add_up(self, codes: IntArray, d: FloatArray) -> None:
         if not COMPILED:  # pragma: no cover

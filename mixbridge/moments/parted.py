@@ -24,8 +24,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from mixbridge.errors import DataError
-from mixbridge.moments.classes import BLOCK_ROWS
-from mixbridge.moments.opened import _refuse_non_finite
+from mixbridge.moments.opened import _refuse_non_finite, add_by_unit
 from mixbridge.moments.parted_look import Grown, Look, grow_part
 from mixbridge.panel.parted import Taught, changed
 from mixbridge.panel.streaming_values import Distinct
@@ -34,6 +33,7 @@ __all__ = [
     "Bucket",
     "Errand",
     "Part",
+    "Piece",
     "Sorting",
     "Taken",
     "Units",
@@ -41,7 +41,9 @@ __all__ = [
     "add_within",
     "bucket_of",
     "bucket_piece",
-    "merge_bucket",
+    "bucket_whole",
+    "grown_of",
+    "merge_pieces",
     "sort_units",
     "split_by",
     "take_part",
@@ -50,6 +52,8 @@ __all__ = [
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.intp]
+_AT_ONCE = 2048
+"""Units merged at once: what is made on the way stays in the cache, and is not given back in between."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -114,21 +118,29 @@ class Within:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Taken:
-    """Moments of one part.
+class Piece:
+    """Some units of some parts.
 
     Parameters
     ----------
-    within : Within
-    units : tuple of Units
-        By bucket.
-    pairs : tuple of pandas.DataFrame
-        Unit and period of every row, by bucket; empty without periods.
+    units : Units
+    extra : ndarray of shape (k, k)
+        What units split between these parts add to W.
+    pairs : pandas.DataFrame or None
+        Unit and period of every row; None without periods.
     """
 
+    units: Units
+    extra: FloatArray
+    pairs: pd.DataFrame | None
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Taken:
+    """Moments of a group of parts: within products, and the units by bucket."""
+
     within: Within
-    units: tuple[Units, ...]
-    pairs: tuple[pd.DataFrame, ...]
+    pieces: tuple[Piece, ...]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -149,7 +161,7 @@ def bucket_of(keys: pd.Series[Any], sorting: Sorting) -> IntArray:
     return (pd.util.hash_array(plain) % np.uint64(sorting.buckets)).astype(np.intp)
 
 
-def take_part(errand: Errand, part: Part, frame: object) -> Taken:
+def take_part(errand: Errand, part: Part, frame: object) -> Grown | None:
     """Take the moments of one part.
 
     Parameters
@@ -159,57 +171,92 @@ def take_part(errand: Errand, part: Part, frame: object) -> Taken:
     frame : pandas.DataFrame
         Its rows.
     """
-    return _sorted(errand, part, grow_part(errand.taught, part.place, frame))
+    return grow_part(errand.taught, part.place, frame)
 
 
-def sort_units(errand: Errand, part: Part, look: Look) -> Taken:
-    """Sort the units of moments that the first look at a part has taken."""
-    return _sorted(errand, part, look.grown)
+def grown_of(look: Look) -> Grown | None:
+    """Return the moments that the first look at a part has taken."""
+    return look.grown
 
 
-def _sorted(errand: Errand, part: Part, grown: Grown | None) -> Taken:
-    """Measure means from the common origin, and sort units by bucket."""
+def sort_units(errand: Errand, parts: Sequence[Part], grown: Sequence[Grown | None]) -> Taken:
+    """Merge the moments of a few parts, measured from the common origin, and sort their units by bucket.
+
+    Parameters
+    ----------
+    errand : Errand
+    parts : sequence of Part
+    grown : sequence of Grown or None
+        Their moments.
+
+    Raises
+    ------
+    DataError
+        If the rows are not what they were when they were first read, or a pair of unit and period is repeated.
+    """
+    measured = [_measured(errand, part, each) for part, each in zip(parts, grown, strict=True)]
+    within = add_within([within for within, _ in measured])
+    merged = merge_pieces(errand.taught.recipe.keys, [piece for _, piece in measured])
+    return Taken(Within(within.products + merged.extra, within.loss), _split(errand, merged))
+
+
+def _measured(errand: Errand, part: Part, grown: Grown | None) -> tuple[Within, Piece]:
+    """Measure the means of a part from the common origin."""
     if grown is None or grown.counts.sum() != part.used:
         raise changed(part.place)
     _refuse_non_finite(grown.total, errand.columns)
-    sorting = errand.sorting
-    bucket = bucket_of(grown.keys, sorting)
-    order, cuts = split_by(bucket, sorting.buckets)
-    units = tuple(
-        Units(
-            grown.keys.iloc[chosen].reset_index(drop=True),
-            grown.counts[chosen],
-            _taken(grown.anchors - errand.origin, chosen) + np.take(grown.offsets, chosen, axis=0),
-        )
-        for chosen in np.split(order, cuts)
-    )
-    return Taken(Within(grown.within, grown.loss), units, _pairs(grown, bucket, sorting.buckets))
+    means = (grown.anchors - errand.origin) + grown.offsets
+    units = Units(grown.keys, grown.counts, means)
+    return Within(grown.within, grown.loss), Piece(units, np.zeros_like(grown.within), _pairs(grown))
 
 
-def _taken(anchors: FloatArray, chosen: IntArray) -> FloatArray:
-    """Return what some units are measured from."""
-    return anchors if len(anchors) == 1 else np.take(anchors, chosen, axis=0)
-
-
-def _pairs(grown: Grown, bucket: IntArray, buckets: int) -> tuple[pd.DataFrame, ...]:
+def _pairs(grown: Grown) -> pd.DataFrame | None:
     if not grown.rows:
-        return ()
+        return None
     codes = np.concatenate([codes for codes, _ in grown.rows])
     periods = pd.concat([period for _, period in grown.rows], ignore_index=True)
-    both = pd.DataFrame({"unit": grown.keys.iloc[codes].reset_index(drop=True), "period": periods})
-    order, cuts = split_by(bucket[codes], buckets)
-    return tuple(both.iloc[chosen] for chosen in np.split(order, cuts))
+    return pd.DataFrame({"unit": grown.keys.iloc[codes].reset_index(drop=True), "period": periods})
+
+
+def _split(errand: Errand, piece: Piece) -> tuple[Piece, ...]:
+    """Sort the units of a piece by bucket, without what they add to W."""
+    sorting, units, nothing = errand.sorting, piece.units, np.zeros_like(piece.extra)
+    if sorting.buckets == 1:
+        return (Piece(units, nothing, piece.pairs),)
+    order, cuts = split_by(bucket_of(units.keys, sorting), sorting.buckets)
+    pairs: Sequence[pd.DataFrame | None] = [None] * sorting.buckets
+    if piece.pairs is not None:
+        rows, at = split_by(bucket_of(piece.pairs["unit"], sorting), sorting.buckets)
+        pairs = [piece.pairs.iloc[chosen] for chosen in np.split(rows, at)]
+    return tuple(
+        Piece(
+            Units(
+                units.keys.iloc[chosen].reset_index(drop=True),
+                units.counts[chosen],
+                np.take(units.means, chosen, axis=0),
+            ),
+            nothing,
+            pairs[number],
+        )
+        for number, chosen in enumerate(np.split(order, cuts))
+    )
 
 
 def split_by(bucket: IntArray, buckets: int) -> tuple[IntArray, IntArray]:
     """Return the order by bucket, the given order within, and where each further bucket begins."""
-    order = np.argsort(bucket, kind="stable")
+    small = bucket.astype(np.uint16) if buckets < 2**16 else bucket  # sorted by counting
+    order = np.argsort(small, kind="stable")
     return order, np.searchsorted(bucket[order], np.arange(1, buckets))
 
 
-def bucket_piece(number: int, taken: Taken) -> tuple[Units, pd.DataFrame | None]:
-    """Return what a part has for one bucket."""
-    return taken.units[number], taken.pairs[number] if taken.pairs else None
+def bucket_piece(number: int, taken: Taken) -> Piece:
+    """Return what a group of parts has for one bucket."""
+    return taken.pieces[number]
+
+
+def bucket_whole(piece: Piece) -> Bucket:
+    """Return the bucket, when all its pieces are in one."""
+    return Bucket(piece.units, piece.extra)
 
 
 def within_of(taken: Taken) -> Within:
@@ -223,14 +270,14 @@ def add_within(parts: Sequence[Within]) -> Within:
     return Within(products, np.max([part.loss for part in parts], axis=0))
 
 
-def merge_bucket(names: tuple[str, ...], pieces: Sequence[tuple[Units, pd.DataFrame | None]]) -> Bucket:
-    """Merge what the parts have for one bucket.
+def merge_pieces(names: tuple[str, ...], pieces: Sequence[Piece]) -> Piece:
+    """Merge pieces that may hold the same units.
 
     Parameters
     ----------
     names : tuple of str
         Column of the units and, if given, of the periods.
-    pieces : sequence
+    pieces : sequence of Piece
         In the order of the parts.
 
     Raises
@@ -238,11 +285,17 @@ def merge_bucket(names: tuple[str, ...], pieces: Sequence[tuple[Units, pd.DataFr
     DataError
         If a pair of unit and period is repeated.
     """
-    _refuse_repeated(names, [pairs for _, pairs in pieces if pairs is not None])
-    units = [units for units, _ in pieces if len(units.counts)]
-    k = pieces[0][0].means.shape[1]
-    if not units:
-        return Bucket(pieces[0][0], np.zeros((k, k)))
+    if len(pieces) == 1:
+        _refuse_repeated(names, pieces[0].pairs)
+        return pieces[0]
+    held = [piece.pairs for piece in pieces if piece.pairs is not None]
+    pairs = pd.concat(held, ignore_index=True) if held else None
+    _refuse_repeated(names, pairs)
+    extra = reduce(np.add, (piece.extra for piece in pieces))
+    units = [piece.units for piece in pieces if len(piece.units.counts)]
+    if len(units) < 2:
+        return Piece(units[0] if units else pieces[0].units, extra, pairs)
+    k = extra.shape[0]
     known = Distinct(names[0], whole=True)
     places = [known.enter(part.keys, "a part") for part in units]
     counts = np.zeros(len(known), dtype=np.int64)
@@ -250,28 +303,37 @@ def merge_bucket(names: tuple[str, ...], pieces: Sequence[tuple[Units, pd.DataFr
     seen = 0
     for part, codes in zip(units, places, strict=True):  # a unit is in each part once: plain indexing adds up
         counts[codes] += part.counts
-        new, old = np.flatnonzero(codes >= seen), np.flatnonzero(codes < seen)
-        anchors[codes[new]] = part.means[new]
-        gap = part.means[old] - anchors[codes[old]]
-        shift[codes[old]] += part.counts[old, None] * gap
+        new = np.flatnonzero(codes >= seen)  # in the order of their numbers
+        anchors[seen : seen + new.size] = np.take(part.means, new, axis=0)
         seen += new.size
+        if new.size < codes.size:
+            for some in _blocks_of(codes.size):
+                at = codes[some]
+                gap = part.means[some] - np.take(anchors, at, axis=0)
+                gap *= part.counts[some, None]
+                add_by_unit(shift, at, gap)
     shift /= counts[:, None]
-    extra = np.zeros((k, k))
+    more = np.zeros((k, k))
     for part, codes in zip(units, places, strict=True):
-        split = np.flatnonzero(counts[codes] > part.counts)
-        for start in range(0, split.size, BLOCK_ROWS):
-            some = split[start : start + BLOCK_ROWS]
-            off = (part.means[some] - anchors[codes[some]]) - shift[codes[some]]
-            extra += off.T @ (part.counts[some, None] * off)
+        for some in _blocks_of(codes.size):
+            at = codes[some]
+            if (counts[at] > part.counts[some]).any():
+                off = part.means[some] - np.take(anchors, at, axis=0)
+                off -= np.take(shift, at, axis=0)
+                more += off.T @ (part.counts[some, None] * off)
     anchors += shift
     keys = known.plain(known.series())
-    return Bucket(Units(keys, counts, anchors), (extra + extra.T) / 2.0)
+    return Piece(Units(keys, counts, anchors), extra + (more + more.T) / 2.0, pairs)
 
 
-def _refuse_repeated(names: tuple[str, ...], pairs: Sequence[pd.DataFrame]) -> None:
-    if not pairs:
+def _blocks_of(size: int) -> list[slice]:
+    """Return slices that are small enough to stay in the cache."""
+    return [slice(start, start + _AT_ONCE) for start in range(0, size, _AT_ONCE)]
+
+
+def _refuse_repeated(names: tuple[str, ...], both: pd.DataFrame | None) -> None:
+    if both is None:
         return
-    both = pd.concat(pairs, ignore_index=True)
     again = both.duplicated()
     if again.any():
         unit, period = both[again].iloc[0]

@@ -125,7 +125,7 @@ def look_at_part(
         Whether rows are measured from the first of their unit in any case.
     """
     plan, growth, complete = plan_of(recipe), _Growth(by_unit=by_unit), True
-    one_pass = OnePass(plan)
+    one_pass = OnePass(plan, in_turn=True)
 
     def take(step: Step, codes: IntArray) -> None:
         nonlocal complete

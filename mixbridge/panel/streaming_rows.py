@@ -98,12 +98,27 @@ def z_pieces(
     )
 
 
-def z_between(
-    design: Design, factors: Sequence[Learned], response: Learned, begin: int, end: int
+def z_in_turn(
+    design: Design, factors: Sequence[Learned], response: Learned, rows: int
+) -> Iterable[FloatArray]:
+    """Lay out rows as `z_of`, in pieces that stay in the cache; each takes the place of the one before."""
+    room = np.empty((min(rows, _ROWS), len(design.recipe) - (design.constant is not None) + 2))
+    for begin in range(0, rows, _ROWS):
+        end = min(begin + _ROWS, rows)
+        yield z_between(design, factors, response, begin, end, room[: end - begin])
+
+
+def z_between(  # noqa: PLR0917  (rows from and to, as in a range)
+    design: Design,
+    factors: Sequence[Learned],
+    response: Learned,
+    begin: int,
+    end: int,
+    room: FloatArray | None = None,
 ) -> FloatArray:
-    """Lay out the rows between two as `z_of`."""
+    """Lay out the rows between two as `z_of`, in an array at hand if there is one."""
     recipe = [parts for j, parts in enumerate(design.recipe) if j != design.constant]
-    z = np.empty((end - begin, len(recipe) + 2))
+    z = np.empty((end - begin, len(recipe) + 2)) if room is None else room
     for start in range(begin, end, _ROWS):
         stop = min(start + _ROWS, end)
         values = [factor.block(start, stop) for factor in factors]
@@ -138,10 +153,12 @@ class OnePass:
     Parameters
     ----------
     plan : Plan
+    in_turn : bool
+        Whether a piece is done with before the next one is asked for.
     """
 
-    def __init__(self, plan: Plan) -> None:
-        self._plan = plan
+    def __init__(self, plan: Plan, *, in_turn: bool = False) -> None:
+        self._plan, self._lay_out = plan, z_in_turn if in_turn else z_pieces
         self._design: Design | None = None
         self.possible = True
 
@@ -159,7 +176,7 @@ class OnePass:
         if learned is None:
             return step, None
         factors = [learned[factor] for factor in self._plan.formula.factors]
-        return step, z_pieces(self._design, factors, learned[self._plan.formula.outcome], step.used)
+        return step, self._lay_out(self._design, factors, learned[self._plan.formula.outcome], step.used)
 
     def __str__(self) -> str:
         """Return what the pass turns out to be for."""

@@ -17,6 +17,8 @@ __all__ = ["Distinct", "other_sort", "sort_of"]
 _SPAN = 1 << 22
 """Integers that lie within this, or within eight times their number, are looked up in a table."""
 _LARGEST = np.iinfo(np.int64).max
+_AT_ONCE = 8192
+"""Values looked up at once: what is made on the way stays in the cache."""
 
 
 class Distinct:
@@ -157,14 +159,7 @@ class Distinct:
         if self._table is not None:
             least, table = self._table
             if values.dtype == np.int64:
-                # a difference that wraps around is beyond the table too
-                offset = (values.to_numpy() - least).view(np.uint64)
-                inside = offset < np.uint64(len(table))
-                if inside.all():
-                    return np.take(table, offset.view(np.int64)).astype(np.intp) - 1
-                return np.where(
-                    inside, table[np.where(inside, offset, 0).astype(np.int64)].astype(np.intp) - 1, -1
-                )
+                return _found_in(table, values.to_numpy(), least)
             self._leave_table()
         places = np.full(len(values), -1, dtype=np.intp)
         for start, level in self._levels:
@@ -302,3 +297,21 @@ def sort_of(series: pd.Series[Any]) -> str:
 
 
 _sort_of = sort_of
+
+
+def _found_in(
+    table: npt.NDArray[np.int32], values: npt.NDArray[np.int64], least: int
+) -> npt.NDArray[np.intp]:
+    """Return the entry of each value in a table that begins with one, less one; -1 beyond the table."""
+    places = np.empty(len(values), dtype=np.intp)
+    for start in range(0, len(values), _AT_ONCE):
+        some = slice(start, start + _AT_ONCE)
+        # a difference that wraps around is beyond the table too
+        offset = (values[some] - least).view(np.uint64)
+        beyond = offset >= np.uint64(len(table))
+        if beyond.any():
+            offset[beyond] = 0
+        np.subtract(np.take(table, offset.view(np.int64)), 1, out=places[some])
+        if beyond.any():
+            places[some][beyond] = -1
+    return places
