@@ -15,6 +15,7 @@ import numpy as np
 from benchmarks.measure import text
 from benchmarks.profiles import Profile
 from benchmarks.results import Agreement, Ratio, Result, Table
+from mixbridge.moments.distributed import BUCKET_BYTES, MOST_BUCKETS
 from mixbridge.study import crosscheck
 
 COVARIATES = 5
@@ -36,19 +37,24 @@ class Projection:
         Machines, and worker processes on all of them.
     reading, moving : float
         Seconds in which workers read rows and take moments, and in which units travel to their bucket.
+    scheduling : float
+        Seconds that the scheduler takes for its tasks.
     moved : float
         Bytes that travel between machines.
+    tasks : float
     """
 
     machines: int
     workers: int
     reading: float
     moving: float
+    scheduling: float
     moved: float
+    tasks: float
 
     @property
     def seconds(self) -> float:
-        return self.reading + self.moving
+        return self.reading + self.moving + self.scheduling
 
 
 def project(
@@ -57,6 +63,7 @@ def project(
     machines: int,
     *,
     rate: float,
+    per_task: float,
     workers_each: int = 8,
     rows_per_part: float = 5e6,
     network: float = 1.25e9,
@@ -64,8 +71,9 @@ def project(
     """Project a run on k machines from a measured rate.
 
     Rows lie in random order, so a part of m rows holds ``N (1 - exp(-m / N))`` of N units on average (Poisson), each of
-    which travels as a key, a count and the means. A share ``1 - 1/k`` goes to another machine. Reading and moving are
-    counted one after the other; the scheduler's own time is not counted.
+    which travels as a key, a count and the means. A share ``1 - 1/k`` goes to another machine. Each part makes a task
+    for each bucket and a few of its own, and pieces are merged eight at a time. Reading, moving and scheduling are
+    counted one after the other.
 
     Parameters
     ----------
@@ -73,6 +81,8 @@ def project(
     machines : int
     rate : float
         Rows per second of one worker, measured, both passes and all merging included.
+    per_task : float
+        Seconds of the scheduler for a task, measured.
     workers_each : int
         Worker processes of a machine.
     rows_per_part : float
@@ -80,9 +90,14 @@ def project(
         Bytes per second into one machine.
     """
     workers = machines * workers_each
+    parts = rows / rows_per_part
     per_part = units * -np.expm1(-rows_per_part / units)
-    moved = rows / rows_per_part * per_part * 8 * (WIDTH + 2) * (1 - 1 / machines)
-    return Projection(machines, workers, rows / (rate * workers), moved / (machines * network), moved)
+    bytes_of_part = per_part * 8 * (WIDTH + 2)
+    moved = parts * bytes_of_part * (1 - 1 / machines)
+    buckets = min(parts * bytes_of_part / BUCKET_BYTES, MOST_BUCKETS)
+    tasks = parts * (4 + buckets * 8 / 7)
+    reading, moving = rows / (rate * workers), moved / (machines * network)
+    return Projection(machines, workers, reading, moving, tasks * per_task, moved, tasks)
 
 
 def distributed(profile: Profile) -> Result:
@@ -93,6 +108,7 @@ def distributed(profile: Profile) -> Result:
         units = _write(Path(folder), rows)
         with _tasks(Path(folder), processes=profile.name != "tiny") as (tasks, processor):
             spent, found = _interleaved(tasks, rounds, processor)
+            per_task = _scheduling({"tiny": 50}.get(profile.name, 4_000))
     clock = {name: min(clock for clock, _ in times) for name, times in spent.items()}
     busy = {name: min(busy for _, busy in times) for name, times in spent.items()}
     streamed, on_workers, *in_database = tasks
@@ -104,7 +120,7 @@ def distributed(profile: Profile) -> Result:
     largest = np.abs(found[streamed]).max()
     return Result(
         problem=f"{rows:,} rows × {COVARIATES} covariates in {FILES} Parquet files, {units:,} units of about "
-        f"{ROWS_PER_UNIT} rows, rows in random order",
+        f"{ROWS_PER_UNIT} rows, rows in random order; Dask reads them with filesystem='arrow'",
         method=f"time on the clock, best of {rounds} interleaved rounds, since workers and databases use processors of "
         "their own: each task may use two; beside it the least processor time of all processes together, which other "
         "programs on the machine disturb less",
@@ -124,27 +140,38 @@ def distributed(profile: Profile) -> Result:
             )
             for name in (on_workers, *in_database)
         ),
-        notes=(projected(rows / clock[on_workers] / WORKERS),),
+        notes=(projected(rows / clock[on_workers] / WORKERS, per_task),),
     )
 
 
-def projected(rate: float) -> str:
+def projected(rate: float, per_task: float) -> str:
     """Return the projection to ten thousand million rows as text."""
     rows, units = 1e10, 1e8
     lines = []
     for machines in (4, 16, 64):
-        p = project(rows, units, machines, rate=rate)
+        p = project(rows, units, machines, rate=rate, per_task=per_task)
         lines.append(
             f"{machines} machines, {p.workers} workers: {p.seconds / 60:.1f} minutes ({p.reading / 60:.1f} reading and "
-            f"taking moments, {p.moving / 60:.1f} moving {p.moved / 1e9:,.0f} GB between machines)"
+            f"taking moments, {p.moving / 60:.1f} moving {p.moved / 1e9:,.0f} GB between machines, "
+            f"{p.scheduling / 60:.1f} scheduling {p.tasks:,.0f} tasks)"
         )
     return (
-        f"On paper, 10^10 rows of 10^8 units in random order, {rate:,.0f} rows per second of one worker as measured "
-        "here, 8 workers and a network of 10 Gbit/s per machine, parts of 5 million rows; the scheduler's own time and "
-        "slower storage are not counted: "
+        f"On paper, 10^10 rows of 10^8 units in random order, {rate:,.0f} rows per second of one worker and "
+        f"{1e3 * per_task:.2g} ms of the scheduler for a task, both as measured here, 8 workers and a network of "
+        "10 Gbit/s per machine, parts of 5 million rows; slower storage is not counted: "
         + "; ".join(lines)
         + ". Rows that lie together by unit move a hundredth of that."
     )
+
+
+def _scheduling(count: int) -> float:
+    """Return the seconds that the scheduler in force takes for a task that does nothing."""
+    import dask  # noqa: PLC0415
+
+    tasks = [dask.delayed(bool, pure=False)(number) for number in range(count)]
+    start = time.perf_counter()
+    dask.compute(*tasks)
+    return (time.perf_counter() - start) / count
 
 
 def _write(folder: Path, rows: int) -> int:

@@ -1,10 +1,10 @@
 """Closed moments of a Dask DataFrame: parts, buckets of units, and trees, as graphs of tasks.
 
-Each partition gives its moments, cut into buckets by unit; the pieces of a bucket meet in one task; buckets are
-closed where they are and pooled in a tree. Only the closed moments reach the caller, and before them what each
-partition tells of its rows (counts, extremes, levels). Every task depends on its inputs alone, so that the scheduler
-may repeat what a lost worker held, and the number of buckets and the shape of the trees depend on the data alone, so
-that results do not depend on the number of workers.
+Each partition gives its moments; those of small neighbours are merged, and cut into buckets by unit; the pieces of a
+bucket are merged in a tree; buckets are closed where they are and pooled in a tree. Only the closed moments reach the
+caller, and before them what each partition tells of its rows (counts, extremes, levels). Every task depends on its
+inputs alone, so that the scheduler may repeat what a lost worker held, and the number of buckets and the shape of the
+trees depend on the data alone, so that results do not depend on the number of workers.
 """
 
 from __future__ import annotations

@@ -13,6 +13,7 @@ from patsy import EvalEnvironment
 from mixbridge.errors import DataError, FormulaError, OptionError
 from mixbridge.panel.absent import RowlessPanel
 from mixbridge.panel.accounting import Accounting
+from mixbridge.panel.coding import lesson_coding
 from mixbridge.panel.design import lay_out
 from mixbridge.panel.formula import parse_formula
 from mixbridge.panel.parted import Recipe, Taught, plan_of, portable, read_rows, refuse_foreign
@@ -82,6 +83,8 @@ class PartedRows:
         What each part told.
     wanted : list of str
         Columns to read.
+    coding : str
+        What columns mean beyond their names.
     """
 
     outcome: str
@@ -93,6 +96,7 @@ class PartedRows:
     origin: FloatArray
     books: list[PartBook]
     wanted: Sequence[str]
+    coding: str
 
 
 def learn_parted(
@@ -173,4 +177,5 @@ def learn_parted(
         first.z[0, :-1],
         books,
         wanted,
+        lesson_coding(design.names, plan, lesson),
     )

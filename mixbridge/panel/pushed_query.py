@@ -14,6 +14,7 @@ from patsy import EvalEnvironment, EvalFactor
 from mixbridge.errors import DataError, FormulaError, OptionError
 from mixbridge.panel.accounting import Accounting
 from mixbridge.panel.categories import Coded
+from mixbridge.panel.coding import digest
 from mixbridge.panel.design import Design, lay_out
 from mixbridge.panel.factors import Stored
 from mixbridge.panel.formula import parse_formula
@@ -61,6 +62,8 @@ class Query:
         Whether unit keys are integers beyond 64 bits, fetched as text.
     steps : Steps or None
         What is known of the periods.
+    coding : str
+        What columns mean beyond their names.
     """
 
     source: RelationSource
@@ -74,6 +77,7 @@ class Query:
     period: str | None
     wide_keys: bool
     steps: Steps | None
+    coding: str
 
     @property
     def asked(self) -> list[int]:
@@ -168,6 +172,7 @@ def build_query(
         period,
         types[unit] in _WIDE,
         steps,
+        digest(design.names, [learned[factor] for factor in parsed.factors]),
     )
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any, Literal, TypedDict, Unpack
 
 from mixbridge.errors import OptionError
@@ -90,7 +90,9 @@ def _from_relation(formula: str, data: Any, **reading: Unpack[Reading]) -> Elsew
         "units closed as they came, too many to keep" if keys is None else "counts and means of units fetched"
     )
     note = f"a DuckDB relation, summed per unit in the database; {kept}"
-    return Elsewhere(PushedPanel(formula, query, taken.units, keys, note), taken.opened, taken.moments)
+    opened = None if taken.opened is None else replace(taken.opened, coding=query.coding)
+    moments = replace(taken.moments, coding=query.coding)
+    return Elsewhere(PushedPanel(formula, query, taken.units, keys, note), opened, moments)
 
 
 def _from_dask(formula: str, data: Any, **reading: Unpack[Reading]) -> Elsewhere:
@@ -121,4 +123,4 @@ def _from_dask(formula: str, data: Any, **reading: Unpack[Reading]) -> Elsewhere
         N=taken.moments.units,
         source_note=note,
     )
-    return Elsewhere(panel, None, taken.moments)
+    return Elsewhere(panel, None, replace(taken.moments, coding=found.coding))
