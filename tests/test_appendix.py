@@ -11,6 +11,7 @@ import pytest
 from appendix_cases import HONEY, STUDIES, demo, panel, record_of, repelling
 
 import mixbridge
+from mixbridge.display.text import number
 from mixbridge.report.appendix import LENGTHS, compose
 from mixbridge.report.as_html import html
 from mixbridge.report.as_latex import latex
@@ -18,7 +19,6 @@ from mixbridge.report.as_markdown import markdown
 from mixbridge.report.document import Bullets, Code, Formula, Heading, Paragraph, Table
 from mixbridge.report.document_text import texts_of
 from mixbridge.report.estimators import ESTIMATORS
-from mixbridge.report.text import number
 from mixbridge.report.words import AUDIENCES
 from mixbridge.routes import ROUTES
 

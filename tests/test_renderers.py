@@ -15,6 +15,7 @@ from hypothesis import strategies as st
 from markdown_it import MarkdownIt
 
 from mixbridge.display import visible
+from mixbridge.display.text import number
 from mixbridge.errors import DataError
 from mixbridge.report.as_html import html
 from mixbridge.report.as_latex import latex
@@ -25,7 +26,6 @@ from mixbridge.report.svg import inline_svg
 from mixbridge.report.symbols import INDEXED, WRITTEN
 from mixbridge.report.tex_signs import TEXT
 from mixbridge.report.tex_text import tex_text
-from mixbridge.report.text import number
 
 anything = st.text(max_size=60) | st.text(alphabet="\\`*_[]|~^&<>$#%{}-+=.1:/ \n\t'\"\u202e!@()", max_size=30)
 

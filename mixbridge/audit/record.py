@@ -11,6 +11,7 @@ import numpy as np
 import pandas as pd
 
 from mixbridge.display import Printed
+from mixbridge.display.text import wrapped
 from mixbridge.errors import OptionError
 from mixbridge.moments import Moments, OpenMoments
 from mixbridge.moments.products import UnitProducts
@@ -169,18 +170,24 @@ class Audit(Printed):
 
     def __str__(self) -> str:
         """Return header and findings as text, one paragraph per row."""
-        return "\n\n".join(["\n".join(self.header), *(_paragraph(item) for item in self.findings)])
+        return "\n\n".join(["\n".join(wrapped(self.header)), *(_paragraph(item) for item in self.findings)])
 
 
 def _paragraph(item: Finding) -> str:
-    lines = [f"{item.assumption} [{item.key}]", f"  evidence     {item.evidence}"]
-    if item.status != COMPUTED:
-        lines.append(f"  status       {item.status}")
+    statistic = ""
     if np.isfinite(item.statistic):
-        lines.append(
-            f"  statistic    {item.statistic:.4g}; {item.reference}; p = {item.p_value:.3g}"
-            if np.isfinite(item.p_value)
-            else f"  statistic    {item.statistic:.4g}"
-        )
-    named = ("departure", item.departure), ("consequence", item.consequence), ("conclusion", item.conclusion)
-    return "\n".join([*lines, *(f"  {name:<12} {text}" for name, text in named if text)])
+        statistic = f"{item.statistic:.4g}"
+        if np.isfinite(item.p_value):
+            statistic += f"; {item.reference}; p = {item.p_value:.3g}"
+    named = {
+        "evidence": item.evidence,
+        "status": "" if item.status == COMPUTED else item.status,
+        "statistic": statistic,
+        "departure": item.departure,
+        "consequence": item.consequence,
+        "conclusion": item.conclusion,
+    }
+    lines = wrapped([f"{item.assumption} [{item.key}]"])
+    for name, text in named.items():
+        lines += wrapped([text], f"  {name:<12} ", " " * 15)
+    return "\n".join(lines)

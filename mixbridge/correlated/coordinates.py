@@ -15,6 +15,8 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from mixbridge.correlated.augment import Augmented
+from mixbridge.display import Printed
+from mixbridge.display.text import frame_lines, wrapped
 from mixbridge.errors import OptionError
 from mixbridge.inference.kenward_roger import kenward_roger
 from mixbridge.inference.references import Reference, Robust, pick_reference
@@ -29,7 +31,7 @@ KINDS = ("within", "between", "contextual")
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Coordinates:
+class Coordinates(Printed):
     """Within, between and contextual coefficients of one fit.
 
     Attributes
@@ -102,6 +104,22 @@ class Coordinates:
             columns[f"{kind}_p"] = p_values[part]
         columns["reason"] = [self.reasons.get(term, "") for term in self.terms]
         return pd.DataFrame(columns)
+
+    def __str__(self) -> str:
+        """Return the coefficients with standard errors, and why some are missing."""
+        table = self.table
+        shown = table[["term", *(name for kind in KINDS for name in (kind, f"{kind}_se")), "contextual_p"]]
+        shown = shown.set_axis(["term", *(name for kind in KINDS for name in (kind, "se")), "p"], axis=1)
+        reasons: dict[str, list[str]] = {}
+        for term, reason in zip(table["term"], table["reason"], strict=True):
+            if reason:
+                reasons.setdefault(reason, []).append(term)
+        texts = [f"{', '.join(terms)}: {reason}." for reason, terms in reasons.items()]
+        head = (
+            f"Within, between and contextual coefficients by {self.route}, one fit with unit means; covariance "
+            f"{self.covariance_name}, reference {self.rule}; p: contextual coefficient zero."
+        )
+        return "\n".join([*wrapped([head]), *frame_lines(shown), *wrapped(texts)])
 
 
 def coordinates(

@@ -20,6 +20,8 @@ import pandas as pd
 import scipy
 from numpy.typing import NDArray
 
+from mixbridge.display import Printed
+from mixbridge.display.text import frame_lines, sentence, wrapped
 from mixbridge.errors import IdentificationError
 from mixbridge.moments import Moments, span_of
 from mixbridge.moments.coordinates import ModelCoordinates
@@ -91,7 +93,7 @@ class Overidentification:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Instrumented:
+class Instrumented(Printed):
     """Estimates with internal instruments.
 
     Attributes
@@ -159,6 +161,13 @@ class Instrumented:
         """
         columns = ["column", "statistic", "df1", "df2", "p_value", "partial_r_squared"]
         return pd.DataFrame(list(self.strength), columns=columns)
+
+    def __str__(self) -> str:
+        """Return coefficients with their roles, the test, the strength of the instruments and what was declared."""
+        lines = [f"{self.fit.route}: {self.status}; {self.instruments} instruments"]
+        for table in (self.table, self.overidentification, self.first_stage):
+            lines += [*frame_lines(table, widest=48), ""] if len(table) else []
+        return "\n".join([*lines, *wrapped([self.statement, *map(sentence, self.fit.notes)])])
 
 
 def estimate(

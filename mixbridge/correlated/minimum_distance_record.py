@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from textwrap import wrap
 
 import numpy as np
 import pandas as pd
@@ -16,6 +15,8 @@ from mixbridge.correlated.minimum_distance_tests import MEANING, tests_of
 from mixbridge.correlated.projection import Projection
 from mixbridge.correlated.projection_columns import Origin
 from mixbridge.correlated.reduced_form import ReducedForm, reduced_form
+from mixbridge.display import Printed
+from mixbridge.display.text import frame_lines, wrapped
 from mixbridge.errors import OptionError
 from mixbridge.moments import OpenMoments
 from mixbridge.panel import Panel
@@ -27,7 +28,6 @@ FloatArray = NDArray[np.float64]
 FEW = 10
 """Units per coefficient of the reduced form, and residual degrees of freedom, below which a note is shown (common
 practice)."""
-WIDTH = 100
 
 NOT_EVIDENCE = "A test that does not reject proves nothing, and none of them chooses the estimator."
 COEFFICIENTS = [
@@ -48,7 +48,7 @@ COEFFICIENTS = [
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class MinimumDistance:
+class MinimumDistance(Printed):
     """Minimum distance with every kind of weights.
 
     Attributes
@@ -157,9 +157,9 @@ class MinimumDistance:
             f"Minimum distance: {size['coefficients']} reduced-form coefficients, {size['parameters']} parameters, "
             f"{size['units']} units, {size['periods']} periods"
         )
-        lines = wrap(head, WIDTH)
+        lines = wrapped([head])
         for found in self.distances:
-            lines += wrap(f"  {found.weights}: {found.status}", WIDTH, subsequent_indent="    ")
+            lines += [f"  {line}" for line in wrapped([f"{found.weights}: {found.status}"])]
         slopes = self.coefficients[
             [
                 "term",
@@ -176,16 +176,14 @@ class MinimumDistance:
         tests = self.tests[["tested", "weights", "statistic", "df", "p_value", "p_few_units"]]
         tests.columns = ["tested", "weights", "statistic", "df", "p", "p, few"]
         for table in (slopes, tests):
-            lines += ["", *_shown(table)]
+            lines += ["", *frame_lines(table)]
         texts = [
             f"{tested}: {meaning}." for tested, meaning in MEANING.items() if tested in set(tests["tested"])
         ]
         for row in self.tests.itertuples(index=False):
             if str(row.reference).startswith("not ") and self.with_weights(str(row.weights)).estimated:
                 texts.append(f"{row.tested}, {row.weights}: {row.reference}.")
-        return "\n".join(
-            [*lines, "", *(line for text in (*texts, *self.notes) for line in wrap(text, WIDTH))]
-        )
+        return "\n".join([*lines, "", *wrapped([*texts, *self.notes])])
 
 
 def minimum_distance(
@@ -286,8 +284,3 @@ def _columns(panel: Panel, form: ReducedForm, projection: Projection) -> list[st
             f"Not in the projection, being determined by other columns: {'; '.join(dropped[:3])}{more}."
         )
     return found + [f"{name} is not identified: {reason}." for name, reason in form.lost.items()]
-
-
-def _shown(table: pd.DataFrame) -> list[str]:
-    with pd.option_context("display.width", WIDTH, "display.max_columns", 10, "display.max_colwidth", 24):
-        return table.to_string(index=False, float_format=lambda v: f"{v:.4g}", na_rep="-").splitlines()

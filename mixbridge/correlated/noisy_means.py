@@ -34,6 +34,8 @@ from mixbridge.correlated.mundlak import Mundlak
 from mixbridge.correlated.noisy_correction import NO_SIGNAL, added_mean, correction_at, independent
 from mixbridge.correlated.noisy_covariance import Columns, corrected_covariance
 from mixbridge.correlated.reliability import MeanReliability, mean_reliability, period_columns
+from mixbridge.display import Printed
+from mixbridge.display.text import frame_lines, wrapped
 from mixbridge.errors import OptionError
 from mixbridge.routes import Fit
 
@@ -47,7 +49,7 @@ FRAGILE = 0.2
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class NoisyMeans:
+class NoisyMeans(Printed):
     """Reliability of unit means, and corrected coefficients beside the uncorrected ones.
 
     Attributes
@@ -147,6 +149,16 @@ class NoisyMeans:
             for g, (size, count) in enumerate(zip(self.sizes, self.counts, strict=True))
         ]
         return pd.DataFrame(rows, columns=["term", "size", "units", "contextual", "between"])
+
+    def __str__(self) -> str:
+        """Return estimates beside corrected ones, reliabilities, and what they take for granted."""
+        lines = wrapped([f"Noise of unit means: {self.status}"])
+        for table in (
+            self.correction,
+            self.reliability[["column", "size", "units", "reliability", "status"]],
+        ):
+            lines += [*frame_lines(table), ""]
+        return "\n".join([*lines, *wrapped([self.statement, *self.notes])])
 
 
 def noisy_means(
@@ -318,7 +330,7 @@ def _statement(unit: str, terms: tuple[str, ...], fixed: tuple[str, ...], popula
     )
     beside = f" Taken without noise: {', '.join(fixed)}." if fixed else ""
     return (
-        f"Noise of unit means: for {', '.join(terms) or 'no covariate'} the value of a {unit} is taken to be "
+        f"For {', '.join(terms) or 'no covariate'} the value of each {unit} is taken to be "
         f"{whole}, and deviations of single rows from it to be independent with the same covariance in all "
         f"units (trends and serial correlation make the noise larger or smaller than shown).{beside} Within "
         "slopes need no correction. The correction does not apply where the mean over the rows seen is "

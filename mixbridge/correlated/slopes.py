@@ -16,6 +16,8 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from mixbridge.correlated.augment import Augmented
+from mixbridge.display import Printed
+from mixbridge.display.text import wrapped
 from mixbridge.moments import Moments, noise
 from mixbridge.ratio import Curve
 from mixbridge.routes import fit_route
@@ -36,7 +38,7 @@ REASON = (
 
 
 @dataclass(frozen=True, slots=True)
-class SlopeCertificate:
+class SlopeCertificate(Printed):
     """Comparison of slopes beside unit means with within slopes.
 
     Attributes
@@ -86,7 +88,14 @@ class SlopeCertificate:
         lines = [f"{head}: {found}. This checks the arithmetic, not the model."]
         if not self.holds:
             lines.append(f"Cause: {self.cause}")
-        return lines + [f"{name} is not compared: {reason}." for name, reason in self.not_compared]
+        apart: dict[str, list[str]] = {}
+        for name, reason in self.not_compared:
+            apart.setdefault(reason, []).append(name)
+        return lines + [f"Not compared: {', '.join(names)}: {reason}." for reason, names in apart.items()]
+
+    def __str__(self) -> str:
+        """Return the certificate in words."""
+        return "\n".join(wrapped(self.lines()))
 
 
 def certify_slopes(

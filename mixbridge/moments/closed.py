@@ -11,6 +11,8 @@ import numpy as np
 import pandas as pd
 from numpy.typing import ArrayLike, NDArray
 
+from mixbridge.display import Printed
+from mixbridge.display.text import wrapped
 from mixbridge.errors import DataError, OptionError
 from mixbridge.moments.classes import means_products, size_classes
 from mixbridge.moments.closed_file import attributes_of, read_record, record_of, write_record
@@ -28,7 +30,7 @@ LOSS_LIMIT = 1e4
 
 
 @dataclass(frozen=True, slots=True)
-class Moments:
+class Moments(Printed):
     """Closed moments: what every route but ``first_difference`` is computed from.
 
     ``z`` holds the design columns without an explicit constant, then the outcome; scaled, ``(z - shift) /
@@ -73,6 +75,17 @@ class Moments:
     between: FloatArray
     note: str
     coding: str | None = None
+
+    def __str__(self) -> str:
+        """Return what the moments are of."""
+        return "\n".join(
+            wrapped(
+                [
+                    f"Closed moments of {self.outcome} on {', '.join(self.design)}: {self.rows:,} rows, {self.units:,} "
+                    f"units of {self.sizes[0]} to {self.sizes[-1]} rows; {self.note}."
+                ]
+            )
+        )
 
     @property
     def rows(self) -> int:

@@ -18,6 +18,8 @@ try:  # scipy's compiled scatter-add; a public call would allocate all sums anew
 except ImportError:  # pragma: no cover
     COMPILED = False
 
+from mixbridge.display import Printed
+from mixbridge.display.text import wrapped
 from mixbridge.errors import DataError
 from mixbridge.moments.factors import factor_from_products, stack_factors
 from mixbridge.moments.files import keyed_arrays, read_arrays, same_coding, write_arrays
@@ -41,7 +43,7 @@ SMALL = 12
 
 
 @dataclass(frozen=True, slots=True)
-class OpenMoments:
+class OpenMoments(Printed):
     """Moments that can still take rows: per unit a count and a mean, one within product over all units.
 
     ``z`` is a row ``(x', y)'``: design columns, an explicit constant included, then the outcome.
@@ -80,6 +82,14 @@ class OpenMoments:
     loss: FloatArray
     factor: FloatArray | None = field(default=None)
     coding: str | None = None
+
+    def __str__(self) -> str:
+        """Return what the moments are of."""
+        text = (
+            f"Moments of {self.columns[-1]} on {', '.join(self.columns[:-1])}, with the mean of every unit: "
+            f"{self.rows:,} rows, {len(self.keys):,} units of {self.counts.min()} to {self.counts.max()} rows."
+        )
+        return "\n".join(wrapped([text]))
 
     @property
     def magnitude(self) -> FloatArray:

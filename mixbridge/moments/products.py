@@ -10,6 +10,8 @@ import numpy as np
 import pandas as pd
 from numpy.typing import ArrayLike, NDArray
 
+from mixbridge.display import Printed
+from mixbridge.display.text import wrapped
 from mixbridge.errors import DataError
 from mixbridge.moments.closed import Moments, collect
 from mixbridge.moments.files import keyed_arrays, read_arrays, write_arrays
@@ -31,7 +33,7 @@ SCATTER_ROWS = 1024
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class UnitProducts:
+class UnitProducts(Printed):
     """Per unit: the number of rows, the mean of z and the products of deviations from that mean.
 
     ``z`` holds the design columns without an explicit constant, then the outcome, as in `Moments`; scaled,
@@ -73,6 +75,14 @@ class UnitProducts:
         """Make the arrays read-only."""
         for name in ("shift", "scale", "sizes", "means", "frame", "packed"):
             getattr(self, name).setflags(write=False)
+
+    def __str__(self) -> str:
+        """Return what the products are of."""
+        text = (
+            f"Products of {self.outcome} on {', '.join(self.design)} for every unit: {self.rows:,} rows, "
+            f"{self.units:,} units of {self.sizes.min()} to {self.sizes.max()} rows."
+        )
+        return "\n".join(wrapped([text]))
 
     @property
     def units(self) -> int:

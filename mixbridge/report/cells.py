@@ -6,8 +6,8 @@ import re
 from numbers import Integral, Real
 
 from mixbridge.display import visible
+from mixbridge.display.text import number
 from mixbridge.report.document import Table
-from mixbridge.report.text import number
 
 __all__ = ["Anchors", "cell_text", "full_text", "numeric_columns", "wordy"]
 

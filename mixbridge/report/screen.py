@@ -8,6 +8,7 @@ from typing import Any, Protocol
 import numpy as np
 import pandas as pd
 
+from mixbridge.display.text import WIDTH, columns, interval, number, shorten, signed
 from mixbridge.errors import IdentificationError, OptionError
 from mixbridge.moments import Moments
 from mixbridge.panel import Panel
@@ -15,7 +16,6 @@ from mixbridge.ratio import Curve
 from mixbridge.reconcile.agreement import CLASSES, Thresholds
 from mixbridge.reconcile.attribution import Attribution
 from mixbridge.reconcile.identities import Identity
-from mixbridge.report.text import WIDTH, columns, interval, number, shorten, signed
 from mixbridge.routes import REFERENCE_ROUTES, Fit
 
 __all__ = ["StudyView", "study_screen"]

@@ -13,7 +13,7 @@ from typing import Any
 import pandas as pd
 
 from mixbridge.display import Printed
-from mixbridge.report.text import WIDTH, columns, shorten
+from mixbridge.display.text import WIDTH, columns, shorten
 
 __all__ = ["DIFFERS", "NEEDS_ROWS", "SAME", "STATED", "Checked", "Verification", "compare_records"]
 

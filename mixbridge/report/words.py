@@ -6,8 +6,8 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
+from mixbridge.display.text import number
 from mixbridge.errors import OptionError
-from mixbridge.report.text import number
 
 __all__ = ["AUDIENCES", "VOCABULARY", "Words", "capital", "count", "listed", "num", "said_p", "words_for"]
 

@@ -15,6 +15,8 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from mixbridge.display import Printed
+from mixbridge.display.text import frame_lines, wrapped
 from mixbridge.errors import IdentificationError, OptionError
 from mixbridge.ratio import Curve
 from mixbridge.resample.gaps import GapNoise, class_shares, column_of, fit_of, gap_noise
@@ -32,7 +34,7 @@ SUMMARY = ["truth", "mean", "bias", "bias_error", "standard_error", "rmse", "rep
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Bootstrap:
+class Bootstrap(Printed):
     """Replicates of a panel under one of its fits, with every route refitted.
 
     Attributes
@@ -53,6 +55,32 @@ class Bootstrap:
     def left_out(self) -> Mapping[str, str]:
         """Routes that are not refitted, with the reason."""
         return self.replicates.left_out
+
+    def __str__(self) -> str:
+        """Return how coefficients and components of one route vary, and what that takes for granted."""
+        drawn = self.replicates
+        key = self.under if self.under in drawn.routes else next(iter(drawn.routes))
+        shown = {
+            "truth": "truth",
+            "mean": "mean",
+            "bias": "bias",
+            "bias_error": "its error",
+            "standard_error": "standard error",
+            "model_standard_error": "that of the model",
+        }
+        lines = [
+            f"Bootstrap in moment space, drawn under {self.under}: {drawn.count} replicates, seed {drawn.seed}; {key}"
+        ]
+        for table, name in ((self.coefficients(), "term"), (self.components(), "quantity")):
+            lines += frame_lines(table.loc[table["route"] == key, [name, *shown]].rename(columns=shown))
+        counts = ", ".join(f"{count} {status}" for status, count in drawn.statuses(key).items() if count)
+        others = ", ".join(route for route in drawn.routes if route != key)
+        texts = [
+            f"Replicates of {key}: {counts}. Routes besides: {others or 'none'}.",
+            *(f"{route} is left out: {reason}." for route, reason in self.left_out.items()),
+            "Normal errors and unit effects unrelated to the covariates are taken for granted, and not tested.",
+        ]
+        return "\n".join([*lines, *wrapped(texts)])
 
     def statuses(self) -> pd.DataFrame:
         """Return how many replicates have each status, by route, and how many optima are not certified.

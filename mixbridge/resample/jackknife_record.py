@@ -10,6 +10,8 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from mixbridge.display import Printed
+from mixbridge.display.text import frame_lines, sentence, wrapped
 from mixbridge.errors import OptionError
 from mixbridge.resample.deletion_routes import Refits
 from mixbridge.resample.jackknife_verdicts import (
@@ -27,12 +29,13 @@ __all__ = ["LeaveOneOut", "without_names"]
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.intp]
 DECIDING_COLUMNS = ["unit", "route", "term", "conclusion", "with_all_units", "without_the_unit", "influence"]
+DECIDING_SHOWN = ["unit", "route", "term", "conclusion", "with it", "without it", "moved by (se)"]
 MULTIPLIERS = {"jackknife": "(N - 1)/N", "none": "1"}
 """Multiplier of the sum of squares, in words: with ``none`` it is CR3 with the ratio estimated anew."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class LeaveOneOut:
+class LeaveOneOut(Printed):
     """Every route without each unit in turn.
 
     Attributes
@@ -69,6 +72,27 @@ class LeaveOneOut:
     limits: Limits
     named: bool
     notes: tuple[str, ...]
+
+    def __str__(self) -> str:
+        """Return which units decide something, and how far the most influential ones move each coefficient."""
+        moved = self.influence()
+        rows = []
+        for term in self.terms:
+            values = moved[term].abs()
+            unit = values.idxmax() if values.notna().any() else None
+            rows.append([term, unit, np.nan if unit is None else moved.at[unit, term]])
+        largest = pd.DataFrame(rows, columns=["term", "unit", "moved by (se)"])
+        deciding = self.deciding()
+        head = (
+            f"Leave-one-unit-out: {len(self.units)} units, {len(self.fits)} routes; moves in standard errors of "
+            f"{self.primary}. Without any one of {deciding['unit'].nunique()} units some conclusion is another:"
+        )
+        lines = [
+            *wrapped([head]),
+            *frame_lines(deciding.set_axis(DECIDING_SHOWN, axis=1), most=12, widest=22),
+        ]
+        lines += [f"The unit that moves each coefficient by {self.primary} most:", *frame_lines(largest)]
+        return "\n".join([*lines, *wrapped(sentence(note) for note in self.notes)])
 
     def influence(self, route: str | None = None) -> pd.DataFrame:
         """Return how far each deletion moves each coefficient, in standard errors of the primary route.

@@ -12,6 +12,8 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from mixbridge.display import Printed
+from mixbridge.display.text import frame_lines, sentence, wrapped
 from mixbridge.errors import OptionError
 from mixbridge.moments import Block, Moments, collect
 from mixbridge.moments.products import UnitProducts
@@ -45,7 +47,7 @@ COLUMNS = [
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class LeftOut:
+class LeftOut(Printed):
     """Routes fitted without sets of rows.
 
     Attributes
@@ -87,6 +89,18 @@ class LeftOut:
                     in_se = moved / errors[term] if errors[term] > 0.0 else np.nan
                     rows.append([label, key, term, fit.beta[at], error, moved, in_se, fit.ratio, fit.status])
         return pd.DataFrame(rows, columns=COLUMNS)
+
+    def __str__(self) -> str:
+        """Return how far each coefficient of the primary route moves, by what was left out."""
+        table = self.table()
+        own = table[table["route"] == self.primary].drop_duplicates(["left_out", "term"])
+        moved = own.pivot(index="left_out", columns="term", values="moved_in_se")
+        shown = moved.reindex(
+            index=list(self.without), columns=list(self.fits[self.primary].terms)
+        ).reset_index()
+        lines = [f"Moves of {self.primary} in its standard errors, by what was left out", *frame_lines(shown)]
+        reasons = [f"{label}: {made}." for label, made in self.without.items() if isinstance(made, str)]
+        return "\n".join([*lines, *wrapped([*reasons, *(sentence(note) for note in self.notes)])])
 
 
 def leave_two_out(

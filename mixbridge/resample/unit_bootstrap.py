@@ -17,6 +17,8 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from mixbridge.display import Printed
+from mixbridge.display.text import frame_lines, sentence, wrapped
 from mixbridge.errors import IdentificationError, OptionError
 from mixbridge.moments.products import UnitProducts
 from mixbridge.ratio import Curve
@@ -51,7 +53,7 @@ AT_ONCE = 2**12
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class UnitBootstrap:
+class UnitBootstrap(Printed):
     """Every route on every draw of units.
 
     Attributes
@@ -77,6 +79,19 @@ class UnitBootstrap:
     def replicates(self) -> int:
         """Number of draws."""
         return next(iter(self.refits.values())).ratio.size
+
+    def __str__(self) -> str:
+        """Return how every quantity of one route varies over draws of units."""
+        key = "reml" if "reml" in self.fits else next(iter(self.fits))
+        table = self.table()
+        others = ", ".join(route for route in self.fits if route != key)
+        lines = [f"Bootstrap by unit; {key}"]
+        lines += frame_lines(table[table["route"] == key].drop(columns="route"))
+        texts = [
+            f"Routes besides: {others or 'none'}.",
+            *(sentence(note) for note in self.notes),
+        ]
+        return "\n".join([*lines, *wrapped(texts)])
 
     def table(self) -> pd.DataFrame:
         """Return mean, bias and standard error of every quantity of every route.

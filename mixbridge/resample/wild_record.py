@@ -8,6 +8,8 @@ from dataclasses import dataclass, fields
 import numpy as np
 from numpy.typing import NDArray
 
+from mixbridge.display import Printed
+from mixbridge.display.text import interval, number, sentence, wrapped
 from mixbridge.errors import IdentificationError, OptionError
 from mixbridge.resample.simulated import BEYOND, check_confidence, quantiles
 
@@ -53,7 +55,7 @@ class Parts:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class WildBootstrap:
+class WildBootstrap(Printed):
     """A hypothesis on one combination of coefficients and its bootstrap law.
 
     Attributes
@@ -95,6 +97,20 @@ class WildBootstrap:
     units: int
     psi: float
     notes: tuple[str, ...]
+
+    def __str__(self) -> str:
+        """Return estimate, statistic, p values and interval."""
+        lines = [
+            f"Wild cluster bootstrap of {self.hypothesis} = {self.value:g}",
+            f"  estimate {number(self.estimate)}, CR1 standard error {number(self.standard_error)}, statistic "
+            f"{number(self.statistic)}",
+            f"  p {number(self.p_value)}, equal-tailed {number(self.p_equal_tailed)}",
+        ]
+        try:
+            lines.append(f"  95% interval {interval(*self.interval())}")
+        except (IdentificationError, OptionError) as reason:
+            lines += wrapped([f"  no 95% interval: {reason}"])
+        return "\n".join([*lines, *wrapped(sentence(note) for note in self.notes)])
 
     @property
     def replicates(self) -> int:

@@ -11,6 +11,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from mixbridge.display import fragment, preformatted, table
+from mixbridge.display.text import wrapped
 from mixbridge.routes.certificate import Certificate
 
 __all__ = ["FITTED", "NOT_POSITIVE", "NO_DF", "TRUNCATED", "Fit"]
@@ -215,11 +216,13 @@ class Fit:
         table = pd.DataFrame({"estimate": self.coefficients, "standard error": self.standard_errors})
         lines = [f"{self.route}: {self.status}; {self.rows} rows, {self.units} units"]
         lines += [
-            f"  {line}" for line in table.to_string(float_format=lambda value: f"{value:.6g}").splitlines()
+            f"  {line}"
+            for line in table.to_string(float_format=lambda value: f"{value:.6g}", na_rep="-").splitlines()
         ]
         if np.isfinite(self.idiosyncratic_variance):
+            raw = self.unit_variance_raw
             lines.append(
-                f"  unit variance {self.unit_variance_raw:.6g}, "
+                f"  unit variance {'-' if np.isnan(raw) else format(raw, '.6g')}, "
                 f"idiosyncratic variance {self.idiosyncratic_variance:.6g}, "
                 f"ratio {self.ratio:.6g}, ICC {self.icc:.6g}"
             )
@@ -227,7 +230,7 @@ class Fit:
             f"{name}={value}" for name, value in self.conventions.items() if value != "default"
         )
         lines.append(f"  conventions: {chosen or 'none'}")
-        lines += [f"  {term}: {reason}" for term, reason in self.not_estimable.items() if self.estimated]
-        lines += [f"  note: {note}" for note in self.notes]
-        lines += [f"  {line}" for line in (self.certificate.lines() if self.certificate is not None else [])]
-        return "\n".join(lines)
+        texts = [f"{term}: {reason}" for term, reason in self.not_estimable.items() if self.estimated]
+        texts += [f"note: {note}" for note in self.notes]
+        texts += self.certificate.lines() if self.certificate is not None else []
+        return "\n".join([*lines, *wrapped(texts, "  ", "    ")])

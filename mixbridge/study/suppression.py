@@ -7,6 +7,8 @@ from dataclasses import dataclass, field
 import numpy as np
 import pandas as pd
 
+from mixbridge.display import Printed
+from mixbridge.display.text import frame_lines, wrapped
 from mixbridge.moments.suppression import suppress
 from mixbridge.study.from_moments import from_moments
 from mixbridge.study.record import Study
@@ -15,7 +17,7 @@ __all__ = ["Shared", "shared_moments"]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Shared:
+class Shared(Printed):
     """A study on the moments that are left.
 
     Attributes
@@ -38,6 +40,14 @@ class Shared:
         default="Leaving out size classes selects units by size: where size carries information estimates move, and no "
         "threshold makes moments anonymous by itself."
     )
+
+    def __str__(self) -> str:
+        """Return what was left out, and the estimates that this moves most."""
+        moved = self.effect.loc[self.effect["moved_in_se"].abs().sort_values(ascending=False).index]
+        left = int(self.left_out["units"].sum())
+        head = f"{left} units left out, {self.study.moments.units} shared"
+        most = ["Estimates that move most, in standard errors with all units:", *frame_lines(moved, most=8)]
+        return "\n".join([head, *frame_lines(self.left_out), *most, *wrapped([self.note])])
 
 
 def shared_moments(study: Study, threshold: int = 5) -> Shared:

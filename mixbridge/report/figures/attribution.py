@@ -6,10 +6,10 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from mixbridge.display.text import number, signed
 from mixbridge.errors import OptionError
 from mixbridge.report.figures.ledger import chosen_term
 from mixbridge.report.figures.look import ACCENT, INK, OTHER, below, blank, heading, label, rows_axis
-from mixbridge.report.text import number, signed
 from mixbridge.routes import REFERENCE_ROUTES
 
 if TYPE_CHECKING:

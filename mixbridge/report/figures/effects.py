@@ -7,8 +7,8 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import scipy
 
+from mixbridge.display.text import number
 from mixbridge.report.figures.look import ACCENT, FAINT, below, blank, heading, label, rows_axis
-from mixbridge.report.text import number
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes

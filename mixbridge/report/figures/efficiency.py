@@ -6,9 +6,9 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from mixbridge.display.text import number
 from mixbridge.errors import OptionError
 from mixbridge.report.figures.look import ACCENT, INK, OTHER, below, beside, blank, heading, rows_axis
-from mixbridge.report.text import number
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes

@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from mixbridge.display.text import number, signed
 from mixbridge.report.figures.ledger import chosen_term
 from mixbridge.report.figures.look import (
     ACCENT,
@@ -18,7 +19,6 @@ from mixbridge.report.figures.look import (
     label,
     rows_axis,
 )
-from mixbridge.report.text import number, signed
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes

@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from mixbridge.display.text import number
 from mixbridge.errors import OptionError
 from mixbridge.report.figures.look import (
     ACCENT,
@@ -19,7 +20,6 @@ from mixbridge.report.figures.look import (
     label,
     rows_axis,
 )
-from mixbridge.report.text import number
 from mixbridge.routes import REFERENCE_ROUTES
 
 if TYPE_CHECKING:

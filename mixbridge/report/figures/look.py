@@ -8,8 +8,8 @@ from contextlib import contextmanager
 from typing import TYPE_CHECKING, Any
 
 from mixbridge.display import visible
+from mixbridge.display.text import shorten
 from mixbridge.errors import OptionError
-from mixbridge.report.text import shorten
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes

@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from mixbridge.display.text import number
 from mixbridge.report.figures.ledger import chosen_term
 from mixbridge.report.figures.look import (
     ACCENT,
@@ -20,7 +21,6 @@ from mixbridge.report.figures.look import (
     label,
     rows_axis,
 )
-from mixbridge.report.text import number
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes

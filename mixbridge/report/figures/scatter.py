@@ -6,10 +6,10 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from mixbridge.display.text import number
 from mixbridge.errors import OptionError
 from mixbridge.report.figures.ledger import chosen_term
 from mixbridge.report.figures.look import ACCENT, FAINT, OTHER, below, blank, heading, label
-from mixbridge.report.text import number
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
