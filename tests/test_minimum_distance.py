@@ -350,8 +350,11 @@ def test_outcomes_that_do_not_vary_have_a_reason():
 def test_what_stays_out_is_named():
     _, found = asked(panel(units=140, periods=3), "honey ~ forage + C(year):forage + year")
     text = " ".join(found.notes)
-    assert "out of the projection: year." in text
+    assert "out of the projection and of what is printed: year." in text
     assert "determined by other columns" in text
+    printed = [line.split()[0] for line in str(found).split("\n") if len(line.split()) > 6]
+    assert "year" not in printed
+    assert printed.count("forage") == sum(one.estimated for one in found.distances)
     _, found = asked(panel(units=140, periods=3), "honey ~ 0 + forage")
     assert "no constant" in " ".join(found.notes)
 

@@ -47,6 +47,20 @@ COEFFICIENTS = [
 ]
 
 
+SHOWN = {
+    "term": "term",
+    "weights": "weights",
+    "estimate": "estimate",
+    "standard_error": "error",
+    "p_value": "p",
+    "few_units_error": "error, few",
+    "few_units_p": "p, few",
+    "within": "within",
+}
+"""Columns of the coefficients that are printed, and their headings."""
+MOST = 90
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class MinimumDistance(Printed):
     """Minimum distance with every kind of weights.
@@ -160,23 +174,13 @@ class MinimumDistance(Printed):
         lines = wrapped([head])
         for found in self.distances:
             lines += [f"  {line}" for line in wrapped([f"{found.weights}: {found.status}"])]
-        slopes = self.coefficients[
-            [
-                "term",
-                "weights",
-                "estimate",
-                "standard_error",
-                "p_value",
-                "few_units_error",
-                "few_units_p",
-                "within",
-            ]
-        ]
-        slopes.columns = ["term", "weights", "estimate", "error", "p", "error, few", "p, few", "within"]
+        estimated = [found.weights for found in self.distances if found.estimated]
+        slopes = self.coefficients.rename(columns=SHOWN)[list(SHOWN.values())]
+        slopes = slopes[~slopes["term"].isin(self.form.apart) & slopes["weights"].isin(estimated)]
         tests = self.tests[["tested", "weights", "statistic", "df", "p_value", "p_few_units"]]
         tests.columns = ["tested", "weights", "statistic", "df", "p", "p, few"]
         for table in (slopes, tests):
-            lines += ["", *frame_lines(table)]
+            lines += ["", *frame_lines(table, most=MOST)]
         texts = [
             f"{tested}: {meaning}." for tested, meaning in MEANING.items() if tested in set(tests["tested"])
         ]
@@ -271,7 +275,9 @@ def _columns(panel: Panel, form: ReducedForm, projection: Projection) -> list[st
     """Say which columns stay out of the projection, and which are combinations of others."""
     found = []
     if form.apart:
-        found.append(f"Intercepts of periods, out of the projection: {', '.join(form.apart)}.")
+        found.append(
+            f"Intercepts of periods, out of the projection and of what is printed: {', '.join(form.apart)}."
+        )
     if panel.constant is None:
         found.append(
             "The formula has no constant: the mean of the outcome at zero covariates is taken as zero, in the "
@@ -279,8 +285,6 @@ def _columns(panel: Panel, form: ReducedForm, projection: Projection) -> list[st
         )
     dropped = list(projection.augmented.dropped.values())
     if dropped:
-        more = f"; and {len(dropped) - 3} more" if len(dropped) > 3 else ""
-        found.append(
-            f"Not in the projection, being determined by other columns: {'; '.join(dropped[:3])}{more}."
-        )
+        more = f", and so are {len(dropped) - 1} more" if len(dropped) > 1 else ""
+        found.append(f"Not in the projection, being determined by other columns: {dropped[0]}{more}.")
     return found + [f"{name} is not identified: {reason}." for name, reason in form.lost.items()]

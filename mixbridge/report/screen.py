@@ -177,6 +177,8 @@ def _agreement(study: StudyView, most: int) -> list[str]:
         gaps = part.loc[there, "gap_in_se"].dropna()
         far = str(gaps.abs().idxmax()) if len(gaps) else ""
         widest = f"{signed(float(gaps[far]))} {far}" if far else "-"
+        if far and abs(float(gaps[far])) <= Thresholds().rounding:
+            widest = "0, to rounding"
         counts = part.loc[there, "verdict"].value_counts()
         classes = (
             ", ".join(f"{counts[name]} {name}" for name in CLASSES if name in counts) or "none available"
