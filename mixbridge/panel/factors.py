@@ -13,6 +13,7 @@ from patsy import EvalEnvironment, EvalFactor, PatsyError
 
 from mixbridge.errors import FormulaError
 from mixbridge.panel.columns import Column, Rows
+from mixbridge.panel.syntax import prepare, tree_of
 
 __all__ = [
     "Evaluated",
@@ -116,7 +117,7 @@ def learn(factor: EvalFactor, environment: EvalEnvironment, data: Mapping[str, A
     state: dict[str, Any] = {}
     with np.errstate(all="ignore"):
         try:
-            for step in range(factor.memorize_passes_needed(state, environment)):
+            for step in range(prepare(factor, state, environment)):
                 factor.memorize_chunk(state, step, data)
                 factor.memorize_finish(state, step)
         except (PatsyError, ValueError, TypeError, ArithmeticError) as error:
@@ -173,5 +174,5 @@ def inner_arguments(factor: EvalFactor, environment: EvalEnvironment) -> list[Ev
         ):
             found.append(EvalFactor(ast.unparse(node.args[0])))
 
-    visit(ast.parse(factor.code.strip(), mode="eval"))
+    visit(tree_of(factor.code))
     return found

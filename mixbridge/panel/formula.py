@@ -11,6 +11,7 @@ from io import StringIO
 from patsy import EvalFactor, ModelDesc, PatsyError, Term
 
 from mixbridge.errors import FormulaError, nearest
+from mixbridge.panel.syntax import tree_of
 
 __all__ = ["Formula", "called_names", "columns_of", "names_of", "parse_formula", "quoted_name"]
 
@@ -102,7 +103,7 @@ def _refuse_bar(text: str) -> None:
 def _check_python(factor: EvalFactor, text: str) -> None:
     """Refuse a factor that is not one Python expression, at its place in the formula."""
     try:
-        ast.parse(factor.code.strip(), mode="eval")
+        tree_of(factor.code)
     except (SyntaxError, RecursionError) as error:
         place = factor.origin.caretize(indent=4) if factor.origin is not None else f"    {text}"
         raise FormulaError(
@@ -113,7 +114,7 @@ def _check_python(factor: EvalFactor, text: str) -> None:
 
 def names_of(code: str) -> tuple[str, ...]:
     """Return the names that an expression reads, ``Q("...")`` included, those it binds itself excluded."""
-    tree = ast.parse(code.strip(), mode="eval")
+    tree = tree_of(code)
     names: dict[str, None] = {}
     bound = {node.arg for node in ast.walk(tree) if isinstance(node, ast.arg)}
     bound |= {
@@ -147,7 +148,7 @@ def quoted_name(node: ast.AST) -> str | None:
 def called_names(code: str) -> set[str]:
     """Return the names that an expression calls, the first one of dotted names."""
     called = set()
-    for node in ast.walk(ast.parse(code.strip(), mode="eval")):
+    for node in ast.walk(tree_of(code)):
         if isinstance(node, ast.Call):
             target = node.func
             while isinstance(target, ast.Attribute):
@@ -181,7 +182,7 @@ def columns_of(
     FormulaError
         If it reads a name that is neither.
     """
-    tree = ast.parse(factor.code.strip(), mode="eval")
+    tree = tree_of(factor.code)
     called = [
         node.func.id
         for node in ast.walk(tree)

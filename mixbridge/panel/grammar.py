@@ -18,6 +18,7 @@ import numpy as np
 
 from mixbridge.panel.formula import quoted_name
 from mixbridge.panel.standardize import standardize
+from mixbridge.panel.syntax import tree_of
 
 __all__ = ["ALLOWED", "CODINGS", "ELEMENTWISE", "LEARNING", "NAMESPACE", "violation"]
 
@@ -67,7 +68,7 @@ def violation(code: str, columns: Collection[str], numeric: Collection[str]) -> 
         Those of them that hold numbers or truth values: only these enter arithmetic.
     """
     try:
-        _Reader(columns, numeric).value(ast.parse(code.strip(), mode="eval").body)
+        _Reader(columns, numeric).value(tree_of(code))
     except _OutsideGrammarError as reason:
         return str(reason)
     except RecursionError:

@@ -24,6 +24,7 @@ from mixbridge.panel.readings import _BASE, factor_columns, make_environment
 from mixbridge.panel.streaming_learn import Levels
 from mixbridge.panel.streaming_rows import z_of
 from mixbridge.panel.streaming_walk import Labels, Plan, Stage, Step, walk
+from mixbridge.panel.syntax import prepare
 from mixbridge.sources.chunks import CHUNK_ROWS, Chunk, ChunkedSource
 
 __all__ = [
@@ -163,7 +164,7 @@ def stage_of(plan: Plan, told: Told) -> Stage:
     states: dict[EvalFactor, dict[str, Any]] = {}
     for place, learned in told.states.items():
         state: dict[str, Any] = {}
-        factors[place].memorize_passes_needed(state, plan.environment)
+        prepare(factors[place], state, plan.environment)
         for name, attributes in learned.items():
             vars(state["transforms"][name]).update(attributes)
         states[factors[place]] = state

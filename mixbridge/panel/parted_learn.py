@@ -28,6 +28,7 @@ from mixbridge.panel.streaming_book import _Book, _Numbers
 from mixbridge.panel.streaming_learn import Lesson, _any_stateful, _learn_states, _lesson
 from mixbridge.panel.streaming_values import Distinct, sort_of
 from mixbridge.panel.streaming_walk import Labels, Plan, Stage, Step, _evaluated
+from mixbridge.panel.syntax import prepare
 
 __all__ = ["Each", "PartBook", "ReadAll", "learn_parts", "read_part"]
 
@@ -156,7 +157,7 @@ def _states_of_all(
         if not parts or number in spoiled:
             continue
         blank: dict[str, Any] = {}
-        factor.memorize_passes_needed(blank, plan.environment)
+        prepare(factor, blank, plan.environment)
         states[number] = {
             name: reduce(partial(_joined, factor, type(transform)), [part[name] for part in parts])
             for name, transform in blank["transforms"].items()

@@ -11,6 +11,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 from mixbridge.panel.formula import quoted_name
+from mixbridge.panel.syntax import tree_of
 from mixbridge.sources.duckdb_source import quoted
 
 __all__ = ["FactorSQL", "NotInSQLError", "case_of", "factor_sql", "literal", "number_literal"]
@@ -77,7 +78,7 @@ def factor_sql(code: str, types: Mapping[str, str]) -> FactorSQL:
     NotInSQLError
         If it is anything but a column, ``C`` of a column, or arithmetic and transforms of numeric columns.
     """
-    node = ast.parse(code.strip(), mode="eval").body
+    node = tree_of(code)
     name = _column(node)
     if name is not None and name in types:
         kind = types[name]

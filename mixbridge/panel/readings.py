@@ -14,6 +14,7 @@ from mixbridge.panel.attempt import Reading
 from mixbridge.panel.columns import Column
 from mixbridge.panel.formula import Formula, called_names, columns_of, names_of, quoted_name
 from mixbridge.panel.grammar import ALLOWED, NAMESPACE, violation
+from mixbridge.panel.syntax import tree_of
 
 __all__ = ["factor_columns", "make_environment", "read_factors"]
 
@@ -112,7 +113,7 @@ def read_factors(
 
 def _single(code: str, columns: Mapping[str, Column]) -> tuple[str | None, bool]:
     """Return the column that a factor or the first argument of its ``C`` is, and whether there is a ``C``."""
-    node: ast.expr = ast.parse(code.strip(), mode="eval").body
+    node: ast.expr = tree_of(code)
     coded = isinstance(node, ast.Call) and isinstance(node.func, ast.Name) and node.func.id == "C"
     if (
         coded

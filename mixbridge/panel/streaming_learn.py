@@ -24,6 +24,7 @@ from mixbridge.panel.streaming_rows import Gather, OnePass
 from mixbridge.panel.streaming_runs import Runs
 from mixbridge.panel.streaming_values import Distinct
 from mixbridge.panel.streaming_walk import Labels, Plan, Stage, Step, Value, stateful, walk
+from mixbridge.panel.syntax import prepare
 from mixbridge.sources.checkpoint import State
 from mixbridge.sources.chunks import ChunkedSource
 
@@ -215,7 +216,7 @@ def _any_stateful(plan: Plan) -> bool:
 def _argument(plan: Plan, argument: EvalFactor, data: dict[str, Any]) -> npt.NDArray[np.float64]:
     """Evaluate what a transform learns from."""
     state: dict[str, Any] = {}
-    argument.memorize_passes_needed(state, plan.environment)
+    prepare(argument, state, plan.environment)
     value = np.asarray(evaluate(argument, state, data))
     if not np.issubdtype(value.dtype, np.number):
         return np.zeros(len(value))
@@ -229,7 +230,7 @@ def _memorize(
         try:
             if factor not in states:
                 states[factor] = {}
-                if factor.memorize_passes_needed(states[factor], plan.environment) > 1:
+                if prepare(factor, states[factor], plan.environment) > 1:
                     raise FormulaError(
                         f"{factor.code} learns in several passes; compute a part of it as a column first."
                     )

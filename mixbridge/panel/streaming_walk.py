@@ -71,6 +71,8 @@ class Plan:
     forms : dict
         By what the columns hold: of each factor the column that it is, whether that is coded, and whether it works
         row by row.
+    blanks : dict
+        States of factors that have nothing to learn.
     """
 
     formula: Formula
@@ -80,6 +82,7 @@ class Plan:
     trusted: bool
     kinds: dict[str, tuple[str, str]] = field(default_factory=dict)
     forms: dict[tuple[str, ...], list[tuple[str | None, bool, bool]]] = field(default_factory=dict)
+    blanks: dict[EvalFactor, dict[str, Any]] = field(default_factory=dict)
 
     @property
     def wanted(self) -> list[str]:
@@ -338,7 +341,7 @@ def _evaluated(plan: Plan, reading: Reading, rows: Rows, m: int, state: dict[str
     if reading.single is not None:
         return _single(plan, reading, columns[reading.single], rows)
     data = used_data(columns, rows, 0, m)
-    value = evaluate(factor, learn(factor, plan.environment, data) if state is None else state, data)
+    value = evaluate(factor, _state(plan, factor, data) if state is None else state, data)
     if not is_categorical(value):
         return Stored(as_columns(factor, value, m))
     levels, contrast = getattr(value, "levels", None), getattr(value, "contrast", None)
@@ -352,6 +355,16 @@ def _evaluated(plan: Plan, reading: Reading, rows: Rows, m: int, state: dict[str
             f"{factor.code} yields {len(series)} values; needed is one for each of the {m} rows used."
         )
     return Labels(series, levels, contrast)
+
+
+def _state(plan: Plan, factor: EvalFactor, data: Mapping[str, Any]) -> dict[str, Any]:
+    """Return the state of a factor that learns from these rows; one that learns nothing is made once."""
+    state = plan.blanks.get(factor)
+    if state is None:
+        state = learn(factor, plan.environment, data)
+        if not state["transforms"]:
+            plan.blanks[factor] = state
+    return state
 
 
 def _single(plan: Plan, reading: Reading, column: Column, rows: Rows) -> Value:
@@ -372,7 +385,7 @@ def _single(plan: Plan, reading: Reading, column: Column, rows: Rows) -> Value:
         return Labels(series)
     first = {column.name: column.taken(rows).iloc[:1]}
     try:
-        box = evaluate(reading.factor, learn(reading.factor, plan.environment, first), first)
+        box = evaluate(reading.factor, _state(plan, reading.factor, first), first)
     except PatsyError as error:
         raise FormulaError(f"{reading.factor.code} cannot be evaluated: {error}") from error
     if not hasattr(box, "levels"):
