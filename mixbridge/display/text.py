@@ -18,6 +18,7 @@ __all__ = [
     "sentence",
     "shorten",
     "signed",
+    "span",
     "wrapped",
 ]
 
@@ -37,6 +38,17 @@ def number(value: float, digits: int = 4) -> str:
         places = max(0, digits - 1 - math.floor(math.log10(abs(value))))
         return f"{value:.{min(places, 12)}f}"
     return f"{value:.{digits - 1}e}"
+
+
+def span(low: int, high: int) -> str:
+    """Return ``low to high``, or the one number that both are.
+
+    Examples
+    --------
+    >>> span(1, 9), span(4, 4)
+    ('1 to 9', '4')
+    """
+    return f"{low} to {high}" if low < high else f"{low}"
 
 
 def signed(value: float, digits: int = 2) -> str:

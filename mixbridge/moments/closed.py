@@ -12,7 +12,7 @@ import pandas as pd
 from numpy.typing import ArrayLike, NDArray
 
 from mixbridge.display import Printed
-from mixbridge.display.text import wrapped
+from mixbridge.display.text import span, wrapped
 from mixbridge.errors import DataError, OptionError
 from mixbridge.moments.classes import means_products, size_classes
 from mixbridge.moments.closed_file import attributes_of, read_record, record_of, write_record
@@ -82,7 +82,7 @@ class Moments(Printed):
             wrapped(
                 [
                     f"Closed moments of {self.outcome} on {', '.join(self.design)}: {self.rows:,} rows, {self.units:,} "
-                    f"units of {self.sizes[0]} to {self.sizes[-1]} rows; {self.note}."
+                    f"units of {span(self.sizes[0], self.sizes[-1])} rows; {self.note}."
                 ]
             )
         )

@@ -19,7 +19,7 @@ except ImportError:  # pragma: no cover
     COMPILED = False
 
 from mixbridge.display import Printed
-from mixbridge.display.text import wrapped
+from mixbridge.display.text import span, wrapped
 from mixbridge.errors import DataError
 from mixbridge.moments.factors import factor_from_products, stack_factors
 from mixbridge.moments.files import keyed_arrays, read_arrays, same_coding, write_arrays
@@ -87,7 +87,7 @@ class OpenMoments(Printed):
         """Return what the moments are of."""
         text = (
             f"Moments of {self.columns[-1]} on {', '.join(self.columns[:-1])}, with the mean of every unit: "
-            f"{self.rows:,} rows, {len(self.keys):,} units of {self.counts.min()} to {self.counts.max()} rows."
+            f"{self.rows:,} rows, {len(self.keys):,} units of {span(self.counts.min(), self.counts.max())} rows."
         )
         return "\n".join(wrapped([text]))
 

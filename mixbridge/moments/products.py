@@ -11,7 +11,7 @@ import pandas as pd
 from numpy.typing import ArrayLike, NDArray
 
 from mixbridge.display import Printed
-from mixbridge.display.text import wrapped
+from mixbridge.display.text import span, wrapped
 from mixbridge.errors import DataError
 from mixbridge.moments.closed import Moments, collect
 from mixbridge.moments.files import keyed_arrays, read_arrays, write_arrays
@@ -80,7 +80,7 @@ class UnitProducts(Printed):
         """Return what the products are of."""
         text = (
             f"Products of {self.outcome} on {', '.join(self.design)} for every unit: {self.rows:,} rows, "
-            f"{self.units:,} units of {self.sizes.min()} to {self.sizes.max()} rows."
+            f"{self.units:,} units of {span(self.sizes.min(), self.sizes.max())} rows."
         )
         return "\n".join(wrapped([text]))
 
