@@ -13,8 +13,9 @@ import statsmodels.formula.api as smf
 
 import mixbridge
 from benchmarks.matching import scaled_panel
+from mixbridge.display.text import WIDTH
 from mixbridge.errors import OptionError
-from mixbridge.reconcile.adopt import WIDTH, adopt_result
+from mixbridge.reconcile.adopt import adopt_result
 from mixbridge.reconcile.match import match_reported
 
 

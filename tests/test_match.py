@@ -13,12 +13,13 @@ from hypothesis import strategies as st
 from test_published import PUBLISHED, study
 
 import mixbridge
+from mixbridge.display.text import WIDTH
 from mixbridge.errors import DataError, OptionError
 from mixbridge.reconcile.match import match_reported
 from mixbridge.reconcile.match_ratio import compatible_ratios
 from mixbridge.reconcile.match_score import relative_error
 from mixbridge.reconcile.match_space import ESTIMATION, PRESENTATION, UNSEEN, conventions_of
-from mixbridge.reconcile.match_text import MATCH_LIMIT, WIDTH
+from mixbridge.reconcile.match_text import MATCH_LIMIT
 from mixbridge.reconcile.match_values import weight_summary
 from mixbridge.reconcile.printed import figure_list, parse_figure
 from mixbridge.reconcile.printed_file import read_figures

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from mixbridge.correlated.augment import Augmented
 from mixbridge.display import Printed
-from mixbridge.display.text import frame_lines, wrapped
+from mixbridge.display.text import by_reason, frame_lines, wrapped
 from mixbridge.errors import OptionError
 from mixbridge.inference.kenward_roger import kenward_roger
 from mixbridge.inference.references import Reference, Robust, pick_reference
@@ -110,11 +110,7 @@ class Coordinates(Printed):
         table = self.table
         shown = table[["term", *(name for kind in KINDS for name in (kind, f"{kind}_se")), "contextual_p"]]
         shown = shown.set_axis(["term", *(name for kind in KINDS for name in (kind, "se")), "p"], axis=1)
-        reasons: dict[str, list[str]] = {}
-        for term, reason in zip(table["term"], table["reason"], strict=True):
-            if reason:
-                reasons.setdefault(reason, []).append(term)
-        texts = [f"{', '.join(terms)}: {reason}." for reason, terms in reasons.items()]
+        texts = by_reason((term, self.reasons[term]) for term in self.terms if self.reasons.get(term))
         head = (
             f"Within, between and contextual coefficients by {self.route}, one fit with unit means; covariance "
             f"{self.covariance_name}, reference {self.rule}; p: contextual coefficient zero."

@@ -45,6 +45,9 @@ __all__ = ["WEIGHTS", "Distance", "distance_of", "weigh"]
 FloatArray = NDArray[np.float64]
 WEIGHTS = ("optimal", "homoscedastic", "random_effects")
 ESTIMATED = "estimated"
+SINGULAR = 1e-10
+"""Smallest over largest singular value of a factor, columns of unit length, below which its square is singular: less
+than six of sixteen digits would be left."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -128,7 +131,7 @@ def _compound(periods: int, ratio: float, scale: float) -> FloatArray | str:
 def _homoscedastic(form: ReducedForm) -> FloatArray | str:
     periods = form.residuals.shape[1]
     inner = np.linalg.qr(form.residuals, mode="r") / np.sqrt(form.units)
-    if form.left < periods or _reciprocal(inner) < 1e-10:
+    if form.left < periods or _reciprocal(inner) < SINGULAR:
         return f"{form.left} residual degrees of freedom for {periods} periods: their covariance is singular"
     return np.asarray(inner.T)
 
@@ -145,7 +148,7 @@ def _optimal(form: ReducedForm) -> FloatArray | str:
             f"{form.moments} coefficients of the reduced form; a covariance is formed for {LARGEST} at most"
         )
     factor = form.outer_factor()
-    if _reciprocal(factor) < 1e-10:
+    if _reciprocal(factor) < SINGULAR:
         return "the covariance of the reduced form is singular to rounding: some residuals vanish"
     return factor.T
 

@@ -78,6 +78,7 @@ def upper_tail(x: float, weights: FloatArray) -> float:
         return np.asarray(value.imag * width * np.cosh(t), dtype=np.float64)
 
     reach = 4.0
+    # beyond this the integrand, one at the crossing, is below rounding of the sum
     while reach < 60.0 and float(np.abs(integrand(np.array([reach, reach + 0.3]))).max()) > 1e-18:
         reach += 1.0
     count = 32

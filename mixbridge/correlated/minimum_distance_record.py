@@ -59,6 +59,7 @@ SHOWN = {
 }
 """Columns of the coefficients that are printed, and their headings."""
 MOST = 90
+"""Coefficients printed at most; the table holds all of them."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -173,7 +174,7 @@ class MinimumDistance(Printed):
         )
         lines = wrapped([head])
         for found in self.distances:
-            lines += [f"  {line}" for line in wrapped([f"{found.weights}: {found.status}"])]
+            lines += wrapped([f"{found.weights}: {found.status}"], "  ", "    ")
         estimated = [found.weights for found in self.distances if found.estimated]
         slopes = self.coefficients.rename(columns=SHOWN)[list(SHOWN.values())]
         slopes = slopes[~slopes["term"].isin(self.form.apart) & slopes["weights"].isin(estimated)]

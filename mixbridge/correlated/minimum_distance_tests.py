@@ -26,6 +26,8 @@ MEANING: Mapping[str, str] = {
     "no correlation": "the unit effect is unrelated to the covariates of all periods",
     "equal over periods": "coefficients of the projection do not differ by period: unit means suffice (Mundlak 1978)",
 }
+SINGULAR = 1e-12
+"""Smallest over largest eigenvalue of a correlation matrix below which it is singular: about four digits are left."""
 HEADER = [
     "tested",
     "weights",
@@ -105,7 +107,7 @@ def _wald(found: Distance, matrix: FloatArray) -> tuple[float, int, float, float
     if not (length > 0.0).all():
         return *nothing, "not estimable: some standard error is zero"
     values, vectors = np.linalg.eigh(spread / np.outer(length, length))
-    if values[0] < 1e-12 * values[-1]:
+    if values[0] < SINGULAR * values[-1]:
         return *nothing, "not estimable: the covariance of the restrictions is singular"
     statistic = float(((vectors.T @ (gap / length)) ** 2 / values).sum())
     few = statistic / found.inflation * (d - k + 1) / (d * k)

@@ -35,7 +35,7 @@ EPS = float(np.finfo(float).eps)
 WHAT = "minimum distance on the reduced form"
 UNITS_AT_ONCE = 1024
 LARGEST = 4_000
-"""Rows of the largest square matrix that is formed: 128 MB, and about a minute."""
+"""Rows of the largest square matrix that is formed: 128 MB."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from mixbridge.correlated.augment import Augmented
 from mixbridge.display import Printed
-from mixbridge.display.text import wrapped
+from mixbridge.display.text import by_reason, wrapped
 from mixbridge.moments import Moments, noise
 from mixbridge.ratio import Curve
 from mixbridge.routes import fit_route
@@ -88,10 +88,7 @@ class SlopeCertificate(Printed):
         lines = [f"{head}: {found}. This checks the arithmetic, not the model."]
         if not self.holds:
             lines.append(f"Cause: {self.cause}")
-        apart: dict[str, list[str]] = {}
-        for name, reason in self.not_compared:
-            apart.setdefault(reason, []).append(name)
-        return lines + [f"Not compared: {', '.join(names)}: {reason}." for reason, names in apart.items()]
+        return lines + [f"Not compared: {text}" for text in by_reason(self.not_compared)]
 
     def __str__(self) -> str:
         """Return the certificate in words."""

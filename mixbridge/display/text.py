@@ -11,6 +11,7 @@ import pandas as pd
 
 __all__ = [
     "WIDTH",
+    "by_reason",
     "columns",
     "frame_lines",
     "interval",
@@ -147,16 +148,16 @@ def _cell(value: object, widest: int) -> str:
 
 
 def sentence(text: str) -> str:
-    """Return a text with a full stop, and with a capital unless it begins with a name in code.
+    """Return a sentence with a full stop, and with a capital unless it begins with a key of the program.
 
     Examples
     --------
     >>> sentence("few units"), sentence("first_difference is left out")
     ('Few units.', 'first_difference is left out.')
     """
-    first = text.partition(" ")[0]
-    head = text[:1] if "_" in first else text[:1].upper()
-    return head + text[1:] + ("" if text.endswith((".", "!", "?")) else ".")
+    end = "" if text.endswith((".", "!", "?", ":")) else "."
+    key = "_" in text.split(" ", 1)[0]
+    return f"{text if key else text[:1].upper() + text[1:]}{end}"
 
 
 def wrapped(texts: Iterable[str], first: str = "", rest: str = "") -> list[str]:
@@ -173,10 +174,24 @@ def wrapped(texts: Iterable[str], first: str = "", rest: str = "") -> list[str]:
         for text in texts
         for line in wrap(
             text,
-            WIDTH - 2,
+            WIDTH,
             initial_indent=first,
             subsequent_indent=rest,
             break_long_words=False,
             break_on_hyphens=False,
         )
     ]
+
+
+def by_reason(pairs: Iterable[tuple[str, str]]) -> list[str]:
+    """Return ``names: reason.`` for every reason once, from pairs of name and reason.
+
+    Examples
+    --------
+    >>> by_reason([("age", "does not vary"), ("x", "no mean"), ("sex", "does not vary")])
+    ['age, sex: does not vary.', 'x: no mean.']
+    """
+    found: dict[str, list[str]] = {}
+    for name, reason in pairs:
+        found.setdefault(reason, []).append(name)
+    return [f"{', '.join(names)}: {reason}." for reason, names in found.items()]

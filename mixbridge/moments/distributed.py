@@ -26,12 +26,12 @@ from mixbridge.moments.parted import (
     Sorting,
     add_within,
     bucket_piece,
-    bucket_whole,
     grown_of,
     merge_pieces,
     sort_units,
     take_part,
     within_of,
+    without_pairs,
 )
 from mixbridge.moments.parted_closing import (
     Frame,
@@ -148,7 +148,7 @@ def distributed_moments(source: DaskSource, rows: PartedRows, looks: Looks) -> D
     ]
     merged = partial(merge_pieces, keys)
     buckets = [
-        delayed(bucket_whole)(tree(merged, [delayed(bucket_piece, number)(each) for each in taken]))
+        delayed(without_pairs)(tree(merged, [delayed(bucket_piece, number)(each) for each in taken]))
         for number in range(sorting.buckets)
     ]
     within = tree(add_within, [delayed(within_of)(each) for each in taken])

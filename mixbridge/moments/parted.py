@@ -30,7 +30,6 @@ from mixbridge.panel.parted import Taught, changed
 from mixbridge.panel.streaming_values import Distinct
 
 __all__ = [
-    "Bucket",
     "Errand",
     "Part",
     "Piece",
@@ -41,13 +40,13 @@ __all__ = [
     "add_within",
     "bucket_of",
     "bucket_piece",
-    "bucket_whole",
     "grown_of",
     "merge_pieces",
     "sort_units",
     "split_by",
     "take_part",
     "within_of",
+    "without_pairs",
 ]
 
 FloatArray = NDArray[np.float64]
@@ -132,7 +131,7 @@ class Piece:
 
     units: Units
     extra: FloatArray
-    pairs: pd.DataFrame | None
+    pairs: pd.DataFrame | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -141,14 +140,6 @@ class Taken:
 
     within: Within
     pieces: tuple[Piece, ...]
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Bucket:
-    """The units of one bucket, and what the parts of split units add to W."""
-
-    units: Units
-    extra: FloatArray
 
 
 def bucket_of(keys: pd.Series[Any], sorting: Sorting) -> IntArray:
@@ -254,9 +245,9 @@ def bucket_piece(number: int, taken: Taken) -> Piece:
     return taken.pieces[number]
 
 
-def bucket_whole(piece: Piece) -> Bucket:
-    """Return the bucket, when all its pieces are in one."""
-    return Bucket(piece.units, piece.extra)
+def without_pairs(piece: Piece) -> Piece:
+    """Return a bucket, all whose pieces are in one, without the periods that were looked at."""
+    return Piece(piece.units, piece.extra)
 
 
 def within_of(taken: Taken) -> Within:

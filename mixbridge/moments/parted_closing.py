@@ -21,7 +21,7 @@ from mixbridge.moments.factors import (
     stack_factors,
 )
 from mixbridge.moments.opened import Block, OpenMoments, within_factor
-from mixbridge.moments.parted import Bucket, Errand, Part, Within, bucket_of, split_by
+from mixbridge.moments.parted import Errand, Part, Piece, Within, bucket_of, split_by
 from mixbridge.panel.parted import changed, read_rows
 from mixbridge.panel.streaming_values import Distinct
 
@@ -97,7 +97,7 @@ class Classes:
     between: FloatArray
 
 
-def summarise(bucket: Bucket) -> Summary | None:
+def summarise(bucket: Piece) -> Summary | None:
     """Say of a bucket what the others need to know; None if it is empty."""
     units = bucket.units
     if not len(units.counts):
@@ -181,7 +181,7 @@ def settle(errand: Errand, names: tuple[str, ...], within: Within, summaries: li
     )
 
 
-def close_bucket(frame: Frame, bucket: Bucket) -> Classes:
+def close_bucket(frame: Frame, bucket: Piece) -> Classes:
     """Gather the means of a bucket by unit size, as `mixbridge.moments.close` does."""
     k = frame.keep.size + 1
     counts, means = bucket.units.counts, bucket.units.means
@@ -266,7 +266,7 @@ def keys_of_part(errand: Errand, part: Part, frame: object) -> tuple[pd.Series[A
     return tuple(keys.iloc[chosen] for chosen in np.split(order, cuts))
 
 
-def means_of(number: int, keys: tuple[pd.Series[Any], ...], bucket: Bucket) -> FloatArray:
+def means_of(number: int, keys: tuple[pd.Series[Any], ...], bucket: Piece) -> FloatArray:
     """Return the means of the units that a part has in one bucket."""
     places = pd.Index(bucket.units.keys).get_indexer(pd.Index(keys[number]))
     means: FloatArray = np.take(bucket.units.means, places, axis=0)

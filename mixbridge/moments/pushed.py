@@ -25,7 +25,7 @@ from mixbridge.errors import DataError
 from mixbridge.moments.closed import Moments, close
 from mixbridge.moments.factors import factor_from_products, stack_factors
 from mixbridge.moments.opened import OpenMoments, _loss, _refuse_non_finite
-from mixbridge.moments.parted import Bucket, Units, Within
+from mixbridge.moments.parted import Piece, Units, Within
 from mixbridge.moments.parted_closing import Classes, Frame, close_bucket, finish, pool_classes
 from mixbridge.panel.keys import encode, whole_numbers
 from mixbridge.panel.pushed_query import Query, columns_of, fetched_keys, key_sql
@@ -244,7 +244,7 @@ def _frame(query: Query, spread: FloatArray) -> Frame:
 def _folded(frame: Frame, classes: Classes | None, batch: _Units) -> Classes:
     """Add a batch of units to the size classes."""
     units = Units(batch.keys, batch.counts, batch.means)
-    fresh = close_bucket(frame, Bucket(units, np.zeros_like(frame.within.products)))
+    fresh = close_bucket(frame, Piece(units, np.zeros_like(frame.within.products)))
     return fresh if classes is None else pool_classes([classes, fresh])
 
 

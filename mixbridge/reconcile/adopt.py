@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import textwrap
 from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any, Generic, Protocol, TypeVar
@@ -12,6 +11,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from mixbridge.display import Printed
+from mixbridge.display.text import wrapped
 from mixbridge.errors import IdentificationError, MixbridgeError, OptionError
 from mixbridge.reconcile.adopt_check import (
     DIFFERS,
@@ -32,7 +32,6 @@ from mixbridge.routes import Fit
 __all__ = ["Adopted", "adopt_result"]
 
 FloatArray = NDArray[np.float64]
-WIDTH = 100
 WORSE = 1e-3
 """Deviance above the certified optimum from which a fit counts as stuck."""
 
@@ -148,9 +147,7 @@ class Adopted(Printed, Generic[StudyT]):
             f"Identities on these rows: {int(table.get('holds', 0))} hold, {int(table.get('FAILS', 0))} fail. "
             "They check the arithmetic, not the model."
         )
-        return "\n".join(
-            piece for line in lines for piece in textwrap.wrap(line, WIDTH, subsequent_indent="  ")
-        )
+        return "\n".join(wrapped(lines, rest="  "))
 
     def __repr__(self) -> str:
         """Return a one-line form."""

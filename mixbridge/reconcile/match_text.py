@@ -2,17 +2,16 @@
 
 from __future__ import annotations
 
-import textwrap
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 
 import numpy as np
 
+from mixbridge.display.text import WIDTH, columns, wrapped
 from mixbridge.reconcile.match_parts import Candidate
 from mixbridge.reconcile.match_record import MatchRecord
 
 __all__ = ["MATCH_LIMIT", "match_screen"]
 
-WIDTH = 100
 MATCH_LIMIT = (
     "A match shows compatibility: these figures can come from this route on these rows. It does not show that "
     "they did, nor what anybody meant by them; where none matches, other rows, another model or a slip of copying "
@@ -76,7 +75,10 @@ def _candidates(record: MatchRecord) -> list[str]:
                 _off(first.units_off),
             )
         )
-    lines = ["Candidates; the distance is in units of the last printed digit", *_table(rows)]
+    lines = [
+        "Candidates; the distance is in units of the last printed digit",
+        *(line[:WIDTH] for line in columns(rows)),
+    ]
     if len(shown) > SHOWN:
         lines.append(f"  and {len(shown) - SHOWN} more in table()")
     for name in dict.fromkeys(
@@ -242,17 +244,4 @@ def _cut(text: str, width: int) -> str:
 
 
 def _wrapped(text: str, indent: str = "") -> list[str]:
-    return textwrap.wrap(
-        text, WIDTH, initial_indent=indent, subsequent_indent=indent + "  ", break_long_words=True
-    )
-
-
-def _table(rows: Sequence[Sequence[str]]) -> list[str]:
-    widths = [max(len(row[j]) for row in rows) for j in range(len(rows[0]))]
-    return list(_lines(rows, widths))
-
-
-def _lines(rows: Sequence[Sequence[str]], widths: Sequence[int]) -> Iterator[str]:
-    for row in rows:
-        cells = [cell.ljust(width) for cell, width in zip(row, widths, strict=True)]
-        yield ("  " + "  ".join(cells)).rstrip()[:WIDTH]
+    return wrapped([text], indent, f"{indent}  ")

@@ -5,11 +5,12 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+from mixbridge.display.text import sentence
 from mixbridge.report.estimators import estimator_of
 from mixbridge.report.sections.agreement import agreement_sentence
 from mixbridge.report.sections.assumptions import exogeneity_sentence
 from mixbridge.report.sections.model import named_model
-from mixbridge.report.words import Words, capital, count, listed, num, words_for
+from mixbridge.report.words import Words, count, listed, num, words_for
 from mixbridge.routes import REFERENCE_ROUTES
 
 __all__ = ["methods_paragraph", "paragraph_of"]
@@ -41,7 +42,7 @@ def paragraph_of(record: Record, words: Words) -> str:
         _components(record, words),
         agreement_sentence(record),
         exogeneity_sentence(record, words),
-        None if record["added"] is None else capital(record["added"]["statement"]),
+        None if record["added"] is None else sentence(record["added"]["statement"]),
         f"Computed with mixbridge {record['software']['mixbridge']}.",
     ]
     return " ".join(text for text in found if text)

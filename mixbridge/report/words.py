@@ -9,7 +9,7 @@ from typing import Any
 from mixbridge.display.text import number
 from mixbridge.errors import OptionError
 
-__all__ = ["AUDIENCES", "VOCABULARY", "Words", "capital", "count", "listed", "num", "said_p", "words_for"]
+__all__ = ["AUDIENCES", "VOCABULARY", "Words", "count", "listed", "num", "said_p", "words_for"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -139,10 +139,3 @@ def listed(names: list[str]) -> str:
     if len(names) < 2:
         return "".join(names)
     return f"{', '.join(names[:-1])} and {names[-1]}"
-
-
-def capital(text: str) -> str:
-    """Return a sentence with a full stop, and with a capital unless it begins with a key of the program."""
-    end = "" if text.endswith((".", "!", "?", ":")) else "."
-    key = "_" in text.split(" ", 1)[0]
-    return f"{text if key else text[:1].upper() + text[1:]}{end}"

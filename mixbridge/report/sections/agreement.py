@@ -5,10 +5,11 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+from mixbridge.display.text import sentence
 from mixbridge.reconcile.agreement import Thresholds
 from mixbridge.report.document import Block, Bullets, Heading, Paragraph
 from mixbridge.report.sections.cells import table_of
-from mixbridge.report.words import Words, capital, count, listed, num
+from mixbridge.report.words import Words, count, listed, num
 from mixbridge.routes import REFERENCE_ROUTES
 
 __all__ = ["agreement_section", "agreement_sentence", "attribution_section"]
@@ -99,7 +100,7 @@ def attribution_section(record: Record, words: Words) -> tuple[Block, ...]:
     found = record["attributions"]
     blocks: list[Block] = [Heading("Where the gaps come from")]
     if found["status"] != "computed":
-        return (*blocks, Paragraph(capital(found["status"])))
+        return (*blocks, Paragraph(sentence(found["status"])))
     rows = found["rows"]
     if not rows:
         if not record["summary"]["other_routes"]:

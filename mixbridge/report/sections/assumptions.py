@@ -5,10 +5,11 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from typing import Any
 
+from mixbridge.display.text import sentence
 from mixbridge.report.contrast import contrast_row
 from mixbridge.report.document import Block, Heading, Paragraph
 from mixbridge.report.sections.cells import table_of
-from mixbridge.report.words import Words, capital, count, num, said_p
+from mixbridge.report.words import Words, count, num, said_p
 
 __all__ = ["exogeneity_section", "exogeneity_sentence", "zero_section"]
 
@@ -28,7 +29,7 @@ def zero_section(record: Record, words: Words) -> tuple[Block, ...]:
     found = record["variance_tests"]
     blocks: list[Block] = [Heading("Is the unit variance zero?")]
     if found["status"] != "computed":
-        return (*blocks, Paragraph(capital(found["status"])))
+        return (*blocks, Paragraph(sentence(found["status"])))
     columns = {
         "test": "test",
         "statistic": "statistic",
@@ -43,7 +44,7 @@ def zero_section(record: Record, words: Words) -> tuple[Block, ...]:
     notes = list(_notes(found["rows"]))
     sources = [text for key, text in _SOURCES if key in known]
     if sources:
-        notes.append(capital("; ".join(sources)))
+        notes.append(sentence("; ".join(sources)))
     return (
         *blocks,
         table_of("zero-tests", "Tests of σ_α² = 0.", found["rows"], columns, notes=tuple(notes)),
@@ -56,7 +57,7 @@ def _notes(rows: list[Mapping[str, Any]]) -> Iterator[str]:
         names = dict.fromkeys(
             f"{row['test'].replace('_', ' ')} ({row['reference']})" for row in rows if row["note"] == note
         )
-        yield f"{capital(', '.join(names))[:-1]}: {note}."
+        yield f"{sentence(', '.join(names))[:-1]}: {note}."
 
 
 def exogeneity_sentence(record: Record, words: Words) -> str | None:
@@ -75,9 +76,9 @@ def exogeneity_sentence(record: Record, words: Words) -> str | None:
 def exogeneity_section(record: Record, words: Words) -> tuple[Block, ...]:
     """Return the position of the primary route, contrasts, and within, between and contextual coefficients."""
     blocks: list[Block] = [Heading("Unit effects and covariates"), Paragraph(_position(record, words))]
-    sentence = exogeneity_sentence(record, words)
-    if sentence is not None:
-        blocks.append(Paragraph(sentence))
+    said = exogeneity_sentence(record, words)
+    if said is not None:
+        blocks.append(Paragraph(said))
     contrasts = record["contrasts"]
     if contrasts["status"] == "computed":
         rows = [*contrasts["rows"], *record["contrasts_robust"].get("rows", [])]
@@ -109,10 +110,10 @@ def exogeneity_section(record: Record, words: Words) -> tuple[Block, ...]:
         )
         if record["contrasts_robust"]["status"] != "computed":
             blocks.append(
-                Paragraph(capital(f"cluster-robust contrasts: {record['contrasts_robust']['status']}"))
+                Paragraph(sentence(f"cluster-robust contrasts: {record['contrasts_robust']['status']}"))
             )
     else:
-        blocks.append(Paragraph(capital(f"contrasts: {contrasts['status']}")))
+        blocks.append(Paragraph(sentence(f"contrasts: {contrasts['status']}")))
     return (*blocks, *_unit_means(record), *_projection(record))
 
 
@@ -149,7 +150,7 @@ def _no_contrast(record: Record) -> str:
 def _unit_means(record: Record) -> list[Block]:
     means = record["unit_means"]
     if means["status"] != "computed":
-        return [] if record["added"] is not None else [Paragraph(capital(f"unit means: {means['status']}"))]
+        return [] if record["added"] is not None else [Paragraph(sentence(f"unit means: {means['status']}"))]
     blocks: list[Block] = []
     if record["added"] is None:
         source = "Adding unit means to the model (Mundlak 1978; unequal sizes: Wooldridge 2019). "
@@ -194,7 +195,7 @@ def _projection(record: Record) -> list[Block]:
         return (
             []
             if record["added"] is None or record["unit_means"]["status"] == "computed"
-            else [Paragraph(capital(f"tests of the projection: {found['status']}"))]
+            else [Paragraph(sentence(f"tests of the projection: {found['status']}"))]
         )
     rows = found["tests"]
     headings = {key: key.replace("_", " ") for key in rows[0]} if rows else {}

@@ -5,9 +5,10 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+from mixbridge.display.text import sentence
 from mixbridge.report.document import Block, Bullets, Heading, Paragraph
 from mixbridge.report.sections.cells import table_of
-from mixbridge.report.words import Words, capital
+from mixbridge.report.words import Words
 
 __all__ = ["audit_section"]
 
@@ -19,7 +20,7 @@ def audit_section(record: Record, words: Words) -> tuple[Block, ...]:
     found = record["audit"]
     blocks: list[Block] = [Heading("Assumptions that all routes share")]
     if found["status"] != "computed":
-        return (*blocks, Paragraph(capital(found["status"])))
+        return (*blocks, Paragraph(sentence(found["status"])))
     blocks += [Paragraph(text) for text in found["header"]]
     done: dict[str, list[Mapping[str, Any]]] = {}
     left = []
@@ -38,15 +39,15 @@ def audit_section(record: Record, words: Words) -> tuple[Block, ...]:
         "conclusion": "what may be concluded",
     }
     for number, (assumption, rows) in enumerate(done.items(), 1):
-        blocks.append(Heading(capital(assumption).rstrip("."), 2))
+        blocks.append(Heading(sentence(assumption).rstrip("."), 2))
         blocks.append(table_of(f"audit-{number}", f"Evidence: {assumption}.", rows, columns, digits=3))
-        effects = tuple(dict.fromkeys(capital(row["consequence"]) for row in rows if row["consequence"]))
+        effects = tuple(dict.fromkeys(sentence(row["consequence"]) for row in rows if row["consequence"]))
         if effects:
             blocks += [Paragraph("What a departure would do:"), Bullets(effects)]
     if left:
         blocks.append(Heading("Not assessed", 2))
     for why in dict.fromkeys(row["why"] for row in left):
         rows = [row for row in left if row["why"] == why]
-        blocks.append(Paragraph(f"{capital(why)} So there is nothing, neither for nor against, from:"))
+        blocks.append(Paragraph(f"{sentence(why)} So there is nothing, neither for nor against, from:"))
         blocks.append(Bullets(tuple(f"{row['assumption']}: {row['evidence']}" for row in rows)))
     return tuple(blocks)

@@ -5,9 +5,10 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+from mixbridge.display.text import sentence
 from mixbridge.report.document import Block, Heading, Paragraph, Table
 from mixbridge.report.sections.cells import table_of
-from mixbridge.report.words import Words, capital, num
+from mixbridge.report.words import Words, num
 from mixbridge.routes import REFERENCE_ROUTES
 
 __all__ = ["coefficient_section", "coefficient_text", "component_section", "component_text"]
@@ -73,14 +74,14 @@ def coefficient_section(record: Record, words: Words) -> tuple[Block, ...]:
         return tuple(blocks)
     other = record["robust"]
     if other["status"] != "computed":
-        blocks.append(Paragraph(capital(f"{words.robust}: {other['status']}")))
+        blocks.append(Paragraph(sentence(f"{words.robust}: {other['status']}")))
         return tuple(blocks)
     source = "Liang & Zeger 1986; Arellano 1987" if other["route"] == "within" else "Liang & Zeger 1986"
     notes = [
         f"{other['covariance']}: sums of score products of units ({source}); reference t with N − 1 degrees "
         "of freedom. "
         "With few units such standard errors tend to be too small.",
-        *(capital(note) for note in other["notes"]),
+        *(sentence(note) for note in other["notes"]),
     ]
     blocks.append(
         table_of(
@@ -145,7 +146,7 @@ def component_section(record: Record, words: Words) -> tuple[Block, ...]:
         }
         caption = f"Intervals for the components, {_level(record)}%."
         used = {str(row["method"]) for row in rows}
-        note = capital("; ".join(text for key, text in _METHODS.items() if key in used))
+        note = sentence("; ".join(text for key, text in _METHODS.items() if key in used))
         blocks.append(table_of("component-intervals", caption, rows, columns, notes=(note,)))
     columns = {
         "route": "route",

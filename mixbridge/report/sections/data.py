@@ -5,9 +5,10 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+from mixbridge.display.text import sentence
 from mixbridge.report.document import Block, Heading, Paragraph
 from mixbridge.report.sections.cells import table_of
-from mixbridge.report.words import Words, capital, count
+from mixbridge.report.words import Words, count
 
 __all__ = ["data_section", "rows_text"]
 
@@ -28,7 +29,7 @@ def rows_text(record: Record) -> str:
         middle = f"{account['median_size']:g}"
         text += f"The panel is unbalanced: units have {sizes[0]} to {sizes[-1]} rows, median {middle}."
     if one and len(sizes) > 1:
-        text += f" {capital(count(one, 'unit'))[:-1]} {'has' if one == 1 else 'have'} one row."
+        text += f" {sentence(count(one, 'unit'))[:-1]} {'has' if one == 1 else 'have'} one row."
     return text
 
 
@@ -55,7 +56,7 @@ def data_section(record: Record, words: Words) -> tuple[Block, ...]:
         columns = {"column": "column", "rows": "missing"}
         blocks.append(table_of("missing", "Missing values by column, over all rows given.", missing, columns))
     if record["source"]:
-        blocks.append(Paragraph(capital(f"source of the rows: {record['source']}")))
+        blocks.append(Paragraph(sentence(f"source of the rows: {record['source']}")))
     blocks += [Paragraph(f"Note: {note}.") for note in account["notes"]]
     ranks = record["ranks"]
     blocks.append(

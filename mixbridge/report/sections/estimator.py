@@ -5,10 +5,11 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+from mixbridge.display.text import sentence
 from mixbridge.report.document import Block, Formula, Heading, Paragraph, Table
 from mixbridge.report.estimators import estimator_of
 from mixbridge.report.sections.cells import table_of
-from mixbridge.report.words import Words, capital, num
+from mixbridge.report.words import Words, num
 from mixbridge.routes import REFERENCE_ROUTES, named_route
 
 __all__ = ["chosen_text", "estimator_section", "estimator_text", "routes_table"]
@@ -79,7 +80,7 @@ def estimator_text(record: Record, words: Words, chosen_beforehand: bool | None)
             "unit's own data in its predicted effect"
         )
     if where:
-        blocks.append(Paragraph(capital(f"here {'; '.join(where)}")))
+        blocks.append(Paragraph(sentence(f"here {'; '.join(where)}")))
     blocks += [Paragraph(text) for text in (_truncation(record), _conventions(record), _status(fit)) if text]
     blocks += [Paragraph(f"Note: {note}.") for note in fit["notes"] if "unit_variance_raw" not in note]
     return tuple(blocks)

@@ -5,9 +5,10 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+from mixbridge.display.text import sentence
 from mixbridge.report.document import Block, Formula, Heading, Paragraph, Table
 from mixbridge.report.sections.cells import table_of
-from mixbridge.report.words import VOCABULARY, Words, capital
+from mixbridge.report.words import VOCABULARY, Words
 from mixbridge.routes import REFERENCE_ROUTES
 
 __all__ = ["model_section", "model_text", "named_model", "vocabulary_section"]
@@ -43,7 +44,7 @@ def model_text(record: Record, words: Words) -> tuple[Block, ...]:
     blocks: list[Block] = [
         Heading("Model"),
         Paragraph(
-            f"{capital(model)[:-1]} was fitted for {record['moments']['outcome']}, with one {effect} per "
+            f"{sentence(model)[:-1]} was fitted for {record['moments']['outcome']}, with one {effect} per "
             f"{record['unit']}; i counts units and t {rows} within them. Fixed part: {record['formula']}."
         ),
         Formula(
@@ -57,7 +58,7 @@ def model_text(record: Record, words: Words) -> tuple[Block, ...]:
         ),
     ]
     if record["added"] is not None:
-        blocks.append(Paragraph(capital(record["added"]["statement"])))
+        blocks.append(Paragraph(sentence(record["added"]["statement"])))
     return tuple(blocks)
 
 

@@ -5,10 +5,11 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+from mixbridge.display.text import sentence
 from mixbridge.reconcile.cautions import IDENTITIES_HEADING, IDENTITIES_LIMIT
 from mixbridge.report.document import Block, Bullets, Formula, Heading, Paragraph
 from mixbridge.report.sections.cells import table_of
-from mixbridge.report.words import Words, capital
+from mixbridge.report.words import Words
 
 __all__ = ["identity_section", "optimum_section"]
 
@@ -50,10 +51,10 @@ def optimum_section(record: Record, words: Words) -> tuple[Block, ...]:
             )
         )
     else:
-        blocks.append(Paragraph(capital(f"likelihoods: {found['status']}")))
+        blocks.append(Paragraph(sentence(f"likelihoods: {found['status']}")))
     for key, fit in record["fits"].items():
         if fit["certificate"] is not None:
-            statements = tuple(capital(text) for text in fit["certificate"]["statements"])
+            statements = tuple(sentence(text) for text in fit["certificate"]["statements"])
             blocks += [
                 Paragraph(f"What bounds the optimum of {key}, in floating point:"),
                 Bullets(statements),

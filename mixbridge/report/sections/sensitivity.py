@@ -5,9 +5,10 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+from mixbridge.display.text import sentence
 from mixbridge.report.document import Block, Heading, Paragraph
 from mixbridge.report.sections.cells import table_of
-from mixbridge.report.words import Words, capital, count, num
+from mixbridge.report.words import Words, count, num
 
 __all__ = ["sensitivity_section"]
 
@@ -23,7 +24,7 @@ def sensitivity_section(record: Record, words: Words) -> tuple[Block, ...]:
 def _paths(record: Record) -> list[Block]:
     found = record["paths"]
     if found["status"] != "computed":
-        return [Paragraph(capital(f"path over the variance ratio: {found['status']}"))]
+        return [Paragraph(sentence(f"path over the variance ratio: {found['status']}"))]
     rows = [{**row, "changes": "; ".join(map(_change, row["changes_of_sign"]))} for row in found["rows"]]
     columns = {
         "term": "term",
@@ -55,7 +56,7 @@ def _without_singletons(record: Record) -> list[Block]:
     if not record["accounting"]["one_row_units"]:
         return []
     if found["status"] != "computed":
-        return [Paragraph(capital(f"without one-row units: {found['status']}"))]
+        return [Paragraph(sentence(f"without one-row units: {found['status']}"))]
     columns = {"term": "term", "estimate": "estimate", "moved_in_se": "moved (se of primary)"}
     units = count(found["units"], "unit")
     ratio = "" if found["ratio"] in (None, "inf") else f"; ratio ψ = {num(found['ratio'])}"
@@ -66,12 +67,12 @@ def _without_singletons(record: Record) -> list[Block]:
 def _influence(record: Record) -> list[Block]:
     found = record["influence"]
     if found["status"] != "computed":
-        return [Paragraph(capital(f"without each unit in turn: {found['status']}"))]
+        return [Paragraph(sentence(f"without each unit in turn: {found['status']}"))]
     columns = {
         "term": "term",
         "largest_in_se": "largest move (se of primary)",
         "sign_changes": "units whose deletion changes the answer against zero",
     }
     caption = f"{found['route']} without each of {count(found['units'], 'unit')} in turn."
-    notes = tuple(capital(note) for note in found["notes"])
+    notes = tuple(sentence(note) for note in found["notes"])
     return [table_of("influence", caption, found["rows"], columns, notes=notes)]
